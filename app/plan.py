@@ -1,0 +1,180 @@
+"""The plan of a sheet: its points, in chunks that are solved one after another in one process.
+
+The plan depends on the sheet alone, never on the machine: a chunk starts cold and its points help each
+other in order, so the same plan gives the same numbers to the last bit wherever it runs.
+"""
+
+from dataclasses import dataclass
+
+from app.errors import PriceError
+from app.keys import number_text
+from app.sheets import Sheet, critical_coupling
+from solver import CollectiveModel, PointQuestion, predicted_bytes, predicted_seconds
+
+COARSE_STEP = 8
+FIRST_CHUNK_SECONDS = 0.25
+CHUNK_SECONDS = 0.4
+MOST_POINTS_IN_CHUNK = 64
+
+
+@dataclass(frozen=True)
+class Curve:
+    """One curve of a sheet: the value of `each` (None without a family) and the values along the axis."""
+
+    name: str | None
+    value: float | None
+    axis: tuple[float, ...]
+
+
+@dataclass(frozen=True)
+class Chunk:
+    """Points solved in one go, by their numbers in the plan, and their predicted processor time in seconds."""
+
+    number: int
+    points: tuple[int, ...]
+    seconds: float
+
+
+@dataclass(frozen=True)
+class Plan:
+    """What has to be computed for a sheet.
+
+    `questions` holds curve after curve, each in the order of the axis; `chunks` are in the order in which
+    they should run, coarse ones first. `seconds` is the predicted processor time, `peak_bytes` the
+    predicted memory of the largest point.
+    """
+
+    curves: tuple[Curve, ...]
+    questions: tuple[PointQuestion, ...]
+    chunks: tuple[Chunk, ...]
+    seconds: float
+    peak_bytes: int
+
+    def chunk_questions(self, chunk: Chunk) -> tuple[PointQuestion, ...]:
+        """Return the questions of a chunk in the order in which they are solved."""
+        return tuple(self.questions[point] for point in chunk.points)
+
+
+def axis_values(sheet: Sheet) -> tuple[float, ...]:
+    """Return the values along the axis, both ends exact, whole numbers for spins."""
+    last = sheet.points - 1
+    if sheet.along == "spins":
+        low, high = int(sheet.start), int(sheet.stop)
+        return tuple((low * (last - i) + high * i + last // 2) // last for i in range(sheet.points))
+    inner = tuple((sheet.start * (last - i) + sheet.stop * i) / last for i in range(1, last))
+    return (sheet.start, *inner, sheet.stop)
+
+
+def model_at(sheet: Sheet, x: float, family_value: float | None = None) -> CollectiveModel:
+    """Return the model at the value `x` of the axis and one value of the family."""
+    values: dict[str, float | None] = {
+        name: getattr(sheet, name) for name in ("spins", "mode", "splitting", "detuning", "coupling", "ratio", "bias")
+    }
+    settings = [(sheet.along, x)]
+    if sheet.each is not None and family_value is not None:
+        settings.insert(0, (sheet.each.name, family_value))
+    for name, value in settings:
+        if name == "splitting":
+            values["detuning"] = None
+        values[name] = value
+    mode, ratio = values["mode"] or sheet.mode, values["ratio"] or 0.0
+    detuning = values["detuning"]
+    splitting = mode + detuning if detuning is not None else values["splitting"] or 0.0
+    coupling = values["coupling"] or 0.0
+    multiple = values.get("coupling-over-critical")
+    if multiple is not None:
+        coupling = multiple * critical_coupling(mode, splitting, ratio)
+    return CollectiveModel(
+        spins=int(values["spins"] or 1),
+        mode=mode,
+        splitting=splitting,
+        rotating=coupling,
+        counter=ratio * coupling,
+        bias=values["bias"] or 0.0,
+    )
+
+
+def question_at(sheet: Sheet, x: float, family_value: float | None = None) -> PointQuestion:
+    """Return what is asked at one point."""
+    return PointQuestion(
+        model=model_at(sheet, x, family_value),
+        levels=sheet.levels,
+        tolerance=sheet.tol,
+        need=sheet.need,
+        tail=sheet.tail,
+    )
+
+
+def curves(sheet: Sheet) -> tuple[Curve, ...]:
+    """Return the curves of a sheet."""
+    axis = axis_values(sheet)
+    if sheet.each is None:
+        return (Curve(None, None, axis),)
+    return tuple(Curve(sheet.each.name, value, axis) for value in sheet.each.values)
+
+
+def make(sheet: Sheet) -> Plan:
+    """Return the plan of a sheet."""
+    drawn = curves(sheet)
+    questions = tuple(question_at(sheet, x, curve.value) for curve in drawn for x in curve.axis)
+    prices = [predicted_seconds(question) for question in questions]
+    coarse: list[list[int]] = []
+    fine: list[list[int]] = []
+    for number in range(len(drawn)):
+        first = number * sheet.points
+        last = first + sheet.points - 1
+        picked = sorted({*range(first, last + 1, COARSE_STEP), last})
+        others = sorted(set(range(first, last + 1)) - set(picked))
+        coarse += _cut(picked, prices, FIRST_CHUNK_SECONDS)
+        fine += _cut(others, prices, CHUNK_SECONDS)
+    chunks = tuple(
+        Chunk(number, tuple(points), sum(prices[point] for point in points))
+        for number, points in enumerate(coarse + fine)
+    )
+    return Plan(drawn, questions, chunks, sum(prices), max(predicted_bytes(question) for question in questions))
+
+
+def _cut(points: list[int], prices: list[float], most_seconds: float) -> list[list[int]]:
+    """Cut a run of points into pieces of similar price, two at least so that two processes can share them."""
+    if not points:
+        return []
+    total = sum(prices[point] for point in points)
+    pieces = max(2, round(total / most_seconds + 0.5), -(-len(points) // MOST_POINTS_IN_CHUNK))
+    share = total / pieces
+    cut: list[list[int]] = [[]]
+    spent = 0.0
+    for point in points:
+        full = spent >= share * len(cut) or len(cut[-1]) >= MOST_POINTS_IN_CHUNK
+        if cut[-1] and full:
+            cut.append([])
+        cut[-1].append(point)
+        spent += prices[point]
+    return cut
+
+
+def check_price(plan: Plan, price_ceiling: float, memory_ceiling: int) -> None:
+    """Raise PriceError when a plan costs more processor time or memory than the ceilings allow."""
+    if plan.peak_bytes > memory_ceiling:
+        largest = max(plan.questions, key=predicted_bytes)
+        raise PriceError(
+            "too-much-memory",
+            f"one point would take about {plan.peak_bytes / 1e9:.3g} GB of memory (at {largest.model.spins} spins, "
+            f"coupling {number_text(largest.model.rotating)}); ask for fewer spins, a smaller coupling or fewer levels",
+            "spins",
+            largest.model.spins,
+            f"at most {memory_ceiling / 1e9:.3g} GB for a point",
+        )
+    if plan.seconds > price_ceiling:
+        fitting = int(len(plan.questions) * price_ceiling / plan.seconds)
+        raise PriceError(
+            "too-expensive",
+            f"this would take about {_minutes(plan.seconds)} of processor time; ask for fewer points (about {fitting} "
+            "would fit), fewer spins, a smaller coupling or a larger 'tol'",
+            "points",
+            len(plan.questions),
+            f"at most {_minutes(price_ceiling)} of processor time for a sheet",
+        )
+
+
+def _minutes(seconds: float) -> str:
+    return f"{seconds:.3g} s" if seconds < 120.0 else f"{seconds / 60.0:.3g} min"
