@@ -54,7 +54,9 @@ def uncoupled_levels(model: CollectiveModel, count: int) -> list[float]:
     step = math.hypot(model.splitting, model.bias)
     lowest = -0.5 * model.spins * step
     rungs = min(count, model.spins + 1)
-    return heapq.nsmallest(count, (lowest + model.mode * n + step * k for n in range(count) for k in range(rungs)))
+    return heapq.nsmallest(
+        count, (lowest + model.mode * n + step * k for n in range(count) for k in range(rungs))
+    )
 
 
 def finite(value: Any) -> float | None:

@@ -111,7 +111,9 @@ class Key:
     def _check_text(self, value: str) -> None:
         if len(value) > self.high:
             raise self.error(
-                "too-long", f"'{self.name}' has {len(value)} characters; shorten it to {int(self.high)}", value
+                "too-long",
+                f"'{self.name}' has {len(value)} characters; shorten it to {int(self.high)}",
+                value,
             )
         if _CONTROL.search(value) or (self.name == "title" and "\n" in value):
             raise self.error("control-characters", f"'{self.name}' contains control characters", value)
@@ -159,7 +161,9 @@ class Key:
             raise self.error("bad-interval", f"'{self.name}' is two numbers", value)
         low, high = (Key(self.name, "real", None, "").checked(item) for item in value)
         if not low < high:
-            raise self.error("bad-interval", f"'{self.name}' is empty: its low end must be below its high end", value)
+            raise self.error(
+                "bad-interval", f"'{self.name}' is empty: its low end must be below its high end", value
+            )
         return [low, high]
 
 
@@ -216,7 +220,14 @@ _ORDERED = (
     Key("each", "family", None, "one curve for each value of a second quantity"),
     Key("levels", "integer", 6, "number of lowest levels over both parities", low=1, high=40),
     Key("tol", "real", 1e-9, "wanted bound on every level, in units of mode", low=1e-12, high=1e-2),
-    Key("need", "real", 1e-3, "level error your own calculation may have, in units of mode", low=1e-12, high=1.0),
+    Key(
+        "need",
+        "real",
+        1e-3,
+        "level error your own calculation may have, in units of mode",
+        low=1e-12,
+        high=1.0,
+    ),
     Key("tail", "real", 1e-4, "weight your own calculation may leave above its cutoff", low=1e-12, high=0.5),
     Key("unit", "choice", "none", "unit shown", choices=("none", "Hz", "kHz", "MHz"), view=True),
     Key("frame", "choice", "cavity", "symbols shown", choices=("cavity", "trap"), view=True),

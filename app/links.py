@@ -37,7 +37,9 @@ def split_query(query: str) -> dict[str, str]:
             )
         value = _decoded(raw_value, name)
         if name in pairs:
-            raise SheetError("repeated-key", f"'{name[:60]}' is given twice; keep one", name, value, "given once")
+            raise SheetError(
+                "repeated-key", f"'{name[:60]}' is given twice; keep one", name, value, "given once"
+            )
         pairs[name] = value
     return pairs
 
@@ -107,16 +109,21 @@ def needs_storing(query: str) -> bool:
     return len(whole(query)) > LONGEST_LINK
 
 
-def stored_name(query: str) -> str | None:
-    """Return the name of a stored link, or None when the query is an ordinary one."""
-    if not query.startswith(f"{STORED_KEY}="):
+def stored_name(query: str) -> tuple[str, str] | None:
+    """Return the name of a stored link and the rest of the query, or None for an ordinary query."""
+    pieces = query.split("&")
+    names = [piece.removeprefix(f"{STORED_KEY}=") for piece in pieces if piece.startswith(f"{STORED_KEY}=")]
+    if not names:
         return None
-    name = query.removeprefix(f"{STORED_KEY}=")
-    if not STORED_NAME.fullmatch(name):
+    if len(names) > 1 or not STORED_NAME.fullmatch(names[0]):
         raise SheetError(
-            "bad-stored-link", "the name of a short link has 32 digits", STORED_KEY, name, "32 digits 0-9, a-f"
+            "bad-stored-link",
+            "the name of a short link has 32 digits",
+            STORED_KEY,
+            names[0],
+            "32 digits 0-9, a-f, given once",
         )
-    return name
+    return names[0], "&".join(piece for piece in pieces if not piece.startswith(f"{STORED_KEY}="))
 
 
 def take(pairs: dict[str, str], name: str, key: Key) -> Any:
@@ -136,7 +143,9 @@ def from_form(fields: Mapping[str, Any]) -> Sheet:
     typed: dict[str, str] = {}
     for name, text in fields.items():
         if not isinstance(text, str):
-            raise SheetError("wrong-type", f"'{str(name)[:60]}' must be the text as typed", str(name), text, "text")
+            raise SheetError(
+                "wrong-type", f"'{str(name)[:60]}' must be the text as typed", str(name), text, "text"
+            )
         if text.strip() or (name in KEYS and KEYS[name].kind == "text" and text):
             typed[name] = text if name in KEYS and KEYS[name].kind == "text" else text.strip()
     form = typed.pop("coupling_as", "lambda")
@@ -170,7 +179,9 @@ def _with_point(name: str, text: str) -> str:
     text = text.replace("\u2212", "-")
     if text.count(",") + text.count(".") > 1:
         raise KEYS[name].error(
-            "ambiguous-number", f"'{name}' has several commas or points: use one decimal sign, no grouping", text
+            "ambiguous-number",
+            f"'{name}' has several commas or points: use one decimal sign, no grouping",
+            text,
         )
     return text.replace(",", ".")
 
@@ -180,14 +191,21 @@ def _decoded(raw: str, name: str) -> str:
     try:
         return unquote_to_bytes(raw.replace("+", " ")).decode("utf-8")
     except (UnicodeDecodeError, UnicodeEncodeError):
-        raise SheetError("not-utf-8", f"'{name[:60]}' is not UTF-8 text", name, raw, "UTF-8, percent-encoded") from None
+        raise SheetError(
+            "not-utf-8", f"'{name[:60]}' is not UTF-8 text", name, raw, "UTF-8, percent-encoded"
+        ) from None
 
 
 def check_length(query: str, most: int) -> None:
     """Raise RequestError when a query string is longer than the server reads."""
     if len(query) > most:
         raise RequestError(
-            "address-too-long", f"the address has {len(query)} characters", "query", len(query), most, status=414
+            "address-too-long",
+            f"the address has {len(query)} characters",
+            "query",
+            len(query),
+            most,
+            status=414,
         )
 
 

@@ -28,7 +28,7 @@ class Curve:
 
 @dataclass(frozen=True)
 class Chunk:
-    """Points solved in one go, by their numbers in the plan, and their predicted processor time in seconds."""
+    """Points solved in one go, by their numbers in the plan, and their predicted processor seconds."""
 
     number: int
     points: tuple[int, ...]
@@ -68,7 +68,8 @@ def axis_values(sheet: Sheet) -> tuple[float, ...]:
 def model_at(sheet: Sheet, x: float, family_value: float | None = None) -> CollectiveModel:
     """Return the model at the value `x` of the axis and one value of the family."""
     values: dict[str, float | None] = {
-        name: getattr(sheet, name) for name in ("spins", "mode", "splitting", "detuning", "coupling", "ratio", "bias")
+        name: getattr(sheet, name)
+        for name in ("spins", "mode", "splitting", "detuning", "coupling", "ratio", "bias")
     }
     settings = [(sheet.along, x)]
     if sheet.each is not None and family_value is not None:
@@ -131,7 +132,9 @@ def make(sheet: Sheet) -> Plan:
         Chunk(number, tuple(points), sum(prices[point] for point in points))
         for number, points in enumerate(coarse + fine)
     )
-    return Plan(drawn, questions, chunks, sum(prices), max(predicted_bytes(question) for question in questions))
+    return Plan(
+        drawn, questions, chunks, sum(prices), max(predicted_bytes(question) for question in questions)
+    )
 
 
 def _cut(points: list[int], prices: list[float], most_seconds: float) -> list[list[int]]:
@@ -158,8 +161,9 @@ def check_price(plan: Plan, price_ceiling: float, memory_ceiling: int) -> None:
         largest = max(plan.questions, key=predicted_bytes)
         raise PriceError(
             "too-much-memory",
-            f"one point would take about {plan.peak_bytes / 1e9:.3g} GB of memory (at {largest.model.spins} spins, "
-            f"coupling {number_text(largest.model.rotating)}); ask for fewer spins, a smaller coupling or fewer levels",
+            f"one point would take about {plan.peak_bytes / 1e9:.3g} GB of memory (at {largest.model.spins} "
+            f"spins, coupling {number_text(largest.model.rotating)}); ask for fewer spins, a smaller "
+            "coupling or fewer levels",
             "spins",
             largest.model.spins,
             f"at most {memory_ceiling / 1e9:.3g} GB for a point",
@@ -168,8 +172,8 @@ def check_price(plan: Plan, price_ceiling: float, memory_ceiling: int) -> None:
         fitting = int(len(plan.questions) * price_ceiling / plan.seconds)
         raise PriceError(
             "too-expensive",
-            f"this would take about {_minutes(plan.seconds)} of processor time; ask for fewer points (about {fitting} "
-            "would fit), fewer spins, a smaller coupling or a larger 'tol'",
+            f"this would take about {_minutes(plan.seconds)} of processor time; ask for fewer points "
+            f"(about {fitting} would fit), fewer spins, a smaller coupling or a larger 'tol'",
             "points",
             len(plan.questions),
             f"at most {_minutes(price_ceiling)} of processor time for a sheet",

@@ -75,13 +75,13 @@ class Settings:
     memory_ceiling: int = field(default_factory=lambda: max(256 * MEBIBYTE, machine_bytes() // 4))
     queue_limit: int = 32
     store_bytes: int = 2048 * MEBIBYTE
-    remembered_points: int = 100_000
+    remembered_points: int = 30_000
     lease_seconds: float = 90.0
     grace_seconds: float = 30.0
     heartbeat_seconds: float = 15.0
     update_seconds: float = 0.25
     body_bytes: int = 64 * 1024
-    query_characters: int = 16_000
+    query_characters: int = 32_000
 
     def check(self) -> None:
         """Raise StartError when these settings are unsafe or cannot work."""
@@ -93,13 +93,17 @@ class Settings:
             )
         if self.prefix and not (self.prefix.startswith("/") and not self.prefix.endswith("/")):
             raise StartError(
-                "bad-prefix", "the prefix looks like /name", "prefix", self.prefix, "/name, no slash at the end"
+                "bad-prefix",
+                "the prefix looks like /name",
+                "prefix",
+                self.prefix,
+                "/name, no slash at the end",
             )
         if not is_loopback(self.host) and self.key is None and not self.open_to_all:
             raise StartError(
                 "key-needed",
-                f"{self.host} can be reached from other machines: give a shared key with --key KEY (or in the "
-                "environment variable SOFTMODE_KEY), or say --open to let everybody compute here",
+                f"{self.host} can be reached from other machines: give a shared key with --key KEY (or in "
+                "the environment variable SOFTMODE_KEY), or say --open to let everybody compute here",
                 "host",
                 self.host,
                 "127.0.0.1, or any address with --key or --open",

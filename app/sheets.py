@@ -63,7 +63,9 @@ class Sheet(BaseModel):
     def _complete(cls, data: Any) -> dict[str, Any]:
         """Check every given key, then fill in the others."""
         if not isinstance(data, Mapping):
-            raise SheetError("wrong-type", "a sheet is an object of keys and values", "sheet", data, "an object")
+            raise SheetError(
+                "wrong-type", "a sheet is an object of keys and values", "sheet", data, "an object"
+            )
         given = {("from" if k == "start" else "to" if k == "stop" else k): v for k, v in data.items()}
         _check_names(given)
         given.pop("v", None)
@@ -121,10 +123,11 @@ class Sheet(BaseModel):
         )
 
 
-
 def critical_coupling(mode: float, splitting: float, ratio: float) -> float:
     """Return the critical coupling, in the unit of `mode`, for any strength of the coupling itself."""
-    return CollectiveModel(spins=1, mode=mode, splitting=splitting, rotating=1.0, counter=ratio).critical_coupling
+    return CollectiveModel(
+        spins=1, mode=mode, splitting=splitting, rotating=1.0, counter=ratio
+    ).critical_coupling
 
 
 def default_range(given: Mapping[str, Any]) -> tuple[float, float]:
@@ -170,7 +173,11 @@ def _check_names(given: Mapping[Any, Any]) -> None:
     version = given.get("v", GRAMMAR_VERSION)
     if version != GRAMMAR_VERSION or isinstance(version, bool):
         raise SheetError(
-            "unknown-version", "this server reads version 1 of the link grammar", "v", version, str(GRAMMAR_VERSION)
+            "unknown-version",
+            "this server reads version 1 of the link grammar",
+            "v",
+            version,
+            str(GRAMMAR_VERSION),
         )
 
 
@@ -283,5 +290,3 @@ def default_points(along: str, start: float, stop: float) -> int:
     """Return the number of points that an axis gets when a sheet leaves it out."""
     default = int(KEYS["points"].default)
     return min(default, most_points(along, start, stop)) if along == "spins" else default
-
-

@@ -1,0 +1,405 @@
+"""The JSON routes, and the factory that puts the application together."""
+
+import asyncio
+import json
+from collections.abc import AsyncIterator
+from contextlib import asynccontextmanager
+from typing import Any
+
+from fastapi import APIRouter, FastAPI, Request
+from starlette.exceptions import HTTPException
+from starlette.responses import JSONResponse, Response, StreamingResponse
+from starlette.types import ASGIApp, Receive, Scope, Send
+
+from app import __version__, assets, exports, identity, limits, links, pages, streams
+from app.engine import Engine
+from app.errors import (
+    BusyError,
+    ConflictError,
+    JobFailedError,
+    NotFoundError,
+    RequestError,
+    SheetError,
+    SoftmodeError,
+)
+from app.faults import error_response, on_error
+from app.figures import picture
+from app.jobs import Job
+from app.keys import Key
+from app.security import Guard
+from app.settings import Settings
+from app.sheets import Sheet
+
+WAIT = Key("wait", "real", 30.0, "seconds to wait for the result", low=0.0, high=300.0)
+PARTIAL = Key("partial", "choice", "0", "whether an unfinished result will do", choices=("0", "1"))
+
+router = APIRouter()
+
+
+def create_app(settings: Settings) -> FastAPI:
+    """Return the application; raises StartError when the settings or the data directory are no good."""
+    settings.check()
+    engine = Engine(settings)
+
+    @asynccontextmanager
+    async def lifespan(_app: FastAPI) -> AsyncIterator[None]:
+        await engine.start()
+        yield
+        await engine.close()
+
+    app = FastAPI(
+        title="Softmode",
+        version=__version__,
+        docs_url=None,
+        redoc_url=None,
+        openapi_url=None,
+        lifespan=lifespan,
+    )
+    app.router.redirect_slashes = False
+    app.state.engine = engine
+    app.state.settings = settings
+    app.include_router(router)
+    app.include_router(pages.router)
+    app.add_exception_handler(SoftmodeError, on_error)
+    app.add_exception_handler(HTTPException, on_error)
+    app.add_middleware(StoredLinks, engine=engine)
+    app.add_middleware(Guard, settings=settings)
+    return app
+
+
+class StoredLinks:
+    """Puts the long query in the place of the short link that stands for it."""
+
+    def __init__(self, app: ASGIApp, engine: Engine) -> None:
+        self.app = app
+        self.engine = engine
+
+    async def __call__(self, scope: Scope, receive: Receive, send: Send) -> None:
+        """Handle one request."""
+        query = scope.get("query_string", b"").decode("latin-1")
+        if links.STORED_KEY in query:
+            try:
+                scope["query_string"] = (await self._expanded(query)).encode("latin-1")
+            except SoftmodeError as error:
+                await error_response(Request(scope), error)(scope, receive, send)
+                return
+        await self.app(scope, receive, send)
+
+    async def _expanded(self, query: str) -> str:
+        found = links.stored_name(query)
+        if found is None:
+            return query
+        name, rest = found
+        stored = await self.engine.store.link(name)
+        if stored is None:
+            raise NotFoundError(
+                "unknown-link", "this server has made no such short link", links.STORED_KEY, name, None
+            )
+        return f"{stored}&{rest}" if rest else stored
+
+
+# -- helpers ------------------------------------------------------------------------------------
+
+
+def _engine(request: Request) -> Engine:
+    engine: Engine = request.app.state.engine
+    return engine
+
+
+def _client(request: Request) -> str:
+    return request.client.host if request.client else ""
+
+
+def _pairs(request: Request) -> dict[str, str]:
+    return links.split_query(request.scope["query_string"].decode("latin-1"))
+
+
+async def _body(request: Request) -> dict[str, Any]:
+    """Return the JSON object in a request's body; raise RequestError or SheetError."""
+    kind = request.headers.get("content-type", "").partition(";")[0].strip().lower()
+    if kind != "application/json":
+        raise RequestError(
+            "not-json",
+            "send the body as application/json",
+            "Content-Type",
+            kind,
+            "application/json",
+            status=415,
+        )
+    raw = await request.body()
+
+    def once(pairs: list[tuple[str, Any]]) -> dict[str, Any]:
+        data = dict(pairs)
+        if len(data) != len(pairs):
+            names = [name for name, _ in pairs]
+            name = next(one for one in names if names.count(one) > 1)
+            raise SheetError(
+                "repeated-key", f"'{name[:60]}' is given twice; keep one", name, None, "given once"
+            )
+        return data
+
+    def constant(name: str) -> None:
+        raise SheetError(
+            "not-finite", f"{name} is not a number that can be used", "body", name, "finite numbers"
+        )
+
+    try:
+        data = json.loads(raw, object_pairs_hook=once, parse_constant=constant)
+    except (ValueError, RecursionError) as error:
+        raise RequestError(
+            "bad-json", f"the body is not JSON: {error}", "body", None, "a JSON object"
+        ) from None
+    if not isinstance(data, dict):
+        raise RequestError(
+            "bad-json", "the body must be a JSON object", "body", data, "a JSON object", status=422
+        )
+    return data
+
+
+def _json(data: Any, status: int = 200) -> Response:
+    return Response(exports.encode(data), status, media_type="application/json")
+
+
+def _raise_if_over(job: Job) -> None:
+    """Raise the error of a job that ended without a result."""
+    if job.error is not None:
+        raise job.error
+    if job.state == "cancelled":
+        raise ConflictError(
+            "cancelled", "the job was stopped; ask for the sheet again to go on", "id", job.id, None
+        )
+    if job.state == "restarting":
+        raise BusyError("restarting", "the server is restarting; ask again in a moment", retry_after=3)
+
+
+async def _finished(request: Request, pairs: dict[str, str]) -> tuple[Sheet, dict[str, Any] | None, Job]:
+    """Return the sheet of a query and its result, or None in its place when `wait` seconds are not enough."""
+    wait = links.take(pairs, "wait", WAIT)
+    sheet = links.from_pairs(pairs)
+    engine = _engine(request)
+    job, _ = await engine.submit(sheet, _client(request), by_polling=True, extra_seconds=wait)
+    await job.wait_until(lambda one: not one.is_active, wait)
+    if job.is_active:
+        job.renew_scripts(engine.lease_length)
+        return sheet, None, job
+    _raise_if_over(job)
+    return sheet, await engine.result(job, sheet), job
+
+
+def _accepted(request: Request, job: Job) -> Response:
+    facts = job.snapshot(_engine(request).pool.size)
+    answer = JSONResponse({"job": f"api/jobs/{job.id}"} | facts, 202)
+    answer.headers["Retry-After"] = "1"
+    return answer
+
+
+# -- sweeps -------------------------------------------------------------------------------------
+
+
+@router.get("/api/sweep")
+async def sweep_json(request: Request) -> Response:
+    """Return the result of a sweep, or 202 and the job's address when it takes longer than `wait`."""
+    _, result, job = await _finished(request, _pairs(request))
+    if result is None:
+        return _accepted(request, job)
+    return Response(await asyncio.to_thread(exports.encode, result), media_type="application/json")
+
+
+@router.get("/api/sweep.csv")
+async def sweep_csv(request: Request) -> Response:
+    """Return the result of a sweep as a table."""
+    _, result, job = await _finished(request, _pairs(request))
+    if result is None:
+        return _accepted(request, job)
+    answer = Response(await asyncio.to_thread(exports.csv_of, result), media_type="text/csv")
+    answer.headers["Content-Disposition"] = f'attachment; filename="softmode-{job.id[:12]}.csv"'
+    return answer
+
+
+@router.get("/api/sweep.py")
+async def sweep_python(request: Request) -> Response:
+    """Return a script that fetches the sweep, or computes it; nothing is computed for it here."""
+    sheet = links.from_pairs(_pairs(request))
+    base = f"{request.url.scheme}://{request.headers.get('host', '')}{request.app.state.settings.prefix}"
+    return Response(exports.python_of(sheet, base), media_type="text/plain")
+
+
+@router.post("/api/link")
+async def link_of_form(request: Request) -> Response:
+    """Return the canonical link for what was typed into a form; a long one is stored under a short name."""
+    sheet = links.from_form(await _body(request))
+    query = links.query_of(sheet)
+    if links.needs_storing(query):
+        short = links.stored_query(query)
+        await _engine(request).store.keep_link(short.partition("=")[2], query)
+        query = short
+    return _json(
+        {"link": links.whole(query), "query": query, "sheet": sheet.data(), "id": identity.sheet_id(sheet)}
+    )
+
+
+# -- jobs ---------------------------------------------------------------------------------------
+
+
+@router.post("/api/jobs")
+async def start_job(request: Request) -> Response:
+    """Start the job of a sheet, or join it, and hand out a lease."""
+    body = await _body(request)
+    if set(body) == {"link"}:
+        if not isinstance(body["link"], str):
+            raise SheetError("wrong-type", "'link' must be text", "link", body["link"], "a link")
+        sheet = links.parse_link(await _whole_link(request, body["link"]))
+    else:
+        sheet = Sheet.model_validate(body)
+    engine = _engine(request)
+    job, lease = await engine.submit(sheet, _client(request))
+    if job.error is not None:
+        raise job.error
+    facts = job.snapshot(engine.pool.size)
+    facts |= {"lease": lease, "lease_seconds": engine.settings.lease_seconds}
+    return _json(facts, 200 if job.state == "done" else 202)
+
+
+async def _whole_link(request: Request, link: str) -> str:
+    """Return a link with the long query in the place of a short name."""
+    address, mark, query = link.strip().partition("?")
+    found = links.stored_name(query)
+    if found is None:
+        return link
+    stored = await _engine(request).store.link(found[0])
+    if stored is None:
+        raise NotFoundError(
+            "unknown-link", "this server has made no such short link", links.STORED_KEY, found[0]
+        )
+    return f"{address}{mark}{stored}"
+
+
+@router.get("/api/jobs/{name}")
+async def job_facts(request: Request, name: str) -> Response:
+    """Return where a job stands."""
+    engine = _engine(request)
+    job = engine.job(name)
+    job.renew_scripts(engine.lease_length)
+    return _json(job.snapshot(engine.pool.size))
+
+
+@router.post("/api/jobs/{name}/leases/{lease}")
+async def renew_lease(request: Request, name: str, lease: str) -> Response:
+    """Say that somebody still waits for this job."""
+    engine = _engine(request)
+    job = engine.job(name)
+    engine.renew(job, lease)
+    return _json(job.snapshot(engine.pool.size))
+
+
+@router.delete("/api/jobs/{name}")
+async def leave_job(request: Request, name: str) -> Response:
+    """Give up a lease, or stop the job for everybody."""
+    engine = _engine(request)
+    job = engine.job(name)
+    pairs = _pairs(request)
+    if pairs == {"for": "everyone"}:
+        engine.cancel(job)
+    elif set(pairs) == {"lease"}:
+        engine.leave(job, pairs["lease"])
+    else:
+        raise SheetError(
+            "no-lease",
+            "say which lease you give up, or stop the job for everyone",
+            "lease",
+            None,
+            "lease=…, for=everyone",
+        )
+    return _json(job.snapshot(engine.pool.size))
+
+
+@router.get("/api/jobs/{name}/events")
+async def job_events(request: Request, name: str) -> Response:
+    """Return the stream of a job's progress."""
+    engine = _engine(request)
+    answer = StreamingResponse(streams.events(engine.job(name), engine), media_type="text/event-stream")
+    answer.headers["X-Accel-Buffering"] = "no"
+    answer.headers["Cache-Control"] = "no-store"
+    return answer
+
+
+def _sheet_for(job: Job, pairs: dict[str, str]) -> Sheet:
+    """Return the sheet of a query that must ask what the job computes; the job's own for an empty query."""
+    if not pairs:
+        return job.sheet
+    sheet = links.from_pairs(pairs)
+    if identity.sheet_id(sheet) != job.id:
+        raise ConflictError(
+            "another-question", "the link asks something else than this job computes", "id", job.id
+        )
+    return sheet
+
+
+@router.get("/api/jobs/{name}/result")
+async def job_result(request: Request, name: str) -> Response:
+    """Return the result of a job, 202 while it runs; `partial=1` takes what there is."""
+    pairs = _pairs(request)
+    partial = links.take(pairs, "partial", PARTIAL) == "1"
+    engine = _engine(request)
+    job = engine.job(name)
+    sheet = _sheet_for(job, pairs)
+    job.renew_scripts(engine.lease_length)
+    if job.error is not None or not (partial or job.is_active):
+        _raise_if_over(job)
+    if job.is_active and not (partial and job.plan is not None):
+        return _accepted(request, job)
+    result = await engine.result(job, sheet)
+    return Response(await asyncio.to_thread(exports.encode, result), media_type="application/json")
+
+
+@router.get("/api/jobs/{name}/picture")
+async def job_picture(request: Request, name: str) -> Response:
+    """Return the figure of a job as far as it is computed, shown as the query says."""
+    engine = _engine(request)
+    job = engine.job(name)
+    sheet = _sheet_for(job, _pairs(request))
+    if job.error is not None:
+        raise job.error
+    revision = job.revision
+    result = await engine.result(job, sheet)
+
+    def drawn() -> bytes:
+        return exports.encode({"revision": revision, "complete": result["complete"]} | picture(sheet, result))
+
+    return Response(await asyncio.to_thread(drawn), media_type="application/json")
+
+
+# -- the server ---------------------------------------------------------------------------------
+
+
+@router.get("/api/limits")
+async def server_limits(request: Request) -> Response:
+    """Return what this server takes, and the grammar of links."""
+    settings: Settings = request.app.state.settings
+    data = await asyncio.to_thread(limits.describe, settings)
+    data["store"] = await _engine(request).store.usage()
+    return _json(data)
+
+
+@router.get("/health")
+async def health(request: Request) -> Response:
+    """Say that the server works, in which version, and what it has done."""
+    engine = _engine(request)
+    state = "restarting" if engine.restarting else "ok"
+    return _json(
+        {"status": state, "assets": assets.shelf().digest} | identity.versions() | {"counts": engine.facts()}
+    )
+
+
+@router.get("/assets/{digest}/{name:path}")
+async def static_file(request: Request, digest: str, name: str) -> Response:
+    """Return a static file; its address changes with its content."""
+    accepted = request.headers.get("accept-encoding", "")
+    asset = await asyncio.to_thread(assets.load, digest, name, compress="gzip" in accepted)
+    headers = {"Cache-Control": "public, max-age=31536000, immutable", "Vary": "Accept-Encoding"}
+    if asset.compressed:
+        headers["Content-Encoding"] = "gzip"
+    return Response(asset.body, headers=headers, media_type=asset.media_type)
+
+
+__all__ = ["JobFailedError", "create_app", "router"]

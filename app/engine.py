@@ -1,0 +1,333 @@
+"""The engine: turns sheets into jobs, one computation per sheet however many ask, and runs them fairly.
+
+All its state belongs to the event loop; computing happens in the process pool, planning and encoding in
+threads, and the store has threads of its own.
+"""
+
+import asyncio
+import contextlib
+import datetime as dt
+import logging
+from collections import Counter, OrderedDict
+from typing import Any
+
+from app import identity, plan
+from app.errors import BusyError, JobFailedError, NotFoundError, SheetError, SoftmodeError
+from app.exports import result_of
+from app.jobs import Job
+from app.plan import Chunk
+from app.settings import Settings
+from app.sheets import Sheet
+from app.store import Store, StoredChunk
+from app.workers import Outcome, ProcessPool, Task
+
+logger = logging.getLogger(__name__)
+
+MOST_REMEMBERED_JOBS = 200
+TIDY_SECONDS = 1.0
+
+
+class Engine:
+    """Jobs of one server. Make it, `await start()`, and at the end `await close()`."""
+
+    def __init__(self, settings: Settings) -> None:
+        self.settings = settings
+        self.store = Store(settings.data, settings.store_bytes)
+        self.pool = ProcessPool(settings.workers)
+        self.jobs: OrderedDict[str, Job] = OrderedDict()
+        self.counts: Counter[str] = Counter()
+        self.restarting = False
+        self._busy = 0
+        self._tick = 0
+        self._served: dict[str, int] = {}
+        self._loop: asyncio.AbstractEventLoop | None = None
+        self._tidying: asyncio.Task[None] | None = None
+
+    async def start(self) -> None:
+        """Begin to look after leases."""
+        self._loop = asyncio.get_running_loop()
+        self._tidying = asyncio.create_task(self._tidy())
+
+    def announce_restart(self) -> None:
+        """Tell everybody who watches that the server goes down; finished chunks are kept."""
+        self.restarting = True
+        for job in self.jobs.values():
+            if job.is_active:
+                job.state = "restarting"
+                job.waiting.clear()
+                job.changed()
+
+    async def close(self) -> None:
+        """Stop computing, finish writing."""
+        self.announce_restart()
+        if self._tidying is not None:
+            self._tidying.cancel()
+            with contextlib.suppress(asyncio.CancelledError):
+                await self._tidying
+        await asyncio.to_thread(self.pool.close)
+        await asyncio.to_thread(self.store.close)
+
+    # -- asking ---------------------------------------------------------------------------------
+
+    @property
+    def lease_length(self) -> float:
+        """Seconds after which somebody who was not heard of has left."""
+        return self.settings.lease_seconds + self.settings.grace_seconds
+
+    async def submit(
+        self, sheet: Sheet, client: str, *, by_polling: bool = False, extra_seconds: float = 0.0
+    ) -> tuple[Job, str]:
+        """Return the job of a sheet, started if need be, and the name of a lease on it.
+
+        Raises PriceError, BusyError, or the error with which the computation failed before.
+        """
+        name = identity.sheet_id(sheet)
+        job = self.jobs.get(name)
+        if job is None or not (job.is_active or job.state in {"done", "failed"}):
+            job = self._begin(name, sheet, client, job)
+        self.jobs.move_to_end(name)
+        lease = job.add_lease(self.lease_length + extra_seconds, by_polling=by_polling)
+        if job.preparing is not None:
+            await asyncio.shield(job.preparing)
+        if job.error is not None and job.plan is None:
+            raise job.error
+        return job, lease
+
+    def _begin(self, name: str, sheet: Sheet, client: str, old: Job | None) -> Job:
+        """Enter a job, or take up a cancelled one again."""
+        if self.restarting:
+            raise BusyError(
+                "restarting", "the server is restarting; ask again in a moment", retry_after=3, status=503
+            )
+        unfinished = sum(job.is_active for job in self.jobs.values())
+        if unfinished >= self.settings.queue_limit:
+            raise BusyError(
+                "queue-full",
+                f"{unfinished} sheets are being computed; ask again later",
+                "queue_limit",
+                unfinished,
+                f"at most {self.settings.queue_limit} at a time",
+                retry_after=5,
+            )
+        if old is not None and old.state == "cancelled":
+            job = old
+            job.state, job.client, job.error = "queued", client, None
+        else:
+            job = self.jobs[name] = Job(name, sheet, client)
+        self.counts["jobs_started"] += 1
+        if job.preparing is None:
+            job.preparing = asyncio.create_task(self._prepare(job))
+        return job
+
+    def job(self, name: str) -> Job:
+        """Return a job by name; raise NotFoundError."""
+        job = self.jobs.get(name)
+        if job is None:
+            raise NotFoundError(
+                "unknown-job",
+                "this server does not know the job (any more); ask for the sheet again, "
+                "finished parts are kept",
+                "id",
+                name,
+                None,
+            )
+        return job
+
+    def renew(self, job: Job, lease: str) -> None:
+        """Renew a lease; raise NotFoundError when it has lapsed."""
+        if not job.renew(lease, self.lease_length):
+            raise NotFoundError(
+                "unknown-lease", "this lease has lapsed; ask for the sheet again", "lease", lease, None
+            )
+
+    def leave(self, job: Job, lease: str) -> None:
+        """Give up a lease; the job stops when nobody holds one."""
+        job.leases.pop(lease, None)
+        if not job.leases and job.is_active:
+            self.cancel(job)
+
+    def cancel(self, job: Job) -> None:
+        """Stop a job for everybody; finished chunks are kept."""
+        if not job.is_active:
+            return
+        self.counts["jobs_cancelled"] += 1
+        job.state = "cancelled"
+        self._abandon(job)
+        job.changed()
+
+    async def result(self, job: Job, sheet: Sheet) -> dict[str, Any]:
+        """Return the result of a job as it is now, for a sheet with the same computation."""
+        if job.plan is None:
+            raise BusyError(
+                "not-planned", "the job has not started yet; ask again in a moment", retry_after=1
+            )
+        provenance = identity.versions() | {"computed_at": job.finished_at, "seconds": round(job.seconds, 4)}
+        return await asyncio.to_thread(
+            result_of, sheet, job.plan, list(job.rows), name=job.id, provenance=provenance
+        )
+
+    def facts(self) -> dict[str, Any]:
+        """Return counters since the start."""
+        names = ("jobs_started", "jobs_cancelled", "chunks_computed", "chunks_found", "points_computed")
+        return {name: self.counts[name] for name in names} | {
+            "jobs_active": sum(job.is_active for job in self.jobs.values()),
+            "workers": self.pool.size,
+            "workers_ready": self.pool.ready,
+            "workers_busy": self._busy,
+            "workers_lost": self.pool.lost,
+        }
+
+    # -- running --------------------------------------------------------------------------------
+
+    async def _prepare(self, job: Job) -> None:
+        """Plan a job, take what the store has, queue the rest."""
+        try:
+            if job.plan is None:
+                made = await asyncio.to_thread(plan.make, job.sheet)
+                plan.check_price(made, self.settings.price_ceiling, self.settings.memory_ceiling)
+                found = await self.store.load(job.id)
+                job.rows = [None] * len(made.questions)
+                job.plan = made
+                for chunk in made.chunks:
+                    stored = found.get(chunk.number)
+                    if stored is not None and stored.points == chunk.points:
+                        job.accept(chunk, stored)
+                        self.counts["chunks_found"] += 1
+                if len(job.finished_chunks) == len(made.chunks):
+                    job.finished_at = await self.store.finished_at(job.id)
+        except SoftmodeError as error:
+            self._fail(job, error)
+            self.jobs.pop(job.id, None)
+        except Exception:
+            logger.exception("a sheet could not be planned")
+            self._fail(
+                job, JobFailedError("internal", "the sheet could not be planned; the server's log says why")
+            )
+            self.jobs.pop(job.id, None)
+        else:
+            self._queue(job)
+        finally:
+            job.preparing = None
+
+    def _queue(self, job: Job) -> None:
+        """Queue what is left of a planned job, unless it was cancelled meanwhile."""
+        if job.plan is None or not job.is_active:
+            return
+        if len(job.finished_chunks) == len(job.plan.chunks):
+            self._finish(job)
+            return
+        job.refill()
+        self.store.begin(job.id, job.sheet.computation_key())
+        job.changed()
+        self._dispatch()
+
+    def _dispatch(self) -> None:
+        """Give free workers the next chunks: clients take turns, and so do the jobs of a client."""
+        while self._busy < self.pool.size:
+            candidates = [job for job in self.jobs.values() if job.waiting and job.is_active]
+            if not candidates:
+                self._served.clear()
+                return
+            job = min(candidates, key=lambda one: (self._served.get(one.client, 0), one.turn))
+            self._tick += 1
+            self._served[job.client] = job.turn = self._tick
+            self._run(job, job.waiting.popleft())
+
+    def _run(self, job: Job, chunk: Chunk) -> None:
+        if job.plan is None or self._loop is None:
+            return
+        loop = self._loop
+
+        def report(outcome: Outcome) -> None:
+            with contextlib.suppress(RuntimeError):  # the loop has ended: so has the server
+                loop.call_soon_threadsafe(self._landed, job, chunk, outcome)
+
+        task = Task(job.plan.chunk_questions(chunk), report)
+        job.active[chunk.number] = task
+        job.state = "running"
+        self._busy += 1
+        self.pool.submit(task)
+
+    def _landed(self, job: Job, chunk: Chunk, outcome: Outcome) -> None:
+        """Take in the outcome of a chunk."""
+        self._busy -= 1
+        job.active.pop(chunk.number, None)
+        if outcome.kind == "done":
+            self._take(job, chunk, outcome)
+        elif outcome.kind == "stopped" and job.is_active:
+            job.waiting.appendleft(chunk)  # cancelled and asked for again before the stop took effect
+        elif outcome.kind == "error" and outcome.error is not None:
+            self._fail(job, SheetError("not-solvable", **outcome.error))
+        elif outcome.kind == "lost" and not self.restarting:
+            self._fail(
+                job,
+                JobFailedError(
+                    "kills-workers",
+                    "computing this sheet ended the computing process twice, most likely for want of memory; "
+                    "it is refused until the server restarts. Ask for fewer spins, fewer levels or a smaller "
+                    "coupling",
+                    "spins",
+                    job.sheet.spins,
+                    None,
+                ),
+            )
+        self._dispatch()
+
+    def _take(self, job: Job, chunk: Chunk, outcome: Outcome) -> None:
+        finished = StoredChunk(chunk.points, outcome.rows, outcome.seconds)
+        job.accept(chunk, finished)
+        job.pace = (job.pace[0] + chunk.seconds, job.pace[1] + outcome.seconds)
+        self.counts["chunks_computed"] += 1
+        self.counts["points_computed"] += len(chunk.points)
+        if job.plan is not None and len(job.finished_chunks) == len(job.plan.chunks) and job.is_active:
+            self._finish(job)
+        else:
+            job.changed()
+        # told after publishing: nobody waits for the disk
+        self.store.keep(job.id, chunk.number, finished)
+        if job.state == "done":
+            self.store.end(job.id, job.finished_at)
+
+    def _finish(self, job: Job) -> None:
+        now = dt.datetime.now(dt.UTC)
+        job.finished_at = job.finished_at or now.isoformat(timespec="seconds")
+        job.state = "done"
+        job.changed()
+        self._forget()
+
+    def _fail(self, job: Job, error: SoftmodeError) -> None:
+        job.error = error
+        job.state = "failed"
+        self._abandon(job)
+        job.changed()
+
+    def _abandon(self, job: Job) -> None:
+        """Drop the chunks of a job that wait, stop those under way, unpin what is stored."""
+        job.waiting.clear()
+        for task in job.active.values():
+            self.pool.stop(task)
+        job.leases.clear()
+        if job.plan is not None:
+            self.store.end(job.id, None)
+
+    async def _tidy(self) -> None:
+        """Drop lapsed leases, and the jobs that nobody holds any more."""
+        pause = min(TIDY_SECONDS, max(0.05, self.lease_length / 4.0))
+        while True:
+            await asyncio.sleep(pause)
+            for job in list(self.jobs.values()):
+                job.drop_lapsed()
+                if job.is_active and not job.leases:
+                    self.cancel(job)
+            self._forget()
+
+    def _forget(self) -> None:
+        """Forget the jobs used longest ago when there are too many points in memory; the store has them."""
+        resting = [job for job in self.jobs.values() if not job.is_active and not job.active]
+        points = sum(job.total for job in resting)
+        for job in resting[:-1]:
+            if points <= self.settings.remembered_points and len(resting) <= MOST_REMEMBERED_JOBS:
+                return
+            if job.error is None:
+                del self.jobs[job.id]
+            points -= job.total

@@ -1,0 +1,77 @@
+"""Computing a sheet without a server: the same plan, the same processes, the same numbers."""
+
+import datetime as dt
+import queue
+from collections.abc import Callable
+from typing import Any
+
+from app import identity, plan
+from app.errors import JobFailedError, SheetError
+from app.exports import result_of
+from app.plan import Chunk
+from app.sheets import Sheet
+from app.workers import Outcome, ProcessPool, Task
+
+Progress = Callable[[int, int], None]
+
+
+def compute_sheet(sheet: Sheet, workers: int, progress: Progress) -> dict[str, Any]:
+    """Return the complete result of a sheet.
+
+    Parameters
+    ----------
+    sheet : Sheet
+        The question.
+    workers : int
+        Number of computing processes.
+    progress : callable
+        Called with the finished and the total number of points.
+
+    Raises
+    ------
+    SheetError
+        When the solver refuses a point.
+    JobFailedError
+        When a chunk ends its process twice.
+    """
+    made = plan.make(sheet)
+    rows: list[dict[str, Any] | None] = [None] * len(made.questions)
+    landed: queue.SimpleQueue[tuple[Chunk, Outcome]] = queue.SimpleQueue()
+    pool = ProcessPool(workers)
+    seconds = 0.0
+    done = 0
+    progress(0, len(rows))
+    try:
+        for chunk in made.chunks:
+            pool.submit(Task(made.chunk_questions(chunk), _reporter(landed, chunk)))
+        for _ in made.chunks:
+            chunk, outcome = landed.get()
+            if outcome.error is not None:
+                raise SheetError("not-solvable", **outcome.error)
+            if outcome.kind != "done":
+                raise JobFailedError(
+                    "kills-workers",
+                    "computing this sheet ended the computing process twice, most likely for want of memory; "
+                    "ask for fewer spins, fewer levels or a smaller coupling",
+                    "spins",
+                    sheet.spins,
+                )
+            for point, row in zip(chunk.points, outcome.rows, strict=True):
+                rows[point] = row
+            seconds += outcome.seconds
+            done += len(chunk.points)
+            progress(done, len(rows))
+    finally:
+        pool.close()
+    provenance = identity.versions() | {
+        "computed_at": dt.datetime.now(dt.UTC).isoformat(timespec="seconds"),
+        "seconds": round(seconds, 4),
+    }
+    return result_of(sheet, made, rows, name=identity.sheet_id(sheet), provenance=provenance)
+
+
+def _reporter(landed: "queue.SimpleQueue[tuple[Chunk, Outcome]]", chunk: Chunk) -> Callable[[Outcome], None]:
+    def report(outcome: Outcome) -> None:
+        landed.put((chunk, outcome))
+
+    return report

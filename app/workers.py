@@ -1,0 +1,278 @@
+"""The processes that compute.
+
+Each worker is one spawned process with one BLAS thread and one pipe, watched by a thread of its own in the
+server. When a process dies, the chunk it was working on is known, a new process takes its place, and the
+chunk is tried once more; a chunk that kills two processes is given up.
+"""
+
+import contextlib
+import logging
+import multiprocessing
+import os
+import queue
+import signal
+import threading
+import time
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass, field
+from multiprocessing.connection import Connection, wait
+from multiprocessing.context import SpawnProcess
+from typing import Any
+
+from app.companions import companions
+from solver import CollectiveModel, PointQuestion, SolverError, solve_chain
+
+logger = logging.getLogger(__name__)
+
+THREAD_CAPS = (
+    "OMP_NUM_THREADS",
+    "OPENBLAS_NUM_THREADS",
+    "MKL_NUM_THREADS",
+    "BLIS_NUM_THREADS",
+    "VECLIB_MAXIMUM_THREADS",
+    "NUMEXPR_NUM_THREADS",
+)
+MOST_DEATHS = 2
+STOP = "stop"
+STOP_SECONDS = 0.4
+START_SECONDS = 60.0
+
+
+@dataclass(frozen=True)
+class Outcome:
+    """How a chunk ended.
+
+    `kind` is "done", "stopped" (cancelled half-way), "error" (the solver refused) or "lost" (killed two
+    processes); `rows` and `seconds` (processor time) belong to "done", `error` to "error".
+    """
+
+    kind: str
+    rows: list[dict[str, Any]] = field(default_factory=list)
+    seconds: float = 0.0
+    error: dict[str, Any] | None = None
+
+
+@dataclass
+class Task:
+    """A chunk under way: its questions, and what to call with its outcome (from a thread of the pool)."""
+
+    questions: Sequence[PointQuestion]
+    report: Callable[[Outcome], None]
+    deaths: int = 0
+    stopped: bool = False
+
+
+def cap_threads() -> None:
+    """Give BLAS one thread in this process and its children; must run before numpy is imported."""
+    for name in THREAD_CAPS:
+        os.environ[name] = "1"
+
+
+def compute(questions: Sequence[PointQuestion], stopped: Callable[[], bool]) -> list[dict[str, Any]] | None:
+    """Return the rows of a chunk, or None when it was stopped between two points."""
+    rows = []
+    answers = solve_chain(questions)
+    for question in questions:
+        if stopped():
+            return None
+        answer = next(answers).row()
+        rows.append({"answer": answer} | companions(question))
+    return rows
+
+
+def _serve(pipe: Connection) -> None:
+    """Answer chunks until the pipe closes (runs in the worker process)."""
+    signal.signal(signal.SIGINT, signal.SIG_IGN)
+    parent = multiprocessing.parent_process()
+    if parent is not None:
+        threading.Thread(target=_follow, args=(parent.sentinel,), daemon=True).start()
+    warm = PointQuestion(model=CollectiveModel(spins=4, mode=1.0, splitting=1.0, rotating=0.5, counter=0.5))
+    compute([warm], lambda: False)
+    with contextlib.suppress(EOFError, OSError):
+        pipe.send("ready")
+        while True:
+            message = pipe.recv()
+            if message != STOP:  # a stop that came too late
+                pipe.send(_answer(message, pipe))
+
+
+def _answer(questions: Sequence[PointQuestion], pipe: Connection) -> Outcome:
+    started = time.process_time()
+    try:
+        # nothing but a stop is sent while a chunk is under way
+        rows = compute(questions, lambda: pipe.poll() and pipe.recv() == STOP)
+    except SolverError as error:
+        facts = {
+            "message": error.message,
+            "field": error.field,
+            "value": str(error.value),
+            "allowed": error.allowed,
+        }
+        return Outcome("error", error=facts)
+    if rows is None:
+        return Outcome("stopped")
+    return Outcome("done", rows, time.process_time() - started)
+
+
+def _follow(sentinel: int) -> None:
+    """End this process when the server is gone, even in the middle of a long point."""
+    wait([sentinel])
+    os._exit(1)
+
+
+class Worker:
+    """One computing process and the thread that watches it."""
+
+    def __init__(self, tasks: "queue.SimpleQueue[Task | None]") -> None:
+        self.tasks = tasks
+        self.lost = 0
+        self.ready = threading.Event()
+        self.closing = False
+        self.context = multiprocessing.get_context("spawn")
+        self.process: SpawnProcess | None = None
+        self.pipe: Connection | None = None
+        self.current: Task | None = None
+        # held while `current` or `process` changes, so that a kill never hits the next task
+        self.lock = threading.Lock()
+        self.thread = threading.Thread(target=self._watch, name="softmode-worker", daemon=True)
+        self.thread.start()
+
+    def interrupt(self, task: Task) -> None:
+        """Ask the process to stop `task` after the point under way."""
+        with self.lock:
+            if self.current is task and self.pipe is not None:
+                with contextlib.suppress(OSError):
+                    self.pipe.send(STOP)
+
+    def kill(self, task: Task) -> None:
+        """End the process if it is still busy with `task`."""
+        with self.lock:
+            if self.current is task and self.process is not None:
+                self.process.kill()
+
+    def close(self) -> None:
+        """End the process and the thread."""
+        self.closing = True
+        with self.lock:
+            if self.process is not None:
+                self.process.kill()
+
+    def _start(self) -> None:
+        pipe, theirs = self.context.Pipe()
+        process = self.context.Process(target=_serve, args=(theirs,), daemon=True)
+        process.start()
+        theirs.close()
+        with self.lock:
+            self.process, self.pipe = process, pipe
+        if wait([pipe, process.sentinel], START_SECONDS) and pipe.poll():
+            with contextlib.suppress(EOFError, OSError):
+                pipe.recv()
+                self.ready.set()
+
+    def _watch(self) -> None:
+        """Start the process, hand it tasks, start it again when it dies."""
+        self._start()
+        while not self.closing:
+            task = self.tasks.get()
+            if task is None:
+                break
+            outcome = Outcome("stopped") if task.stopped else self._run(task)
+            while outcome is None:
+                outcome = self._after_death(task)
+            task.report(outcome)
+        self._end()
+
+    def _after_death(self, task: Task) -> Outcome | None:
+        """Replace the dead process and try the task once more."""
+        if self.closing:
+            return Outcome("lost")
+        self._end()
+        self._start()
+        if task.stopped:
+            return Outcome("stopped")
+        self.lost += 1
+        task.deaths += 1
+        logger.warning("a computing process died; another one took its place")
+        return Outcome("lost") if task.deaths >= MOST_DEATHS else self._run(task)
+
+    def _run(self, task: Task) -> Outcome | None:
+        """Return the outcome of a task, or None when the process died over it."""
+        pipe, process = self.pipe, self.process
+        if pipe is None or process is None:
+            return None
+        try:
+            with self.lock:
+                if task.stopped:
+                    return Outcome("stopped")
+                self.current = task
+                pipe.send(tuple(task.questions))
+            if pipe not in wait([pipe, process.sentinel]):
+                return None
+            outcome = pipe.recv()
+        except (EOFError, OSError):
+            return None
+        finally:
+            with self.lock:
+                self.current = None
+        return outcome if isinstance(outcome, Outcome) else None
+
+    def _end(self) -> None:
+        with self.lock:
+            process, pipe = self.process, self.pipe
+            self.process = self.pipe = None
+        if process is not None:
+            process.kill()
+            process.join(5.0)
+            process.close()
+        if pipe is not None:
+            pipe.close()
+
+
+class ProcessPool:
+    """A fixed number of workers that share one queue of tasks."""
+
+    def __init__(self, workers: int) -> None:
+        cap_threads()
+        self.tasks: queue.SimpleQueue[Task | None] = queue.SimpleQueue()
+        self.workers = [Worker(self.tasks) for _ in range(workers)]
+
+    @property
+    def size(self) -> int:
+        """Number of workers."""
+        return len(self.workers)
+
+    @property
+    def ready(self) -> int:
+        """Number of workers that have started."""
+        return sum(worker.ready.is_set() for worker in self.workers)
+
+    @property
+    def lost(self) -> int:
+        """Number of processes that died without being asked to."""
+        return sum(worker.lost for worker in self.workers)
+
+    def submit(self, task: Task) -> None:
+        """Hand over a task; its `report` is called once, from a thread of the pool."""
+        self.tasks.put(task)
+
+    def stop(self, task: Task) -> None:
+        """Stop a task: after the point under way, or by ending its process when that takes too long."""
+        task.stopped = True
+        for worker in self.workers:
+            worker.interrupt(task)
+        timer = threading.Timer(STOP_SECONDS, self._kill, [task])
+        timer.daemon = True
+        timer.start()
+
+    def _kill(self, task: Task) -> None:
+        for worker in self.workers:
+            worker.kill(task)
+
+    def close(self) -> None:
+        """End all processes."""
+        for worker in self.workers:
+            worker.close()
+        for _ in self.workers:
+            self.tasks.put(None)
+        for worker in self.workers:
+            worker.thread.join(10.0)
