@@ -68,6 +68,18 @@ def _server_options(top: argparse.ArgumentParser) -> None:
         default=known.store_bytes // MEBIBYTE,
         help="MiB of results to keep (%(default)s)",
     )
+    top.add_argument(
+        "--queue", type=int, default=known.queue_limit, help="most unfinished sheets at a time (%(default)s)"
+    )
+    top.add_argument(
+        "--lease",
+        type=float,
+        default=known.lease_seconds,
+        help="seconds a silent viewer is kept (%(default)s)",
+    )
+    top.add_argument(
+        "--grace", type=float, default=known.grace_seconds, help="seconds beyond the lease (%(default)s)"
+    )
     top.add_argument("--no-browser", action="store_true", help="do not open a browser")
 
 
@@ -105,6 +117,9 @@ def _serve(chosen: argparse.Namespace) -> int:
         allowed_hosts=tuple(chosen.allow_host),
         price_ceiling=chosen.ceiling,
         store_bytes=chosen.store_size * MEBIBYTE,
+        queue_limit=chosen.queue,
+        lease_seconds=chosen.lease,
+        grace_seconds=chosen.grace,
     )
     browser = not chosen.no_browser and bool(os.environ.get("DISPLAY") or sys.platform == "darwin")
     return serve(settings, browser=browser)

@@ -85,6 +85,8 @@ class Engine:
         job = self.jobs.get(name)
         if job is None or not (job.is_active or job.state in {"done", "failed"}):
             job = self._begin(name, sheet, client, job)
+        elif job.state == "done":
+            self.store.touch(name)
         self.jobs.move_to_end(name)
         lease = job.add_lease(self.lease_length + extra_seconds, by_polling=by_polling)
         if job.preparing is not None:

@@ -65,8 +65,8 @@ class SoftmodeError(Exception):
         return {
             "error": {
                 "code": self.code,
-                "message": self.message,
-                "field": self.field,
+                "message": _encodable(self.message),
+                "field": None if self.field is None else _plain(self.field),
                 "value": _plain(self.value),
                 "allowed": _plain(self.allowed),
             }
@@ -134,13 +134,20 @@ class StartError(SoftmodeError):
 LONGEST_QUOTE = 200
 
 
+def _encodable(text: str) -> str:
+    """Return a text without the lone surrogates that a JSON body can smuggle in."""
+    return text.encode("utf-8", "replace").decode("utf-8")
+
+
 def _plain(value: Any) -> Any:
     """Return `value` as JSON-able data that is safe to echo: short, and without NaN or infinities."""
-    if value is None or isinstance(value, bool | int):
+    if value is None or isinstance(value, bool):
         return value
+    if isinstance(value, int):
+        return value if abs(value) < 2**53 else _plain(f"{value:.6e}" if abs(value) < 10**300 else "a huge number")
     if isinstance(value, float):
         return value if abs(value) < float("inf") else str(value)
     if isinstance(value, list | tuple):
         return [_plain(item) for item in value[:50]]
-    text = value if isinstance(value, str) else str(value)
+    text = _encodable(value if isinstance(value, str) else str(value))
     return text if len(text) <= LONGEST_QUOTE else text[:LONGEST_QUOTE] + "…"

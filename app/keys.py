@@ -17,8 +17,8 @@ LARGEST = 1e6
 SMALLEST_MODE = 1e-6
 MOST_CURVES = 8
 
-_NUMBER = re.compile(r"[+-]?(\d+(\.\d*)?|\.\d+)([eE][+-]?\d{1,4})?")
-_WHOLE = re.compile(r"[+-]?\d{1,12}")
+_NUMBER = re.compile(r"[+-]?([0-9]+(\.[0-9]*)?|\.[0-9]+)([eE][+-]?[0-9]{1,4})?")
+_WHOLE = re.compile(r"[+-]?[0-9]{1,12}")
 _CONTROL = re.compile(r"[\x00-\x08\x0b-\x1f\x7f\ud800-\udfff]")
 
 

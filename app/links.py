@@ -54,7 +54,7 @@ def from_pairs(pairs: Mapping[str, str]) -> Sheet:
     values: dict[str, Any] = {}
     for name, text in pairs.items():
         if name == "v":
-            values[name] = int(text) if re.fullmatch(r"\d{1,4}", text) else text
+            values[name] = int(text) if re.fullmatch(r"[0-9]{1,4}", text) else text
         elif name in KEYS:
             values[name] = KEYS[name].read(text)
         else:

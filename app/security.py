@@ -91,8 +91,8 @@ class Guard:
             logger.exception("%s %s failed", request.method, scope["path"])
             if started:
                 raise
-            error = SoftmodeError("internal", "something went wrong on the server; its log says what")
-            await error_response(request, error)(scope, receive, guarded_send)
+            unknown = SoftmodeError("internal", "something went wrong on the server; its log says what")
+            await error_response(request, unknown)(scope, receive, guarded_send)
 
     async def _answer(self, request: Request) -> Response | None:
         """Check a request; return an answer when it goes no further."""

@@ -32,7 +32,8 @@ class Service(uvicorn.Server):
 def listen(host: str, port: int) -> socket.socket:
     """Return a listening socket; raise StartError when the address cannot be had."""
     family = socket.AF_INET6 if ":" in host else socket.AF_INET
-    listener = socket.socket(family, socket.SOCK_STREAM)
+    # the protocol is named because asyncio turns Nagle's delay off only where it is
+    listener = socket.socket(family, socket.SOCK_STREAM, socket.IPPROTO_TCP)
     listener.setsockopt(socket.SOL_SOCKET, socket.SO_REUSEADDR, 1)
     try:
         listener.bind((host.strip("[]"), port))

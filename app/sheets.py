@@ -66,7 +66,7 @@ class Sheet(BaseModel):
             raise SheetError(
                 "wrong-type", "a sheet is an object of keys and values", "sheet", data, "an object"
             )
-        given = {("from" if k == "start" else "to" if k == "stop" else k): v for k, v in data.items()}
+        given = dict(data)
         _check_names(given)
         given.pop("v", None)
         checked = {name: KEYS[name].checked(value) for name, value in given.items() if value is not None}
@@ -207,10 +207,11 @@ def _check_critical(filled: Mapping[str, Any]) -> None:
     if "coupling-over-critical" not in names or filled["along"] in {"splitting", "detuning", "mode"}:
         return
     if family["name"] in {"splitting", "detuning", "mode"}:
-        bases = [filled | {family["name"]: value} for value in family["values"]]
-        bases = [base | {"detuning": None} if family["name"] == "splitting" else base for base in bases]
+        bases = [{**filled, family["name"]: value} for value in family["values"]]
+        if family["name"] == "splitting":
+            bases = [{**base, "detuning": None} for base in bases]
     else:
-        bases = [filled | {}]
+        bases = [dict(filled)]
     for base in bases:
         splitting = base["splitting"] if base["detuning"] is None else base["mode"] + base["detuning"]
         if splitting == 0.0:

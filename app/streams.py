@@ -25,9 +25,7 @@ async def events(job: Job, engine: Engine) -> AsyncIterator[bytes]:
             yield _event("heartbeat", {"revision": revision})
             continue
         pause = earliest - time.monotonic()
-        if pause > 0.0:
-            await job.wait_until(lambda one: not one.is_active, pause)
-        if not job.is_active:
+        if await job.wait_until(lambda one: not one.is_active, max(0.0, pause)):
             break
         revision = job.revision
         earliest = time.monotonic() + settings.update_seconds

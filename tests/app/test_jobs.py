@@ -1,0 +1,301 @@
+"""Jobs on a real server: shared, cancelled, killed, restarted, and fair."""
+
+import json
+import os
+import signal
+import threading
+import time
+from concurrent.futures import ThreadPoolExecutor
+from typing import Any
+
+import httpx
+import pytest
+
+from tests.running import RunningServer, ServerFactory
+
+LONG = {"spins": 1500, "points": 120, "to": 2.0}
+
+
+def start(server: RunningServer, sheet: dict[str, Any]) -> dict[str, Any]:
+    answer = server.client.post("/api/jobs", json=sheet)
+    assert answer.status_code in {200, 202}, answer.text[:500]
+    facts: dict[str, Any] = answer.json()
+    return facts
+
+
+def facts_of(server: RunningServer, job: str) -> dict[str, Any]:
+    facts: dict[str, Any] = server.client.get(f"/api/jobs/{job}").json()
+    return facts
+
+
+def finish(server: RunningServer, job: str) -> dict[str, Any]:
+    server.wait_until(lambda: facts_of(server, job)["state"] not in {"queued", "running"}, 240.0)
+    answer = server.client.get(f"/api/jobs/{job}/result")
+    assert answer.status_code == 200, answer.text[:500]
+    result: dict[str, Any] = answer.json()
+    return result
+
+
+def numbers(result: dict[str, Any]) -> dict[str, Any]:
+    """Return what must not depend on how often the work was interrupted."""
+    return {key: value for key, value in result.items() if key not in {"provenance", "sheet", "link"}}
+
+
+def events(server: RunningServer, job: str) -> list[tuple[str, dict[str, Any]]]:
+    found = []
+    with server.client.stream("GET", f"/api/jobs/{job}/events") as stream:
+        assert stream.headers["content-type"].startswith("text/event-stream")
+        assert stream.headers["x-accel-buffering"] == "no"
+        name = ""
+        for line in stream.iter_lines():
+            if line.startswith("event: "):
+                name = line.removeprefix("event: ")
+            elif line.startswith("data: "):
+                found.append((name, json.loads(line.removeprefix("data: "))))
+    return found
+
+
+def test_fifty_requests_are_one_computation(server: RunningServer) -> None:
+    before = server.counts()
+    query = "/api/sweep?spins=60&points=61&to=1.25"
+    limits = httpx.Limits(max_connections=60)
+    with httpx.Client(base_url=server.address, timeout=120.0, limits=limits, trust_env=False) as client:
+        with ThreadPoolExecutor(50) as threads:
+            answers = list(threads.map(lambda _: client.get(query), range(50)))
+    assert {answer.status_code for answer in answers} == {200}
+    assert len({answer.content for answer in answers}) == 1
+    after = server.counts()
+    assert after["jobs_started"] - before["jobs_started"] == 1
+    assert after["points_computed"] - before["points_computed"] == 61
+    assert len(answers[0].json()["series"]["energy"]) == 61
+
+
+def test_opening_pages_computes_nothing(server: RunningServer) -> None:
+    before = server.counts()
+    for address in ("/", "/sweep", "/sweep?spins=33&points=50", "/api/sweep.py?spins=33", "/api/limits"):
+        assert server.client.get(address, headers={"accept": "text/html"}).status_code == 200
+    assert server.client.post("/api/link", json={"spins": "33"}).status_code == 200
+    after = server.counts()
+    assert (after["jobs_started"], after["points_computed"]) == (before["jobs_started"], before["points_computed"])
+
+
+def test_progress_comes_as_events(server: RunningServer) -> None:
+    job = start(server, {"spins": 300, "points": 60, "to": 1.0})
+    seen = events(server, job["id"])
+    names = [name for name, _ in seen]
+    assert names[0] == "snapshot"
+    assert names[-1] == "end"
+    assert set(names[1:-1]) <= {"progress", "heartbeat"}
+    done = [facts["done"] for _, facts in seen if "done" in facts]
+    assert done == sorted(done)
+    assert seen[-1][1]["state"] == "done"
+    assert seen[-1][1]["done"] == seen[-1][1]["total"] == 60
+    # a finished job answers with its end at once
+    assert [name for name, _ in events(server, job["id"])] == ["snapshot", "end"]
+
+
+def test_partial_results_have_gaps_not_guesses(start_server: ServerFactory) -> None:
+    server = start_server("--workers", "1")
+    job = start(server, LONG)
+    server.wait_until(lambda: facts_of(server, job["id"])["done"] > 0)
+    assert server.client.get(f"/api/jobs/{job['id']}/result").status_code == 202
+    result = server.client.get(f"/api/jobs/{job['id']}/result?partial=1").json()
+    assert result["complete"] is False
+    gaps = [energy is None for energy in result["series"]["energy"]]
+    assert any(gaps)
+    assert not all(gaps)
+    assert gaps == [value is None for value in result["limit"]["energy_per_spin"]]
+    answer = server.client.get("/api/sweep?spins=1500&points=120&to=2&wait=0")
+    assert answer.status_code == 202
+    assert answer.json()["job"] == f"api/jobs/{job['id']}"
+    picture = server.client.get(f"/api/jobs/{job['id']}/picture?spins=1500&points=120&to=2&title=x")
+    assert picture.status_code == 200
+    assert picture.json()["complete"] is False
+    other = server.client.get(f"/api/jobs/{job['id']}/picture?spins=15")
+    assert other.status_code == 409
+
+
+@pytest.mark.parametrize("how", ["lease", "everyone"])
+def test_cancelling_stops_the_workers_within_a_second(start_server: ServerFactory, how: str) -> None:
+    server = start_server("--workers", "2")
+    job = start(server, LONG)
+    server.wait_until(lambda: server.counts()["workers_busy"] == 2)
+    second = start(server, LONG)
+    assert second["id"] == job["id"]
+    if how == "lease":
+        server.client.delete(f"/api/jobs/{job['id']}?lease={job['lease']}")
+        assert facts_of(server, job["id"])["state"] in {"queued", "running"}, "another viewer still holds it"
+        server.client.delete(f"/api/jobs/{job['id']}?lease={second['lease']}")
+    else:
+        server.client.delete(f"/api/jobs/{job['id']}?for=everyone")
+    asked = time.monotonic()
+    server.wait_until(lambda: server.counts()["workers_busy"] == 0, 5.0)
+    assert time.monotonic() - asked < 1.0
+    assert facts_of(server, job["id"])["state"] == "cancelled"
+    assert server.counts()["workers_lost"] == 0
+    assert server.client.get(f"/api/jobs/{job['id']}/result").status_code == 409
+    # and the workers are there for the next one
+    assert server.client.get("/api/sweep?spins=3&points=5").status_code == 200
+
+
+def test_cancelled_work_goes_on_where_it_was(start_server: ServerFactory) -> None:
+    server = start_server()
+    sheet = {"spins": 400, "points": 80, "to": 1.5}
+    job = start(server, sheet)
+    server.wait_until(lambda: facts_of(server, job["id"])["done"] >= 8)
+    server.client.delete(f"/api/jobs/{job['id']}?for=everyone")
+    start(server, sheet)
+    result = finish(server, job["id"])
+    assert result["complete"]
+    assert server.counts()["points_computed"] == 80
+    assert server.counts()["jobs_cancelled"] == 1
+
+
+def test_jobs_nobody_holds_are_dropped(start_server: ServerFactory) -> None:
+    server = start_server("--lease", "0.4", "--grace", "0.2", "--workers", "1")
+    job = start(server, LONG)
+    for _ in range(8):
+        time.sleep(0.2)
+        renewed = server.client.post(f"/api/jobs/{job['id']}/leases/{job['lease']}")
+        assert renewed.status_code == 200
+        assert renewed.json()["state"] == "running"
+    server.wait_until(lambda: facts_of(server, job["id"])["state"] == "cancelled", 10.0)
+    gone = server.client.post(f"/api/jobs/{job['id']}/leases/{job['lease']}")
+    assert gone.status_code == 404
+    assert gone.json()["error"]["code"] == "unknown-lease"
+
+
+def test_killed_workers_lose_nothing(start_server: ServerFactory) -> None:
+    sheet = {"spins": 400, "points": 60, "to": 1.5}
+    calm = start_server(data="calm")
+    expected = finish(calm, start(calm, sheet)["id"])
+    server = start_server(data="stormy")
+    job = start(server, sheet)
+    server.wait_until(lambda: server.counts()["chunks_computed"] >= 1)
+    for pid in server.worker_pids():
+        os.kill(pid, signal.SIGKILL)
+    result = finish(server, job["id"])
+    assert numbers(result) == numbers(expected)
+    assert server.counts()["workers_lost"] >= 1
+    assert len(server.worker_pids()) == server.counts()["workers"]
+
+
+def test_what_kills_workers_twice_is_refused(start_server: ServerFactory) -> None:
+    server = start_server("--workers", "1")
+    job = start(server, LONG)
+    over = threading.Event()
+
+    def kill() -> None:
+        while not over.is_set():
+            if server.counts()["workers_busy"]:
+                for pid in server.worker_pids():
+                    os.kill(pid, signal.SIGKILL)
+            time.sleep(0.02)
+
+    killer = threading.Thread(target=kill)
+    killer.start()
+    try:
+        server.wait_until(lambda: facts_of(server, job["id"])["state"] == "failed")
+    finally:
+        over.set()
+        killer.join()
+    again = server.client.post("/api/jobs", json=LONG)
+    assert again.status_code == 500
+    assert again.json()["error"]["code"] == "kills-workers"
+    assert "fewer spins" in again.json()["error"]["message"]
+    # other sheets are computed as before
+    assert server.client.get("/api/sweep?spins=3&points=5").status_code == 200
+
+
+@pytest.mark.parametrize("sign", [signal.SIGKILL, signal.SIGTERM])
+def test_a_restart_resumes_from_finished_chunks(start_server: ServerFactory, sign: int) -> None:
+    sheet = {"spins": 400, "points": 80, "to": 1.5}
+    first = start_server("--workers", "1")
+    job = start(first, sheet)
+    first.wait_until(lambda: first.counts()["chunks_computed"] >= 3)
+    workers = first.worker_pids()
+    ended: list[tuple[str, dict[str, Any]]] = []
+    watcher = threading.Thread(target=lambda: ended.extend(events(first, job["id"])))
+    if sign == signal.SIGTERM:
+        watcher.start()
+        time.sleep(0.3)
+    first.process.send_signal(sign)
+    first.process.wait(15)
+    if sign == signal.SIGTERM:
+        watcher.join(10)
+        assert ended[-1] == ("end", ended[-1][1] | {"state": "restarting"})
+    first.stop()
+    first.wait_until(lambda: not any(os.path.exists(f"/proc/{pid}") for pid in workers), 5.0)  # noqa: PTH110
+    second = start_server("--workers", "1")
+    assert second.client.get(f"/api/jobs/{job['id']}").status_code == 404
+    assert start(second, sheet)["id"] == job["id"]
+    result = finish(second, job["id"])
+    counts = second.counts()
+    assert counts["chunks_found"] >= 2
+    assert 0 < counts["points_computed"] < 80
+    calm = start_server("--workers", "2", data="calm")
+    assert numbers(result) == numbers(finish(calm, start(calm, sheet)["id"]))
+    # a third time everything is there
+    second.stop()
+    third = start_server("--workers", "1")
+    assert start(third, sheet)["state"] == "done"
+    assert third.counts()["points_computed"] == 0
+    assert finish(third, job["id"]) == result
+
+
+def test_the_queue_is_bounded(start_server: ServerFactory) -> None:
+    server = start_server("--workers", "1", "--queue", "3")
+    for spins in (1500, 1501, 1502):
+        start(server, LONG | {"spins": spins})
+    refused = server.client.post("/api/jobs", json=LONG | {"spins": 1503})
+    assert refused.status_code == 503
+    assert refused.headers["retry-after"]
+    assert refused.json()["error"]["code"] == "queue-full"
+    # joining what runs already is no new work
+    start(server, LONG | {"spins": 1501})
+
+
+def test_small_sheets_do_not_wait_for_large_ones(start_server: ServerFactory) -> None:
+    server = start_server("--workers", "1")
+    large = start(server, LONG)
+    server.wait_until(lambda: server.counts()["workers_busy"] == 1)
+    answer = server.client.get("/api/sweep?spins=4&points=11&wait=60")
+    assert answer.status_code == 200
+    assert facts_of(server, large["id"])["state"] == "running"
+
+
+def test_expensive_sheets_are_refused_before_they_run(start_server: ServerFactory) -> None:
+    server = start_server("--ceiling", "0.5")
+    for answer in (
+        server.client.get("/api/sweep?spins=2000&points=500"),
+        server.client.post("/api/jobs", json={"spins": 2000, "points": 500}),
+    ):
+        assert answer.status_code == 422
+        error = answer.json()["error"]
+        assert (error["code"], error["field"]) == ("too-expensive", "points")
+        assert "fewer points" in error["message"]
+    assert server.counts()["points_computed"] == 0
+    assert server.client.get("/api/sweep?spins=2&points=5").status_code == 200
+
+
+def test_unknown_jobs(server: RunningServer) -> None:
+    for answer in (
+        server.client.get("/api/jobs/none"),
+        server.client.get("/api/jobs/none/events"),
+        server.client.get("/api/jobs/none/result"),
+        server.client.get("/api/jobs/none/picture"),
+        server.client.delete("/api/jobs/none?for=everyone"),
+        server.client.post("/api/jobs/none/leases/x"),
+    ):
+        assert answer.status_code == 404
+        assert answer.json()["error"]["code"] == "unknown-job"
+
+
+def test_first_picture_and_whole_sweep_come_soon(server: RunningServer) -> None:
+    """Liveness only: the figures are in the report of the run, generous limits catch what hangs."""
+    started = time.monotonic()
+    job = start(server, {"title": "soon", "bias": 0.0, "spins": 21})
+    server.wait_until(lambda: facts_of(server, job["id"])["done"] > 0, 20.0)
+    first = time.monotonic() - started
+    finish(server, job["id"])
+    print(f"first points after {first:.3f} s, all after {time.monotonic() - started:.3f} s")
