@@ -1,0 +1,49 @@
+"""Certified ground states and low levels of N spins coupled to one bosonic mode."""
+
+from __future__ import annotations
+
+import hashlib
+from pathlib import Path
+
+from solver.effective_spin import effective_spin_levels
+from solver.errors import ConvergenceError, ModelError, QuestionError, SolverError
+from solver.model import LARGEST_SPINS, CollectiveModel
+from solver.observables import REGISTRY, Observable
+from solver.point import PointAnswer, PointQuestion, answer_point
+from solver.sweep import SERIES, SeriesSpec, predicted_bytes, predicted_seconds, solve_chain
+from solver.thermodynamic import LargeNLimit, large_n_limit
+
+
+def _digest_of_source() -> str:
+    """Hash of every module of this package: results of different sources never mix."""
+    total = hashlib.sha256()
+    for path in sorted(Path(__file__).parent.glob("*.py")):
+        total.update(path.name.encode())
+        total.update(path.read_bytes())
+    return total.hexdigest()
+
+
+SOLVER_DIGEST = _digest_of_source()
+
+__all__ = [
+    "LARGEST_SPINS",
+    "REGISTRY",
+    "SERIES",
+    "SOLVER_DIGEST",
+    "CollectiveModel",
+    "ConvergenceError",
+    "LargeNLimit",
+    "ModelError",
+    "Observable",
+    "PointAnswer",
+    "PointQuestion",
+    "QuestionError",
+    "SeriesSpec",
+    "SolverError",
+    "answer_point",
+    "effective_spin_levels",
+    "large_n_limit",
+    "predicted_bytes",
+    "predicted_seconds",
+    "solve_chain",
+]

@@ -1,0 +1,71 @@
+"""How many quanta a calculation in the number basis must carry, from one converged solve.
+
+The states cut at M span a trial space of the calculation truncated at M. Its levels lie no
+higher than the generalised eigenvalues of the projected states, where
+
+    <psi_i P_M| H |P_M psi_j> = E_j S_ij - <psi_i, layer M| H |psi_j, layer M+1>,
+    S_ij = sum over n <= M of <psi_i, layer n|psi_j, layer n>,
+
+so a cutoff read off from there is never too small.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+from numpy.typing import NDArray
+
+from solver.layers import LayerProfile
+
+Array = NDArray[np.float64]
+
+
+def truncation_errors(profile: LayerProfile, energies: Array, cutoff: int) -> Array:
+    """Upper bounds on the error of each of q levels in a calculation with n <= cutoff.
+
+    energies (q,): the converged levels. Infinite where the cut leaves fewer than q states.
+    """
+    kept = profile.overlaps[: cutoff + 1].sum(axis=0)
+    if cutoff + 1 >= len(profile.links):
+        return np.zeros_like(energies)
+    link = profile.links[cutoff]
+    # (E_j - E_0) S_ij keeps the digits that E_j S_ij would lose against a deep ground level
+    excess = energies - energies[0]
+    matrix = 0.5 * kept * (excess[None, :] + excess[:, None]) - 0.5 * (link + link.T)
+    scale, turn = np.linalg.eigh(kept)
+    if scale[0] < 1e-13:
+        return np.full_like(energies, np.inf)
+    whiten = turn / np.sqrt(scale)
+    values = np.linalg.eigvalsh(whiten.T @ matrix @ whiten)
+    out: Array = np.maximum(values - excess, 0.0)
+    return out
+
+
+def weight_above(profile: LayerProfile) -> Array:
+    """Largest weight, over the states, in layers above M; shape (L,) for M = 0..L-1."""
+    weights = np.einsum("nii->ni", profile.overlaps)
+    above = np.cumsum(weights[::-1], axis=0)[::-1]
+    tails = np.zeros(len(weights))
+    tails[:-1] = above[1:].max(axis=1)
+    return tails
+
+
+def needed_cutoff(profile: LayerProfile, energies: Array, need: float, tail: float) -> int:
+    """Smallest M with every level within `need` and no state with more than `tail` above M."""
+    tails = weight_above(profile)
+    low = int(np.argmax(tails <= tail))
+    if _enough(profile, energies, low, need):
+        return low
+    high = low + 1
+    while not _enough(profile, energies, high, need):
+        low, high = high, high + 2 * (high - low)
+    while high - low > 1:
+        middle = (low + high) // 2
+        if _enough(profile, energies, middle, need):
+            high = middle
+        else:
+            low = middle
+    return high
+
+
+def _enough(profile: LayerProfile, energies: Array, cutoff: int, need: float) -> bool:
+    return bool(np.all(truncation_errors(profile, energies, cutoff) <= need))

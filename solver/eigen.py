@@ -1,0 +1,215 @@
+"""Lowest eigenpairs of a positive definite banded matrix, and how many lie below a line.
+
+Krylov iteration on the inverse (one banded Cholesky factor, few solves): the shift sits just
+below a rigorous floor of the spectrum, so the wanted states dominate the inverse. One starting
+vector is enough for distinct levels; when a count by inertia says that a level was missed
+(exactly degenerate states), a block as wide as the wanted set finds it.
+
+Sources: Ericsson, Ruhe, Math. Comp. 35, 1251 (1980), for the inverse; Golub, Underwood,
+Mathematical Software III, 361 (1977), for blocks; Bunch, Kaufman, Math. Comp. 31, 163 (1977),
+for inertia.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.linalg.lapack import dpbtrf, dpbtrs, dpotrf, dpotrs, dstevd, dsytrf, dsytrs
+
+from solver.errors import ConvergenceError
+
+Array = NDArray[np.float64]
+
+_DENSE_BELOW = 40
+_LONGEST_KRYLOV = 120
+_LONGEST_BLOCK = 40
+_LOOSE = 1e-3
+
+
+@dataclass(frozen=True, slots=True)
+class Subspace:
+    """Approximate lowest eigenvectors, orthonormal rows (q, dimension), with their values."""
+
+    values: Array
+    vectors: Array
+
+
+def dense_from_band(band: Array) -> Array:
+    """Full symmetric matrix from lower banded storage (half_width+1, n)."""
+    width, size = band.shape
+    full = np.zeros((size, size))
+    for k in range(min(width, size)):
+        at = np.arange(size - k)
+        full[at + k, at] = band[k, : size - k]
+        full[at, at + k] = band[k, : size - k]
+    return full
+
+
+def lowest_of_band(
+    band: Array,
+    count: int,
+    guards: int,
+    start: Array | None,
+    accuracy: float,
+    blockwise: bool = False,
+) -> Subspace:
+    """The count + guards lowest eigenpairs of a positive definite banded matrix.
+
+    band: lower banded storage (half_width+1, n), column-major. start: rows to begin from, or
+    None. accuracy: residual norm relative to the eigenvalue aimed at for the first `count`;
+    guards are only located. blockwise: resolve exactly degenerate levels too. Raises
+    ConvergenceError when the matrix is not positive definite.
+    """
+    size = band.shape[1]
+    wanted = min(size, count + guards)
+    if size <= max(_DENSE_BELOW, 2 * wanted):
+        values, columns = np.linalg.eigh(dense_from_band(band))
+        return Subspace(values[:wanted], np.ascontiguousarray(columns[:, :wanted].T))
+    factor, info = dpbtrf(band, lower=1)
+    if info != 0:
+        raise ConvergenceError("shift", int(info), "a shift below the spectrum")
+    if blockwise:
+        return _block_krylov(factor, size, wanted, start, accuracy)
+    return _krylov(factor, size, count, wanted, start, accuracy)
+
+
+def _krylov(
+    factor: Array, size: int, count: int, wanted: int, start: Array | None, accuracy: float
+) -> Subspace:
+    """Lanczos on the inverse with full reorthogonalisation."""
+    longest = min(_LONGEST_KRYLOV, size - 1)
+    basis = np.empty((longest + 1, size))
+    vector = _starting_rows(size, 1, None if start is None else start.sum(axis=0)[None])[0]
+    basis[0] = vector / np.linalg.norm(vector)
+    along, beside = np.zeros(longest), np.zeros(longest)
+    goal = np.full(wanted, _LOOSE)
+    goal[:count] = accuracy
+    check = min(longest, wanted + 5)
+    for step in range(longest):
+        image, _ = dpbtrs(factor, basis[step], lower=1)
+        known = basis[: step + 1]
+        overlap = known @ image
+        image -= overlap @ known
+        again = known @ image
+        image -= again @ known
+        along[step] = overlap[step] + again[step]
+        beside[step] = np.sqrt(image @ image)
+        if beside[step] < 1e-14 * along[0]:
+            check = step + 1
+        else:
+            basis[step + 1] = image / beside[step]
+        if step + 1 == check or step + 1 == longest:
+            values, weights, _ = dstevd(along[: step + 1], beside[: max(step, 1)])
+            top = slice(None, -wanted - 1, -1)
+            left = beside[step] * np.abs(weights[-1, top]) / values[top]
+            if step + 1 == longest or beside[step] < 1e-14 * along[0] or np.all(left < goal):
+                break
+            check += 3
+    used = step + 1
+    chosen = weights[:, top]
+    # one inverse step more costs nothing: the images are known from the recurrence
+    mixed = (chosen * values[top]).T
+    improved = mixed @ basis[:used]
+    if beside[step] >= 1e-14 * along[0]:
+        improved += (beside[step] * chosen[-1])[:, None] * basis[used]
+    rows = np.linalg.qr(improved.T)[0].T
+    return Subspace(1.0 / values[top], np.ascontiguousarray(rows))
+
+
+def _block_krylov(factor: Array, size: int, count: int, start: Array | None, accuracy: float) -> Subspace:
+    """Rayleigh-Ritz for the inverse on the block Krylov space of `start`."""
+    width = count
+    steps = max(2, min(_LONGEST_BLOCK, size // width - 1))
+    basis = np.empty((size, width * (steps + 1)), order="F")
+    images = np.empty((size, width * steps), order="F")
+    projected = np.zeros((width * steps, width * steps))
+    basis[:, :width] = np.linalg.qr(_starting_rows(size, width, start).T)[0]
+    used = 0
+    for step in range(steps):
+        here = slice(used, used + width)
+        image, _ = dpbtrs(factor, basis[:, here], lower=1)
+        images[:, here] = image
+        used += width
+        known = basis[:, :used]
+        overlap = known.T @ image
+        projected[:used, here] = overlap
+        projected[here, :used] = overlap.T
+        values, weights = np.linalg.eigh(projected[:used, :used])
+        rest = image - known @ overlap
+        rest -= known @ (known.T @ rest)
+        following, beyond = np.linalg.qr(rest)
+        leading = weights[here.start :, : -count - 1 : -1]
+        residual = np.linalg.norm(beyond @ leading, axis=0) / values[: -count - 1 : -1]
+        if (step > 0 and np.all(residual < accuracy)) or step + 1 == steps:
+            break
+        basis[:, used : used + width] = following
+    improved = images[:, :used] @ weights[:, : -count - 1 : -1]
+    rows = np.linalg.qr(improved)[0].T
+    return Subspace(1.0 / values[: -count - 1 : -1], np.ascontiguousarray(rows))
+
+
+def _starting_rows(size: int, width: int, start: Array | None) -> Array:
+    """Rows to begin with: what is known, plus a little fixed pseudo-noise in every direction."""
+    rows = np.random.default_rng(size).standard_normal((width, size)) / np.sqrt(size)
+    if start is not None and start.shape[0]:
+        known = start[:width]
+        rows *= 1e-3
+        rows[: known.shape[0]] += known
+    return rows
+
+
+def block_pairs(band: Array, block: int) -> Iterator[tuple[Array, Array | None]]:
+    """Cut a banded matrix into block tridiagonal form: (diagonal block, block below it).
+
+    block: rows per block, such that no entry reaches past the next block.
+    """
+    width, size = band.shape
+    rows = np.arange(block)
+    lower = rows[:, None] - rows[None, :]
+    for first in range(0, size, block):
+        here = min(block, size - first)
+        columns = first + rows[:here]
+        offset = lower[:here, :here]
+        diagonal = band[np.clip(offset, 0, width - 1), columns[None, :]]
+        diagonal = np.where((offset >= 0) & (offset < width), diagonal, 0.0)
+        following = min(block, size - first - here)
+        if following <= 0:
+            yield diagonal, None
+            return
+        reach = here + lower[:following, :here] if following <= here else None
+        assert reach is not None
+        below = band[np.clip(reach, 0, width - 1), columns[None, :]]
+        yield diagonal, np.where((reach >= 0) & (reach < width), below, 0.0)
+
+
+def count_below_zero(band: Array, block: int) -> int:
+    """Number of negative eigenvalues of a symmetric banded matrix, by block elimination.
+
+    Sylvester's law: the inertia is the sum over the Schur complements met on the way.
+    """
+    negative = 0
+    carried: Array | None = None
+    for diagonal, below in block_pairs(band, block):
+        pivot = diagonal if carried is None else diagonal - carried
+        factor, info = dpotrf(pivot, lower=1, clean=0)
+        if info == 0:
+            if below is not None:
+                solved, _ = dpotrs(factor, below.T, lower=1)
+                carried = below @ solved
+            continue
+        factor, exchanged, _ = dsytrf(pivot, lower=1)
+        negative += _negative_pivots(factor, exchanged)
+        if below is not None:
+            solved, _ = dsytrs(factor, exchanged, below.T, lower=1)
+            carried = below @ solved
+    return negative
+
+
+def _negative_pivots(factor: Array, exchanged: NDArray[np.int32]) -> int:
+    """Negative eigenvalues of the block diagonal factor: every 2 x 2 pivot has exactly one."""
+    single = exchanged >= 0 if exchanged.min() == 0 else exchanged > 0
+    pivots = np.diagonal(factor)
+    return int(np.sum(pivots[single] < 0.0)) + int(np.sum(~single)) // 2

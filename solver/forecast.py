@@ -1,0 +1,83 @@
+"""What a question will need before it is asked: cutoffs, basis, time and memory.
+
+The forms follow the physics (mean quanta and their spread in the number basis; displacement and
+kinetic coupling in the displaced one), the constants were fitted to solved models. A poor
+forecast costs time, never correctness: the search goes on until the bounds hold.
+"""
+
+from __future__ import annotations
+
+import math
+
+from solver.blocks import BasisName
+from solver.model import CollectiveModel
+
+# seconds per floating point operation in the banded kernels, and fixed cost per sector
+_SECONDS_PER_OPERATION = 1.0e-9
+_SECONDS_PER_SECTOR = 1.5e-3
+_SECONDS_PER_BLOCK = 4.0e-5
+_SOLVES = 28.0
+
+
+def classical_quanta(model: CollectiveModel) -> float:
+    """Boson number of the classical ground state, (t/2w)^2 N (1 - (w w0/t^2)^2)."""
+    pull = max(abs(model.total_coupling), abs(model.coupling_difference)) ** 2 / model.mode
+    field = abs(model.splitting)
+    if pull == 0.0 or (pull <= field and model.bias == 0.0):
+        return 0.0
+    tilt = min(1.0, field / pull) if model.bias == 0.0 else 0.0
+    return model.spins * pull / (4.0 * model.mode) * (1.0 - tilt * tilt)
+
+
+def first_cutoff(model: CollectiveModel, basis: BasisName, levels: int) -> int:
+    """Cutoff to begin with, for `levels` levels at a tolerance near 1e-9 of the mode."""
+    share = levels if not model.conserves_parity else levels // 2 + 1
+    pull = max(abs(model.total_coupling), abs(model.coupling_difference)) ** 2 / model.mode
+    if basis == "fock":
+        mean = classical_quanta(model)
+        softness = min(1.0, pull / (abs(model.splitting) + abs(model.bias) + 1e-300))
+        spread = math.sqrt(mean + softness**2 * (1.0 + model.spins ** (1.0 / 3.0)))
+        return int(share + 7 + mean + (6.0 + 0.5 * share) * spread)
+    gap = abs(model.displacement_per_quantum)
+    kinetic = max(abs(model.splitting), abs(model.coupling_difference)) / model.mode
+    return int(share + 7 + 22.0 * gap * max(1.0, kinetic) ** 0.8 + (2.0 + gap) * min(kinetic, 2.0))
+
+
+def _operations(model: CollectiveModel, cutoff: int, half_width: int, dimension: float) -> float:
+    return dimension * half_width * (half_width + 4.0 * _SOLVES)
+
+
+def predicted_cost(model: CollectiveModel, basis: BasisName, levels: int) -> float:
+    """Seconds on one core for all sectors of one model, started cold."""
+    size, cutoff = model.spins, first_cutoff(model, basis, levels)
+    folded = model.conserves_parity
+    sectors = 2 if folded else 1
+    if basis == "fock":
+        half_width = size // 2 + 1 if folded else size + 2
+        dimension = (cutoff + 1.0) * (size + 1.0) / sectors
+        counted = 2.5 * cutoff
+    else:
+        half_width = 2 * cutoff + 1
+        dimension = (cutoff + 1.0) * (size + 1.0) / sectors
+        counted = (size + 1.0) / sectors
+    work = _operations(model, cutoff, half_width, dimension) * _SECONDS_PER_OPERATION
+    inner = min(half_width, cutoff + 1) if basis == "shifted" else half_width
+    count = counted * (_SECONDS_PER_BLOCK + 3.0 * inner**3 * _SECONDS_PER_OPERATION)
+    return sectors * (_SECONDS_PER_SECTOR + work + count)
+
+
+def cheaper_basis(model: CollectiveModel, levels: int) -> BasisName:
+    """The basis expected to take less time."""
+    if model.spins == 1:
+        return "fock"
+    if abs(model.coupling_difference) > abs(model.total_coupling):
+        return "fock"
+    fock, shifted = (predicted_cost(model, basis, levels) for basis in ("fock", "shifted"))
+    return "fock" if fock < shifted else "shifted"
+
+
+def predicted_dimension(model: CollectiveModel, levels: int) -> float:
+    """Basis states per sector in the cheaper basis."""
+    cutoff = first_cutoff(model, cheaper_basis(model, levels), levels)
+    sectors = 2 if model.conserves_parity else 1
+    return (cutoff + 1.0) * (model.spins + 1.0) / sectors

@@ -1,0 +1,309 @@
+"""The lowest levels of a model, over all symmetry sectors, each with a two-sided bound.
+
+The cutoff of every sector grows until each requested level is known to `tolerance`. Completeness
+is part of the claim: a count by inertia proves that no level was overlooked.
+"""
+
+from __future__ import annotations
+
+import math
+import operator
+from collections.abc import Callable
+from dataclasses import dataclass, field
+from typing import Literal
+
+import numpy as np
+from numpy.typing import NDArray
+
+from solver.blocks import BasisName, Block
+from solver.bounds import RitzSet, lower_bounds, ritz_set
+from solver.certificate import counting_cutoffs, levels_below
+from solver.errors import ConvergenceError
+from solver.floor import Floors
+from solver.fock_basis import FockBlock
+from solver.forecast import first_cutoff
+from solver.model import CollectiveModel
+from solver.shifted_basis import LadderCoupling, ShiftedBlock
+
+Array = NDArray[np.float64]
+Status = Literal["bracketed", "estimated", "exact"]
+
+LARGEST_DIMENSION = 4_000_000
+_MOST_ROUNDS = 24
+_GUARDS = 1
+
+
+@dataclass(frozen=True, slots=True)
+class Level:
+    """One level: upper and lower bound, its sector, its place in the sector, and the claim."""
+
+    upper: float
+    lower: float
+    parity: int
+    place: int
+    status: Status
+
+
+@dataclass(slots=True)
+class Spectrum:
+    """The lowest levels of a model and the vectors behind them.
+
+    levels: ascending by energy, over all sectors. sectors: per parity the Ritz set, lower bounds
+    of its certified levels, and `line`, below which the sector holds no more than those.
+    """
+
+    levels: tuple[Level, ...]
+    sectors: dict[int, SectorLevels]
+    basis: BasisName
+    cutoff: int
+    next_cutoff: int
+    met: bool
+    floors: Floors
+
+    def as_start(self) -> Start:
+        """What a neighbouring point can begin from."""
+        counts = {
+            parity: max(1, sum(level.parity == parity for level in self.levels)) for parity in self.sectors
+        }
+        sets = {parity: sector.ritz for parity, sector in self.sectors.items()}
+        return Start(self.basis, self.next_cutoff, counts, sets)
+
+
+@dataclass(frozen=True, slots=True)
+class SectorLevels:
+    """Certified content of one sector: no more than len(lower) levels lie below `line`."""
+
+    ritz: RitzSet
+    lower: Array
+    line: float
+    certified: bool
+
+
+@dataclass(slots=True)
+class Start:
+    """What a solved neighbour offers: cutoff and vectors per parity, and how many to ask for."""
+
+    basis: BasisName
+    cutoff: int
+    counts: dict[int, int] = field(default_factory=dict)
+    sets: dict[int, RitzSet] = field(default_factory=dict)
+
+
+def sector_builder(
+    model: CollectiveModel, basis: BasisName, cutoff: int, shift: float
+) -> Callable[[int], Block]:
+    """Function making the block of a given parity; what the parities share is made once."""
+    if basis == "fock":
+        return lambda parity: FockBlock(model, parity, cutoff, shift)
+    coupling = LadderCoupling(model, cutoff)
+    return lambda parity: ShiftedBlock(model, parity, cutoff, shift, coupling)
+
+
+def lowest_levels(
+    model: CollectiveModel,
+    count: int,
+    tolerance: float,
+    basis: BasisName,
+    start: Start | None = None,
+    floors: Floors | None = None,
+    state_accuracy: float = 1e-7,
+) -> Spectrum:
+    """The `count` lowest levels of the model to `tolerance` (unit of the model).
+
+    basis: "fock" or "shifted". state_accuracy: wanted bound on the angle between computed and
+    exact ground state. If rounding stands in the way, `met` is False and the bounds say what was
+    reached. Raises ConvergenceError when the dimension passes LARGEST_DIMENSION.
+    """
+    floors = floors or Floors(model)
+    shift = floors.ground - 0.05 * model.mode
+    parities = (1, -1) if model.conserves_parity else (0,)
+    search = _Search(model, count, tolerance, state_accuracy, basis, floors, shift, parities)
+    if start is not None and start.basis == basis:
+        search.adopt(start)
+    return search.run()
+
+
+class _Search:
+    """Grow cutoff and level counts until every requested level is bracketed to tolerance."""
+
+    def __init__(
+        self,
+        model: CollectiveModel,
+        count: int,
+        tolerance: float,
+        state_accuracy: float,
+        basis: BasisName,
+        floors: Floors,
+        shift: float,
+        parities: tuple[int, ...],
+    ) -> None:
+        self.model, self.count, self.tolerance = model, count, tolerance
+        self.state_accuracy, self.basis, self.floors = state_accuracy, basis, floors
+        self.shift, self.parities = shift, parities
+        share = count if len(parities) == 1 else count // 2 + 1
+        self.counts = dict.fromkeys(parities, share)
+        self.starts: dict[int, RitzSet] = {}
+        self.cutoff = first_cutoff(model, basis, count)
+        self.guards = _GUARDS
+        self.blockwise = False
+        # residual^2 / gap is the energy error: this aims well below the tolerance
+        self.accuracy = min(1e-6, 0.03 * math.sqrt(tolerance / model.mode))
+
+    def adopt(self, start: Start) -> None:
+        self.cutoff = start.cutoff
+        for parity in self.parities:
+            if parity in start.counts:
+                self.counts[parity] = start.counts[parity]
+                self.starts[parity] = start.sets[parity]
+
+    def run(self) -> Spectrum:
+        spectrum: Spectrum | None = None
+        for _ in range(_MOST_ROUNDS):
+            sets = self._solve()
+            if not self._complete(sets):
+                continue
+            line = self._line(sets)
+            certified = self._certified(sets, line)
+            if certified is None:
+                continue
+            spectrum = self._spectrum(sets, line, certified)
+            if spectrum.met or not self._grow(spectrum):
+                return spectrum
+        if spectrum is None:
+            raise ConvergenceError("levels", self.count, "fewer levels, or a wider tolerance")
+        return spectrum
+
+    def _solve(self) -> dict[int, RitzSet]:
+        build = sector_builder(self.model, self.basis, self.cutoff, self.shift)
+        sets = {}
+        for parity in self.parities:
+            block = build(parity)
+            if block.dimension > LARGEST_DIMENSION:
+                raise ConvergenceError(
+                    "cutoff",
+                    self.cutoff,
+                    f"at most {LARGEST_DIMENSION} basis states per sector; "
+                    "ask for less coupling, fewer spins or a wider tolerance",
+                )
+            known = self.starts.get(parity)
+            if known is None and self.starts:
+                known = _mirrored(next(iter(self.starts.values())), block)
+            first = None if known is None else known.block.embed(known.vectors, block)
+            wanted = min(self.counts[parity], block.dimension)
+            sets[parity] = ritz_set(block, wanted, self.guards, first, self.accuracy, self.blockwise)
+            self.starts[parity] = sets[parity]
+        return sets
+
+    def _complete(self, sets: dict[int, RitzSet]) -> bool:
+        """Every sector reaches past the last wanted level; else ask for more and try again."""
+        merged = np.sort(np.concatenate([found.energies for found in sets.values()]))
+        reach = self._reach(sets)
+        if merged.size <= reach:
+            self.cutoff += 2
+            self.counts = dict.fromkeys(self.parities, reach)
+            return False
+        last = merged[reach - 1]
+        fine = True
+        for parity, found in sets.items():
+            if found.energies[-1] <= last:
+                if found.energies.size >= found.block.dimension:
+                    self.cutoff += 2
+                self.counts[parity] = int(np.sum(found.energies <= last)) + 1
+                fine = False
+            elif np.sum(found.energies <= last) > self.counts[parity]:
+                self.counts[parity] = int(np.sum(found.energies <= last))
+                fine = False
+        return fine
+
+    def _reach(self, sets: dict[int, RitzSet]) -> int:
+        """How many of the merged levels must be certified: the asked ones and both gaps."""
+        pairs = sorted((float(energy), parity) for parity, found in sets.items() for energy in found.energies)
+        again = [at for at, pair in enumerate(pairs) if pair[1] == pairs[0][1]]
+        second = again[1] + 1 if len(again) > 1 else len(pairs)
+        return max(self.count, 2, second)
+
+    def _line(self, sets: dict[int, RitzSet]) -> float:
+        """Energy at which levels are counted: in the widest gap above the last wanted level."""
+        merged = np.sort(np.concatenate([found.energies for found in sets.values()]))
+        top = min(found.energies[-1] for found in sets.values())
+        usable = merged[(merged <= top)]
+        reach = self._reach(sets)
+        lower, upper = usable[reach - 1 : -1], usable[reach:]
+        at = int(np.argmax(upper - lower))
+        return float(lower[at] + 0.6 * (upper[at] - lower[at]))
+
+    def _certified(self, sets: dict[int, RitzSet], line: float) -> bool | None:
+        """Whether the count below `line` is proven; None when the search must go on."""
+        expected = [int(np.sum(found.energies < line)) for found in sets.values()]
+        for cutoff in counting_cutoffs(self.model, self.basis, self.cutoff, line, self.floors):
+            counted = levels_below(self.model, self.parities, line, self.floors, self.basis, cutoff)
+            if counted is not None and all(map(operator.le, counted, expected)):
+                return True
+        # either a degenerate level was missed or the trial vectors are still too coarse
+        self.cutoff += 2
+        self.guards += int(self.blockwise)
+        self.blockwise = True
+        return None
+
+    def _spectrum(self, sets: dict[int, RitzSet], line: float, certified: bool) -> Spectrum:
+        status: Status = "bracketed" if certified else "estimated"
+        sectors, rows = {}, []
+        for parity, found in sets.items():
+            inside = int(np.sum(found.energies < line))
+            low = lower_bounds(found.energies[:inside], found.residuals[:inside, :inside], line)
+            sectors[parity] = SectorLevels(found, low - found.roundoff[:inside], line, certified)
+            for place in range(inside):
+                upper = float(found.energies[place] + found.roundoff[place])
+                lower = float(low[place] - found.roundoff[place])
+                rows.append(Level(upper, lower, parity, place, status))
+        levels = tuple(_ordered(rows)[: self._reach(sets)])
+        met = self._met(levels, sectors)
+        return Spectrum(levels, sectors, self.basis, self.cutoff, self.cutoff, met, self.floors)
+
+    def _met(self, levels: tuple[Level, ...], sectors: dict[int, SectorLevels]) -> bool:
+        if any(level.upper - level.lower > self.tolerance for level in levels):
+            return False
+        return True
+
+    def _grow(self, spectrum: Spectrum) -> bool:
+        """Raise the cutoff by what the decay of the layers suggests; False when rounding limits."""
+        roundoff = max(2.0 * float(sector.ritz.roundoff.max()) for sector in spectrum.sectors.values())
+        width = max(level.upper - level.lower for level in spectrum.levels)
+        if width - roundoff < 0.05 * roundoff or self.tolerance <= roundoff and width < 4 * roundoff:
+            return False
+        decades = math.log10(width / max(self.tolerance, 1e-300))
+        slope = min(_decay(sector.ritz) for sector in spectrum.sectors.values())
+        self.cutoff += max(1, int(math.ceil(0.9 * decades / slope)))
+        return True
+
+
+def _ordered(levels: list[Level]) -> list[Level]:
+    """Ascending in energy; levels closer than their rounding are listed even parity first."""
+    levels.sort(key=lambda level: level.upper)
+    for at in range(1, len(levels)):
+        first, second = levels[at - 1], levels[at]
+        if second.lower < first.upper and second.parity > first.parity:
+            levels[at - 1], levels[at] = second, first
+    return levels
+
+
+def _decay(found: RitzSet) -> float:
+    """Decades of weight lost per layer near the cutoff, of the slowest wanted state."""
+    weights = found.block.layer_weights(found.vectors[:-1] if len(found.vectors) > 1 else found.vectors)
+    span = min(4, weights.shape[1] - 1)
+    if span < 1:
+        return 0.5
+    last = np.maximum(weights[:, -2:].max(axis=1), 1e-40)
+    earlier = np.maximum(weights[:, -2 - span : -span].max(axis=1), 1e-40)
+    return float(np.clip(np.min(np.log10(earlier / last)) / span, 0.15, 3.0))
+
+
+def _mirrored(known: RitzSet, block: Block) -> RitzSet | None:
+    """Vectors of the other parity as a start: above the transition they differ only in sign."""
+    other = known.block
+    if not isinstance(other, ShiftedBlock) or not isinstance(block, ShiftedBlock):
+        return None
+    if other.cutoff != block.cutoff:
+        return None
+    moved = block.flatten(other.ladders(known.vectors))
+    return RitzSet(block, known.energies, moved, known.residuals, known.leaked, known.roundoff)
