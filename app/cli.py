@@ -132,6 +132,9 @@ def _compute(link: str, out: Path, workers: int) -> int:
     if workers < 1:
         print("softmode: --workers must be at least 1", file=sys.stderr)
         return MISUSED
+    if not out.parent.is_dir():
+        print(f"softmode: there is no directory {out.parent}", file=sys.stderr)
+        return MISUSED
     sheet = links.parse_link(link)
     check_price(make(sheet), float("inf"), Settings().memory_ceiling)
     result = compute_sheet(sheet, workers, _show_progress)

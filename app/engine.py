@@ -258,7 +258,15 @@ class Engine:
             self._take(job, chunk, outcome)
         elif outcome.kind == "stopped" and job.is_active:
             job.waiting.appendleft(chunk)  # cancelled and asked for again before the stop took effect
-        elif outcome.kind == "error" and outcome.error is not None:
+        elif outcome.kind == "broken":
+            logger.error("computing chunk %d of %s failed:\n%s", chunk.number, job.sheet, outcome.trace)
+            self._fail(
+                job,
+                JobFailedError(
+                    "internal", "the solver failed at a point of this sheet; the server's log says why"
+                ),
+            )
+        elif outcome.kind == "refused" and outcome.error is not None:
             self._fail(job, SheetError("not-solvable", **outcome.error))
         elif outcome.kind == "lost" and not self.restarting:
             self._fail(

@@ -144,7 +144,11 @@ def _plain(value: Any) -> Any:
     if value is None or isinstance(value, bool):
         return value
     if isinstance(value, int):
-        return value if abs(value) < 2**53 else _plain(f"{value:.6e}" if abs(value) < 10**300 else "a huge number")
+        return (
+            value
+            if abs(value) < 2**53
+            else _plain(f"{value:.6e}" if abs(value) < 10**300 else "a huge number")
+        )
     if isinstance(value, float):
         return value if abs(value) < float("inf") else str(value)
     if isinstance(value, list | tuple):

@@ -48,6 +48,8 @@ def compute_sheet(sheet: Sheet, workers: int, progress: Progress) -> dict[str, A
             chunk, outcome = landed.get()
             if outcome.error is not None:
                 raise SheetError("not-solvable", **outcome.error)
+            if outcome.kind == "broken":
+                raise JobFailedError("internal", f"the solver failed at a point:\n{outcome.trace}")
             if outcome.kind != "done":
                 raise JobFailedError(
                     "kills-workers",

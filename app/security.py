@@ -26,6 +26,7 @@ logger = logging.getLogger(__name__)
 COOKIE = "softmode"
 SESSION_SECONDS = 30 * 24 * 3600
 FAILED_LOGIN_SECONDS = 0.5
+LARGEST_HEADERS = 32 * 1024
 SAFE_METHODS = frozenset({"GET", "HEAD", "OPTIONS"})
 OPEN_PATHS = frozenset({"/login", "/health"})
 
@@ -170,6 +171,16 @@ class Guard:
             )
 
     def _check_size(self, request: Request) -> None:
+        headers = sum(len(name) + len(value) for name, value in request.scope["headers"])
+        if headers > LARGEST_HEADERS:
+            raise RequestError(
+                "headers-too-large",
+                "the headers are too large; clear this site's cookies if a browser sent them",
+                "headers",
+                headers,
+                f"at most {LARGEST_HEADERS} bytes",
+                status=431,
+            )
         text = request.headers.get("content-length", "0")
         if not text.isdigit():
             raise RequestError(

@@ -6,6 +6,7 @@ chunk is tried once more; a chunk that kills two processes is given up.
 """
 
 import contextlib
+import json
 import logging
 import multiprocessing
 import os
@@ -13,6 +14,7 @@ import queue
 import signal
 import threading
 import time
+import traceback
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
 from multiprocessing.connection import Connection, wait
@@ -42,14 +44,16 @@ START_SECONDS = 60.0
 class Outcome:
     """How a chunk ended.
 
-    `kind` is "done", "stopped" (cancelled half-way), "error" (the solver refused) or "lost" (killed two
-    processes); `rows` and `seconds` (processor time) belong to "done", `error` to "error".
+    `kind` is "done", "stopped" (cancelled half-way), "refused" (the solver says why in `error`), "broken"
+    (an unforeseen failure, its trace in `trace`) or "lost" (killed two processes); `rows` and `seconds`
+    (processor time) belong to "done".
     """
 
     kind: str
     rows: list[dict[str, Any]] = field(default_factory=list)
     seconds: float = 0.0
     error: dict[str, Any] | None = None
+    trace: str = ""
 
 
 @dataclass
@@ -76,7 +80,8 @@ def compute(questions: Sequence[PointQuestion], stopped: Callable[[], bool]) -> 
         if stopped():
             return None
         answer = next(answers).row()
-        rows.append({"answer": answer} | companions(question))
+        # through JSON and back: what is shown at once is what the store gives back later
+        rows.append(json.loads(json.dumps({"answer": answer} | companions(question), allow_nan=False)))
     return rows
 
 
@@ -108,7 +113,9 @@ def _answer(questions: Sequence[PointQuestion], pipe: Connection) -> Outcome:
             "value": str(error.value),
             "allowed": error.allowed,
         }
-        return Outcome("error", error=facts)
+        return Outcome("refused", error=facts)
+    except Exception:  # noqa: BLE001 - told to the server, which logs it
+        return Outcome("broken", trace=traceback.format_exc())
     if rows is None:
         return Outcome("stopped")
     return Outcome("done", rows, time.process_time() - started)

@@ -23,8 +23,11 @@ def value_of(name: str) -> st.SearchStrategy[Any]:
     if key.kind == "integer":
         return st.integers(int(key.low), int(key.high))
     if key.kind == "real":
-        return st.floats(key.low, key.high, allow_nan=False) | st.floats(max(key.low, 0.1), min(key.high, 3.0)) \
-            if key.low < 3.0 and key.high > 0.1 else st.floats(key.low, key.high)
+        return (
+            st.floats(key.low, key.high, allow_nan=False) | st.floats(max(key.low, 0.1), min(key.high, 3.0))
+            if key.low < 3.0 and key.high > 0.1
+            else st.floats(key.low, key.high)
+        )
     if key.kind == "choice":
         return st.sampled_from(key.choices)
     if key.kind == "text":
@@ -89,7 +92,9 @@ def test_old_links_open_unchanged(old: dict[str, Any]) -> None:
 
 def test_view_keys_leave_the_computation_alone() -> None:
     plain = links.parse("spins=7")
-    shown = links.parse("spins=7&title=x&note=y&unit=kHz&frame=trap&energies=ground&bosons=per-spin&at=0.1&zoom=0:0.5")
+    shown = links.parse(
+        "spins=7&title=x&note=y&unit=kHz&frame=trap&energies=ground&bosons=per-spin&at=0.1&zoom=0:0.5"
+    )
     assert plain != shown
     assert identity.sheet_id(plain) == identity.sheet_id(shown)
     # the fixed value of what is swept is overridden
@@ -100,8 +105,14 @@ def test_view_keys_leave_the_computation_alone() -> None:
 @pytest.mark.parametrize(
     ("typed", "query"),
     [
-        ({"coupling": "0,25", "spins": " 4 ", "coupling_as": "single", "along": "bias"}, "spins=4&along=bias"),
-        ({"coupling": "2", "coupling_as": "critical", "splitting": "4", "along": "bias"}, "splitting=4&coupling=2&along=bias"),
+        (
+            {"coupling": "0,25", "spins": " 4 ", "coupling_as": "single", "along": "bias"},
+            "spins=4&along=bias",
+        ),
+        (
+            {"coupling": "2", "coupling_as": "critical", "splitting": "4", "along": "bias"},
+            "splitting=4&coupling=2&along=bias",
+        ),
         ({"to": "1,5", "points": "151", "title": " a, b "}, "to=1.5&points=151&title=%20a,%20b%20"),
         ({"detuning": "\u22120,5", "tol": "1e-6", "from": ""}, "detuning=-0.5&tol=1e-6"),
         ({"each": "spins:5,10"}, "each=spins:5,10"),

@@ -105,7 +105,7 @@ LINKS = [
     ("stored=abc", "stored", "bad-stored-link"),
 ]
 
-# (body, field, code)
+# each with the field and the code of its error
 BODIES: list[tuple[str, str | None, str]] = [
     ('{"spins": "20"}', "spins", "wrong-type"),
     ('{"spins": true}', "spins", "wrong-type"),
@@ -190,7 +190,9 @@ def test_malformed_links(server: RunningServer, query: str, field: str, code: st
 @pytest.mark.parametrize(("body", "field", "code"), BODIES, ids=[body[:40] for body, _, _ in BODIES])
 def test_malformed_bodies(server: RunningServer, body: str, field: str | None, code: str) -> None:
     answer = server.client.post(
-        "/api/jobs", content=body.encode("utf-8", "surrogatepass"), headers={"content-type": "application/json"}
+        "/api/jobs",
+        content=body.encode("utf-8", "surrogatepass"),
+        headers={"content-type": "application/json"},
     )
     assert answer.status_code in {400, 404, 413, 422}
     error = answer.json()["error"]
@@ -226,6 +228,8 @@ def test_overlong_addresses_are_refused(server: RunningServer) -> None:
 
 
 def test_scripts_in_titles_are_kept_as_text(server: RunningServer) -> None:
-    page = server.client.get("/sweep?title=%3Cscript%3Ealert(1)%3C/script%3E", headers={"accept": "text/html"})
+    page = server.client.get(
+        "/sweep?title=%3Cscript%3Ealert(1)%3C/script%3E", headers={"accept": "text/html"}
+    )
     assert page.status_code == 200
     assert "<script>alert" not in page.text

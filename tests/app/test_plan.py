@@ -1,5 +1,7 @@
 """Plans: every point once, coarse first, the same wherever they are made."""
 
+import itertools
+
 import pytest
 
 from app import links, plan
@@ -37,7 +39,7 @@ def test_axis_has_exact_ends_and_grows(query: str) -> None:
     axis = plan.axis_values(sheet)
     assert len(axis) == sheet.points
     assert (axis[0], axis[-1]) == (sheet.start, sheet.stop)
-    assert all(low < high for low, high in zip(axis, axis[1:], strict=False))
+    assert all(low < high for low, high in itertools.pairwise(axis))
 
 
 def test_ends_come_in_the_first_pass() -> None:
