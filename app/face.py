@@ -58,7 +58,7 @@ class Face:
 
 
 def face_of(sheet: Sheet, coupling_as: str = "lambda") -> Face:
-    """Return the face of a sheet; `coupling_as` says how its coupling box is meant, as in `links.from_form`."""
+    """Return the face of a sheet; `coupling_as` says what its coupling box means, as in `links.from_form`."""
     query = links.query_of(sheet)
     swept = symbol(sheet.along, sheet.frame)
     return Face(

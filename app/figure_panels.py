@@ -1,19 +1,14 @@
 """The stacked panels of a sweep: each builder turns curves of a result into traces and a key."""
 
-import math
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field
 from typing import Any
 
 from app import figure_style as style
+from app.figure_joins import Numbers, joined, outlines
 from app.figure_style import Stroke
 from app.sheets import Sheet
 from app.symbols import curve_label, with_unit
-
-Numbers = list[float | None]
-
-# a band thinner than this share of its panel cannot be seen at any zoom that doubles can hold apart
-THINNEST_BAND = 1e-9
 
 
 @dataclass(frozen=True)
@@ -91,7 +86,7 @@ _LEVEL_SYMBOLS = {"absolute": "E", "ground": "E − E<sub>0</sub>", "uncoupled":
 
 
 def levels_panel(sheet: Sheet, curves: Sequence[Curve], axis: str) -> Panel:
-    """Draw the lowest levels by parity with their bounds, the uncoupled levels and the large-N ground energy."""
+    """Draw the lowest levels by parity with their bounds, uncoupled levels, large-N ground energy."""
     title = _LEVEL_TITLES[sheet.energies]
     if sheet.each is not None:
         title = f"{title}: the lowest of each parity"
@@ -125,7 +120,7 @@ def _add_uncoupled(panel: Panel, curve: Curve, zero: list[float], axis: str, she
         [level - (levels[0] if sheet.energies == "ground" else base) for level in levels]
         for levels, base in zip(curve.uncoupled, zero, strict=True)
     ]
-    x, y = _joined(curve.x, shown)
+    x, y = joined(curve.x, shown)
     panel.traces.append(style.curve(x, y, style.UNCOUPLED, axis, "uncoupled"))
     panel.key.append(style.UNCOUPLED.key("uncoupled"))
 
@@ -143,7 +138,7 @@ def _add_effective(panel: Panel, curve: Curve, axis: str, sheet: Sheet, *, famil
         # the boson-eliminated model has no boson ladder: as many levels as the panel shows, no more
         kept = levels[: 1 if family else len(own)]
         shown.append([None if level is None else level - base for level in kept])
-    x, y = _joined(curve.x, shown)
+    x, y = joined(curve.x, shown)
     panel.traces.append(style.curve(x, y, style.EFFECTIVE, axis, "effective spin model"))
     panel.key.append(style.EFFECTIVE.key("effective spin model"))
 
@@ -158,10 +153,10 @@ def _add_levels(panel: Panel, curve: Curve, zero: list[float], axis: str, *, fam
         upper = _by_parity(curve, "energy", parity, zero, most)
         lower = _by_parity(curve, "energy_lower", parity, zero, most)
         label = name if curve.stroke is None else f"{curve.label}, {name}"
-        outline = _outlines(curve.x, lower, upper)
+        outline = outlines(curve.x, lower, upper)
         if outline is not None:
             panel.traces.append(style.band(*outline, stroke, axis, f"{label}: bounds"))
-        panel.traces.append(style.curve(*_joined(curve.x, upper), stroke, axis, label))
+        panel.traces.append(style.curve(*joined(curve.x, upper), stroke, axis, label))
         panel.key.append((style.Stroke("ink", own.dash) if family else own).key(name))
 
 
@@ -203,9 +198,7 @@ def _add_marks(
     bases = zero if zero is not None else [0.0] * len(curve.x)
     places = [
         (x, value - base)
-        for x, value, base, good in zip(
-            curve.x, values, bases, curve.series["meets_tolerance"], strict=True
-        )
+        for x, value, base, good in zip(curve.x, values, bases, curve.series["meets_tolerance"], strict=True)
         if not good and value is not None
     ]
     if places:
@@ -220,19 +213,19 @@ def _add_marks(
 
 
 def gap_panel(sheet: Sheet, curves: Sequence[Curve], axis: str) -> Panel:
-    """Draw the gap to the next level of the same parity and of any parity, and the lower branch for large N."""
+    """Draw the gap to the next level of the same and of any parity, and the large-N lower branch."""
     panel = Panel("gap", "Gap above the ground level", with_unit("gap", sheet), 125, from_zero=True)
     for curve in curves:
         parity = any(value != 0 for row in curve.series["parity"] for value in row)
         if parity:
-            _add_number(panel, curve, "gap", axis, style.FIRST, "same parity")
+            _add_number(panel, curve, "gap", axis, stroke=style.FIRST, label="same parity")
         _add_number(
             panel,
             curve,
             "gap_any",
             axis,
-            style.SECOND if parity else style.FIRST,
-            "any parity" if parity else "next level",
+            stroke=style.SECOND if parity else style.FIRST,
+            label="any parity" if parity else "next level",
         )
         _add_limit(panel, curve, curve.limit["lower_branch"], axis)
     panel.key = _unique(panel.key)
@@ -252,7 +245,7 @@ def boson_panel(sheet: Sheet, curves: Sequence[Curve], axis: str) -> Panel:
     )
     for curve in curves:
         scale = [1.0 / spins if per_spin else 1.0 for spins in curve.spins]
-        _add_number(panel, curve, "boson_number", axis, style.FIRST, "ground level", scale)
+        _add_number(panel, curve, "boson_number", axis, stroke=style.FIRST, label="ground level", scale=scale)
         limit: Numbers = [
             None if value is None else value * factor
             for value, factor in zip(curve.limit["boson_number"], scale, strict=True)
@@ -266,8 +259,8 @@ def spin_panel(_sheet: Sheet, curves: Sequence[Curve], axis: str) -> Panel:
     """Draw the order parameter and the inversion of the ground level with their large-N values."""
     panel = Panel("spins", "Spins, ground level", "per N/2", 135, limits=(-1.08, 1.08))
     for curve in curves:
-        _add_number(panel, curve, "order_parameter", axis, style.FIRST, "order parameter")
-        _add_number(panel, curve, "inversion", axis, style.SECOND, "inversion")
+        _add_number(panel, curve, "order_parameter", axis, stroke=style.FIRST, label="order parameter")
+        _add_number(panel, curve, "inversion", axis, stroke=style.SECOND, label="inversion")
         _add_limit(panel, curve, curve.limit["order_parameter"], axis)
         _add_limit(panel, curve, curve.limit["inversion"], axis)
     panel.key = _unique(panel.key)
@@ -278,8 +271,8 @@ def cutoff_panel(_sheet: Sheet, curves: Sequence[Curve], axis: str) -> Panel:
     """Draw the boson cutoff that the reader's own calculation needs beside the one used here."""
     panel = Panel("cutoff", "Boson cutoff", "highest level", 115, from_zero=True)
     for curve in curves:
-        _add_number(panel, curve, "cutoff_needed", axis, style.FIRST, "needed")
-        _add_number(panel, curve, "cutoff_used", axis, style.SECOND, "used here")
+        _add_number(panel, curve, "cutoff_needed", axis, stroke=style.FIRST, label="needed")
+        _add_number(panel, curve, "cutoff_used", axis, stroke=style.SECOND, label="used here")
     panel.key = _unique(panel.key)
     return panel
 
@@ -289,6 +282,7 @@ def _add_number(
     curve: Curve,
     key: str,
     axis: str,
+    *,
     stroke: Stroke,
     label: str,
     scale: Sequence[float] | None = None,
@@ -305,9 +299,9 @@ def _add_number(
     high: list[Numbers] = []
     for value, error, factor in zip(y, errors, factors, strict=True):
         known = value is not None and error is not None
-        low.append([value - error * factor if known else None])  # type: ignore[operator]
-        high.append([value + error * factor if known else None])  # type: ignore[operator]
-    outline = _outlines(curve.x, low, high)
+        low.append([value - error * factor if known else None])
+        high.append([value + error * factor if known else None])
+    outline = outlines(curve.x, low, high)
     if outline is not None:
         panel.traces.append(style.band(*outline, look, axis, f"{label}: bounds"))
     name = label if curve.stroke is None else f"{curve.label}, {label}"
@@ -316,74 +310,12 @@ def _add_number(
     _add_marks(panel, curve, y, axis)
 
 
-# -- joining ---------------------------------------------------------------------------------------
-
-
-def _joined(x: Sequence[float], rows: Sequence[Sequence[float | None]]) -> tuple[Numbers, Numbers]:
-    """Join curves into one trace: curve j runs through entry j of each row, with a gap after each."""
-    across: Numbers = []
-    up: Numbers = []
-    for rank in range(max((len(row) for row in rows), default=0)):
-        values = [row[rank] if rank < len(row) else None for row in rows]
-        across += [*x, None]
-        up += [*values, None]
-    return across, up
-
-
-def _outlines(
-    x: Sequence[float], low: Sequence[Numbers], high: Sequence[Numbers]
-) -> tuple[Numbers, Numbers] | None:
-    """Return the outlines between lower and upper curves, or None when they are too thin to be seen."""
-    known = [value for row in high for value in row if value is not None]
-    widths = [
-        top - bottom
-        for lower, upper in zip(low, high, strict=True)
-        for bottom, top in zip(lower, upper, strict=True)
-        if bottom is not None and top is not None
-    ]
-    if not widths or max(widths) <= THINNEST_BAND * max(max(known) - min(known), 1e-300):
-        return None
-    across: Numbers = []
-    up: Numbers = []
-    for rank in range(max(len(row) for row in high)):
-        for run in _runs(low, high, rank):
-            across += [x[point] for point in run] + [x[point] for point in reversed(run)] + [None]
-            up += [high[point][rank] for point in run] + [low[point][rank] for point in reversed(run)]
-            up.append(None)
-    return across, up
-
-
-def _runs(low: Sequence[Numbers], high: Sequence[Numbers], rank: int) -> list[list[int]]:
-    """Return the stretches of points at which both bounds of a curve are known."""
-    runs: list[list[int]] = [[]]
-    for point, (lower, upper) in enumerate(zip(low, high, strict=True)):
-        if rank < len(upper) and lower[rank] is not None and upper[rank] is not None:
-            runs[-1].append(point)
-        elif runs[-1]:
-            runs.append([])
-    return [run for run in runs if run]
-
-
 def _unique(key: list[dict[str, Any]]) -> list[dict[str, Any]]:
     """Return the entries of a key, each once."""
     seen: dict[str, dict[str, Any]] = {}
     for entry in key:
         seen.setdefault(entry["label"], entry)
     return list(seen.values())
-
-
-def crossings(x: Sequence[float], differences: Sequence[float | None]) -> list[float]:
-    """Return where a sampled difference changes its sign, between points by a straight line."""
-    found = []
-    pairs = [(a, b) for a, b in zip(x, differences, strict=True) if b is not None and math.isfinite(b)]
-    for (left, before), (right, after) in zip(pairs, pairs[1:], strict=False):
-        if before == 0.0:
-            found.append(left)
-        elif before * after < 0.0:
-            found.append(left + (right - left) * before / (before - after))
-    if pairs and pairs[-1][1] == 0.0:
-        found.append(pairs[-1][0])
-    return found
 
 
 BUILDERS: tuple[Callable[[Sheet, Sequence[Curve], str], Panel], ...] = (

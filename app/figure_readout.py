@@ -17,8 +17,9 @@ _PLACES = ("cutoff_needed", "cutoff_used", "basis", "meets_tolerance", "note")
 def readout(sheet: Sheet, result: Mapping[str, Any]) -> dict[str, Any]:
     """Return the values at every point with names, units and bounds, as plain data.
 
-    `fields` describe one number each: `key`, `title`, `symbol`, `unit` (as shown), `error` (key of its
-    error or None), `claim` (what that error is: "bound", "estimate" or nothing) and `foremost`. `curves` hold the series as they are in the result, untouched.
+    `fields` describe one number each: `key`, `title`, `symbol`, `unit` (as shown), `error` (key of its error
+    or None), `claim` (what that error is: "bound", "estimate" or nothing) and `foremost`. `curves` hold the
+    series as they are in the result, untouched.
     """
     swept = symbol(sheet.along, sheet.frame)
     return {

@@ -108,7 +108,7 @@ def curve(
 def band(
     x: list[float | None], y: list[float | None], stroke: Stroke, axis: str, name: str
 ) -> dict[str, Any]:
-    """Return a trace that fills closed outlines (joined with None) with the curve's own colour, translucent."""
+    """Return a trace that fills closed outlines (joined with None) with the curve's colour, translucent."""
     return {
         "type": "scatter",
         "mode": "lines",

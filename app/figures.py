@@ -9,7 +9,8 @@ from typing import Any
 
 from app import figure_style as style
 from app.exports import curves_of
-from app.figure_panels import BUILDERS, Curve, Panel, computed_curves, crossings
+from app.figure_joins import crossings
+from app.figure_panels import BUILDERS, Curve, Panel, computed_curves
 from app.figure_readout import readout
 from app.sheets import Sheet
 from app.symbols import axis_title, sheet_title, symbol
@@ -128,7 +129,7 @@ def _critical(sheet: Sheet, curves: Sequence[Curve]) -> list[dict[str, Any]]:
             token = "critical" if curve.stroke is None else curve.stroke.token
             known = found.setdefault(round(place, 9), {"x": place, "label": label, "token": token})
             if known["token"] != token:
-                known["token"] = "critical"
+                found[round(place, 9)] = known | {"token": "critical"}
     return list(found.values())
 
 

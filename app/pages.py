@@ -22,6 +22,7 @@ from app.sheets import Sheet
 
 router = APIRouter()
 
+FILES = ("softmode.css", "theme.js", "main.js", "icon.svg", PLOTLY)
 COUPLING_AS = Key("coupling_as", "choice", "lambda", "meaning of the box", choices=links.COUPLING_FORMS)
 
 
@@ -98,7 +99,7 @@ def _sweep_page(
         choices=_choices(sheet.frame),
         ranges={name: _range_words(key) for name, key in KEYS.items()},
         assets=shelf().digest,
-        scripts={name: asset_url(name) for name in ("softmode.css", "theme.js", "main.js", "icon.svg", PLOTLY)},
+        scripts={name: asset_url(name) for name in FILES},
         plotly_mark=plotly_mark(),
         versions=versions(),
         boot={

@@ -243,8 +243,9 @@ def _trap_terms(sheet: Sheet) -> str:
         ratio = "<mi>r</mi>"
         terms += (
             f"{_over(_G_0, half)}<mrow><mo>[</mo>"
-            f"<mrow><mo>(</mo><mn>1</mn><mo>+</mo>{ratio}<mo>)</mo></mrow>{_SUM}{_spin('S', 'z')}<mo>−</mo>"
-            f"<mi>i</mi><mrow><mo>(</mo><mn>1</mn><mo>−</mo>{ratio}<mo>)</mo></mrow>{_DIFFERENCE}{_spin('S', 'y')}"
+            f"<mrow><mo>(</mo><mn>1</mn><mo>+</mo>{ratio}<mo>)</mo></mrow>{_SUM}{_spin('S', 'z')}"
+            f"<mo>−</mo><mi>i</mi><mrow><mo>(</mo><mn>1</mn><mo>−</mo>{ratio}<mo>)</mo></mrow>"
+            f"{_DIFFERENCE}{_spin('S', 'y')}"
             "<mo>]</mo></mrow>"
         )
     return terms + (f"<mo>−</mo>{_EPSILON}{_spin('S', 'z')}" if _biased(sheet) else "")
