@@ -14,7 +14,7 @@ from solver.eigen import count_below_zero
 from solver.floor import Floors
 from solver.fock_basis import FockBlock
 from solver.model import CollectiveModel
-from solver.shifted_basis import LadderCoupling, ShiftedBlock
+from solver.shifted_basis import LadderCoupling, ShiftedBlock, count_on_ladders
 
 _CLASSICAL_SHARE = 0.7
 
@@ -46,26 +46,24 @@ def levels_below(
     floors: Floors,
     basis: BasisName,
     cutoff: int,
+    coupling: LadderCoupling | None = None,
 ) -> list[int] | None:
     """Upper bounds on the number of levels below `line` in each sector, or None.
 
-    None when the part above the cutoff is not bounded away from the line.
+    None when the part above the cutoff is not bounded away from the line. coupling: the ladder
+    coupling of this cutoff where it is already at hand.
     """
     room = floors.above(cutoff, basis == "shifted") - line
     if room <= 0.0:
         return None
     if basis == "shifted":
-        coupling = LadderCoupling(model, cutoff)
-        return [
-            _count(ShiftedBlock(model, parity, cutoff, line, coupling), room, cutoff + 1)
-            for parity in parities
-        ]
+        if coupling is None or coupling.cutoff != cutoff:
+            coupling = LadderCoupling(model, cutoff)
+        return count_on_ladders(
+            [ShiftedBlock(model, parity, cutoff, line, coupling) for parity in parities], room
+        )
     out = []
     for parity in parities:
         block = FockBlock(model, parity, cutoff, line)
-        out.append(_count(block, room, block.half_width))
+        out.append(count_below_zero(block.band - block.leak_band() / room, block.half_width))
     return out
-
-
-def _count(block: FockBlock | ShiftedBlock, room: float, size: int) -> int:
-    return count_below_zero(block.band - block.leak_band() / room, size)

@@ -8,12 +8,20 @@ for fixed n, the three-term recurrence
 For k <= n it runs from the forbidden region into the oscillating one, which is its stable
 direction; the rest follows from D[k,n] = (-1)^(n-k) D[n,k].
 (Closed form: Cahill, Glauber, Phys. Rev. 177, 1857 (1969).)
+
+Where many ladders share a modest size there is a shorter way: b + b^dag, truncated well above the
+levels in use, is diagonalised once, and D(x) acts as a phase on its eigenvectors (Gauss-Hermite
+quadrature; Golub, Welsch, Math. Comp. 23, 221 (1969)).
 """
 
 from __future__ import annotations
 
+import math
+from functools import lru_cache
+
 import numpy as np
 from numpy.typing import NDArray
+from scipy.linalg import eigh_tridiagonal
 from scipy.special import gammaln
 
 Array = NDArray[np.float64]
@@ -98,3 +106,76 @@ def _scaled_lower(shifts: Array, rows: int, columns: int) -> Array:
         flip = 1.0 - 2.0 * ((n - order) % 2)
         table *= np.where(shifts[None, ..., None] < 0.0, flip, 1.0)
     return table
+
+
+LARGEST_QUADRATURE = 400
+
+
+@lru_cache(maxsize=64)
+def _position_basis(size: int) -> tuple[Array, Array]:
+    """Eigenvalues of b + b^dag on `size` levels, and eigenvectors with the signs of i^n taken in.
+
+    With these D(x)[n, k] = sum_q vectors[n, q] vectors[k, q] c(x values[q]), where c is the
+    cosine for n - k even, the sine for n odd and k even, and minus the sine for n even, k odd.
+    """
+    values, vectors = eigh_tridiagonal(np.zeros(size), np.sqrt(np.arange(1.0, size)))
+    signs = 1.0 - 2.0 * ((np.arange(size) // 2) % 2)
+    return values, np.ascontiguousarray(signs[:, None] * vectors)
+
+
+def _padded(size: int, shift: float) -> int:
+    """Levels needed so that displacing `size` of them by `shift` never feels the end."""
+    steps = 8
+    while True:
+        reach = abs(shift) * math.sqrt(size + 0.5 * steps) + 1e-300
+        if steps * (math.log(steps / reach) - 1.0) > 38.0:
+            return size + steps // 2 + 1
+        steps += 4
+
+
+def quadrature_size(size: int, shift: float) -> int:
+    """Size of the quadrature that displaces `size` levels by up to |shift|."""
+    # multiples of eight, so that neighbouring sweeps share one eigenbasis
+    return -(-_padded(size, shift) // 8) * 8
+
+
+def displacement_matrix(shift: float, size: int) -> Array:
+    """<n|D(shift)|k> for n, k < size; absolute error around 1e-14."""
+    nodes = quadrature_size(size, shift)
+    if nodes > LARGEST_QUADRATURE:
+        return displaced_overlaps(shift, size, size)
+    values, vectors = _position_basis(nodes)
+    part = vectors[:size]
+    out = np.empty((size, size))
+    even, odd = part[::2], part[1::2]
+    cosine, sine = np.cos(shift * values), np.sin(shift * values)
+    out[::2, ::2] = (even * cosine) @ even.T
+    out[1::2, 1::2] = (odd * cosine) @ odd.T
+    mixed = (odd * sine) @ even.T
+    out[1::2, ::2] = mixed
+    out[::2, 1::2] = -mixed.T
+    return out
+
+
+def displaced(amplitudes: Array, shifts: Array, rows: int) -> Array:
+    """D(shift) applied to number amplitudes, each ladder by its own shift.
+
+    amplitudes: (q, ladders, levels); shifts: (ladders,); returns (q, ladders, rows).
+    """
+    levels = amplitudes.shape[2]
+    furthest = float(np.abs(shifts).max(initial=0.0))
+    nodes = quadrature_size(max(rows, levels), furthest)
+    if nodes > LARGEST_QUADRATURE:
+        table = displaced_overlaps(shifts, rows, levels)
+        out: Array = np.einsum("qmk,mnk->qmn", amplitudes, table, optimize=True)
+        return out
+    values, vectors = _position_basis(nodes)
+    even, odd = vectors[::2], vectors[1::2]
+    phase = shifts[:, None] * values
+    cosine, sine = np.cos(phase), np.sin(phase)
+    from_even = amplitudes[:, :, ::2] @ even[: (levels + 1) // 2]
+    from_odd = amplitudes[:, :, 1::2] @ odd[: levels // 2]
+    out = np.empty((*amplitudes.shape[:2], rows))
+    out[:, :, ::2] = (cosine * from_even - sine * from_odd) @ even[: (rows + 1) // 2].T
+    out[:, :, 1::2] = (sine * from_even + cosine * from_odd) @ odd[: rows // 2].T
+    return out

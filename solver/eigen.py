@@ -14,6 +14,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
@@ -151,9 +152,14 @@ def _block_krylov(factor: Array, size: int, count: int, start: Array | None, acc
     return Subspace(1.0 / values[: -count - 1 : -1], np.ascontiguousarray(rows))
 
 
+@lru_cache(maxsize=32)
+def _noise(width: int, size: int) -> Array:
+    return np.random.default_rng(size).standard_normal((width, size)) / np.sqrt(size)
+
+
 def _starting_rows(size: int, width: int, start: Array | None) -> Array:
     """Rows to begin with: what is known, plus a little fixed pseudo-noise in every direction."""
-    rows = np.random.default_rng(size).standard_normal((width, size)) / np.sqrt(size)
+    rows = _noise(width, size).copy()
     if start is not None and start.shape[0]:
         known = start[:width]
         rows *= 1e-3
@@ -194,22 +200,27 @@ def count_below_zero(band: Array, block: int) -> int:
     carried: Array | None = None
     for diagonal, below in block_pairs(band, block):
         pivot = diagonal if carried is None else diagonal - carried
-        factor, info = dpotrf(pivot, lower=1, clean=0)
-        if info == 0:
-            if below is not None:
-                solved, _ = dpotrs(factor, below.T, lower=1)
-                carried = below @ solved
-            continue
-        factor, exchanged, _ = dsytrf(pivot, lower=1)
-        negative += _negative_pivots(factor, exchanged)
-        if below is not None:
-            solved, _ = dsytrs(factor, exchanged, below.T, lower=1)
-            carried = below @ solved
+        if below is None:
+            return negative + eliminate(pivot, None)[0]
+        fewer, solved = eliminate(pivot, below.T)
+        negative += fewer
+        carried = below @ solved
     return negative
+
+
+def eliminate(pivot: Array, right: Array | None) -> tuple[int, Array]:
+    """Negative eigenvalues of a symmetric matrix (lower part given), and pivot^(-1) right."""
+    nothing = np.empty((0, 0))
+    factor, info = dpotrf(pivot, lower=1, clean=0)
+    if info == 0:
+        return 0, nothing if right is None else dpotrs(factor, right, lower=1)[0]
+    factor, exchanged, _ = dsytrf(pivot, lower=1)
+    negative = _negative_pivots(factor, exchanged)
+    return negative, nothing if right is None else dsytrs(factor, exchanged, right, lower=1)[0]
 
 
 def _negative_pivots(factor: Array, exchanged: NDArray[np.int32]) -> int:
     """Negative eigenvalues of the block diagonal factor: every 2 x 2 pivot has exactly one."""
-    single = exchanged >= 0 if exchanged.min() == 0 else exchanged > 0
+    single = exchanged > 0
     pivots = np.diagonal(factor)
     return int(np.sum(pivots[single] < 0.0)) + int(np.sum(~single)) // 2

@@ -11,7 +11,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from solver.displacement import displaced_overlaps
+from solver.displacement import displaced
 from solver.excitation import ExcitationLevel, ExcitationSpectrum
 from solver.fock_basis import FockBlock
 from solver.shifted_basis import ShiftedBlock
@@ -62,26 +62,24 @@ def excitation_layers(spectrum: ExcitationSpectrum, levels: list[ExcitationLevel
     return LayerProfile(overlaps, links)
 
 
-def number_amplitudes(block: ShiftedBlock, vectors: Array) -> Array:
-    """Vectors of a displaced-ladder block in number layers: shape (q, ladders, layers).
+def number_amplitudes(block: ShiftedBlock, ladders: Array) -> Array:
+    """Displaced-ladder amplitudes (q, ladders, cutoff+1) in number layers: (q, ladders, layers).
 
     Each ladder is D(-G m) applied to its amplitudes; ladders without weight stay zero.
     """
-    psi = block.ladders(vectors)
     levels = block.cutoff + 1
     shift = -block.model.displacement_per_quantum * block.m
-    weight = np.einsum("qmn,qmn->m", psi, psi)
+    weight = np.einsum("qmn,qmn->m", ladders, ladders)
     busy = np.flatnonzero(weight > _NEGLIGIBLE)
     reach = float(np.abs(shift[busy]).max(initial=0.0))
     # the top displaced level reaches classically to (reach + sqrt(M))^2; beyond, a Gaussian tail
     edge = (reach + math.sqrt(levels)) + 5.0
     layers = max(levels, int(math.ceil(edge * edge))) + 1
-    out = np.zeros((psi.shape[0], block.m.size, layers))
+    out = np.zeros((ladders.shape[0], block.m.size, layers))
     step = max(1, _CHUNK // (layers * levels))
     for first in range(0, busy.size, step):
         some = busy[first : first + step]
-        table = displaced_overlaps(shift[some], layers, levels)
-        out[:, some] = np.einsum("qmk,mnk->qmn", psi[:, some], table, optimize=True)
+        out[:, some] = displaced(ladders[:, some], shift[some], layers)
     return out
 
 

@@ -234,6 +234,8 @@ class _Search:
 
     def _certified(self, sets: dict[int, RitzSet], line: float) -> bool | None:
         """Whether the count below `line` is proven; None when the search must go on."""
+        block = next(iter(sets.values())).block
+        shared = block.coupling if isinstance(block, ShiftedBlock) else None
         expected = [int(np.sum(found.energies < line)) for found in sets.values()]
         for cutoff in counting_cutoffs(self.model, self.basis, self.cutoff, line, self.floors):
             counted = levels_below(self.model, self.parities, line, self.floors, self.basis, cutoff)

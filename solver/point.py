@@ -11,7 +11,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from solver.blocks import BasisName
-from solver.bounds import sine_of_angle
+from solver.bounds import RitzSet, sine_of_angle
 from solver.cutoff import needed_cutoff
 from solver.errors import QuestionError
 from solver.excitation import ExcitationLevel, ExcitationSpectrum, excitation_levels
@@ -210,13 +210,9 @@ def _from_spectrum(question: PointQuestion, spectrum: Spectrum) -> PointAnswer:
     ground = levels[0]
     needed = 0
     moments: Moments | None = None
-    for parity, places in shown.items():
-        if not places:
-            continue
-        found = spectrum.sectors[parity].ritz
-        vectors, energies = found.vectors[: max(places) + 1], found.energies[: max(places) + 1]
-        profile, own = _profile(found.block, vectors, ground.place if parity == ground.parity else None)
-        moments = own or moments
+    for parity, (energies, profile, own) in _profiles(spectrum, shown).items():
+        if parity == ground.parity:
+            moments = own
         needed = max(
             needed,
             needed_cutoff(profile, energies, question.need * question.model.mode, question.tail),
@@ -225,15 +221,46 @@ def _from_spectrum(question: PointQuestion, spectrum: Spectrum) -> PointAnswer:
     return _assembled(question, rows, moments, _accuracy(spectrum), needed, spectrum.cutoff, spectrum.basis)
 
 
-def _profile(block: Any, vectors: Array, place: int | None) -> tuple[LayerProfile, Moments | None]:
-    """Number layers of the vectors, and moments of the one at `place`."""
-    if isinstance(block, FockBlock):
-        moments = None if place is None else fock_moments(block, vectors[place])
-        return fock_layers(block, vectors), moments
-    assert isinstance(block, ShiftedBlock)
-    amplitudes = number_amplitudes(block, vectors)
-    moments = None if place is None else shifted_moments(block, vectors[place], amplitudes[place])
-    return shifted_layers(block, amplitudes), moments
+def _profiles(
+    spectrum: Spectrum, shown: dict[int, list[int]]
+) -> dict[int, tuple[Array, LayerProfile, Moments]]:
+    """Per parity: energies and number layers of the shown levels, moments of the lowest."""
+    out = {}
+    chosen = {
+        parity: spectrum.sectors[parity].ritz for parity, places in shown.items() if places
+    }
+    counts = {parity: max(shown[parity]) + 1 for parity in chosen}
+    amplitudes = _shared_amplitudes(chosen, counts)
+    for parity, found in chosen.items():
+        vectors = found.vectors[: counts[parity]]
+        energies = found.energies[: counts[parity]]
+        if isinstance(found.block, FockBlock):
+            profile = fock_layers(found.block, vectors)
+            out[parity] = (energies, profile, fock_moments(found.block, vectors[0]))
+        elif isinstance(found.block, ShiftedBlock):
+            layers = amplitudes[parity]
+            moments = shifted_moments(found.block, vectors[0], layers[0])
+            out[parity] = (energies, shifted_layers(found.block, layers), moments)
+    return out
+
+
+def _shared_amplitudes(
+    chosen: dict[int, RitzSet], counts: dict[int, int]
+) -> dict[int, Array]:
+    """Number-layer amplitudes of displaced-ladder states, both parities in one pass."""
+    blocks = {
+        parity: found.block
+        for parity, found in chosen.items()
+        if isinstance(found.block, ShiftedBlock)
+    }
+    if not blocks:
+        return {}
+    stacked = np.concatenate(
+        [block.ladders(chosen[p].vectors[: counts[p]]) for p, block in blocks.items()]
+    )
+    everything = number_amplitudes(next(iter(blocks.values())), stacked)
+    edges = np.cumsum([counts[parity] for parity in blocks])[:-1]
+    return dict(zip(blocks, np.split(everything, edges), strict=True))
 
 
 def _accuracy(spectrum: Spectrum) -> StateAccuracy:

@@ -17,12 +17,14 @@ Phys. Scr. T160, 014005 (2014).
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
 
 import numpy as np
 from numpy.typing import NDArray
 
 from solver.blocks import Action, BasisName, Block
-from solver.displacement import displaced_overlaps
+from solver.displacement import displacement_matrix
+from solver.eigen import eliminate
 from solver.model import CollectiveModel
 from solver.spin import raising_elements
 
@@ -42,7 +44,7 @@ class LadderCoupling:
         gap = abs(model.displacement_per_quantum)
         spread = 6.0 + 2.0 * gap * math.sqrt(cutoff + 1.0) + gap * gap
         self.reach = cutoff + 1 + int(math.ceil(spread + 3.0 * math.sqrt(spread)))
-        full = displaced_overlaps(-model.displacement_per_quantum, self.reach + 1, self.reach + 1)
+        full = displacement_matrix(-model.displacement_per_quantum, self.reach + 1)
         table = 0.5 * model.splitting * full[: self.reach, : self.reach]
         if model.coupling_difference != 0.0:
             half = 0.5 * model.coupling_difference / math.sqrt(model.spins)
@@ -119,7 +121,7 @@ class ShiftedBlock:
         flat = store.reshape(count * levels, width)[: self.dimension]
         return flat.T
 
-    def _mirror_matrix(self, table: Array) -> Array:
+    def mirror_matrix(self, table: Array) -> Array:
         """Coupling of ladder m = 1/2 to its mirror image, shape (cutoff+1, columns of table)."""
         levels = self.cutoff + 1
         sign = self.mirror * (1.0 - 2.0 * (np.arange(levels) % 2))
@@ -128,7 +130,7 @@ class ShiftedBlock:
 
     def _add_mirror(self, last: Array) -> None:
         levels = self.cutoff + 1
-        inner = self._mirror_matrix(self.coupling.table[:levels, :levels])
+        inner = self.mirror_matrix(self.coupling.table[:levels, :levels])
         for n in range(levels):
             last[n, : levels - n] += inner[n, n:]
 
@@ -136,11 +138,11 @@ class ShiftedBlock:
         """Drop the missing half of the m = 0 ladder: move its rows and columns together."""
         levels, kept = self.cutoff + 1, self.centre_kept
         if self.m.size > 1:
-            previous = store[-2]
-            for n in range(levels):
-                entries = previous[n, levels - n + kept]
-                previous[n, levels - n :] = 0.0
-                previous[n, levels - n : levels - n + kept.size] = entries
+            previous, n = store[-2], np.arange(levels)[:, None]
+            entries = previous[n, levels - n + kept]
+            keep_inside = np.arange(2 * levels) < levels - n
+            previous *= keep_inside
+            previous[n, levels - n + np.arange(kept.size)] = entries
         store[-1, : kept.size] = store[-1, kept]
 
     def ladders(self, vectors: Array) -> Array:
@@ -173,7 +175,7 @@ class ShiftedBlock:
             out[:, 1:] += (self.steps[:, None] * psi[:, :-1]) @ table[:, :levels].T
             out[:, :-1] += (self.steps[:, None] * psi[:, 1:]) @ table[:levels]
         if self._has_half:
-            out[:, -1] += psi[:, -1] @ self._mirror_matrix(table)
+            out[:, -1] += psi[:, -1] @ self.mirror_matrix(table)
         if self.has_centre:
             out[:, -1, (1 + self.mirror) // 2 :: 2] = 0.0
         return out
@@ -194,24 +196,30 @@ class ShiftedBlock:
         roundoff = _EPS * (4.0 * moved + 2.0 * abs(self.shift))
         return Action(self.flatten(out[:, :, :levels]), outside @ outside.T, roundoff)
 
-    def leak_band(self) -> Array:
-        """W >= V V^dag: twice the sum of the leak up and the leak down, block diagonal in m."""
-        levels, count = self.cutoff + 1, self.m.size
-        beyond_up = self.coupling.table[levels:, :levels].T
-        beyond_down = self.coupling.table[:levels, levels:]
-        up, down = beyond_up @ beyond_up.T, beyond_down @ beyond_down.T
+    def leaks(self) -> Array:
+        """W >= V V^dag, block diagonal in m: shape (ladders, cutoff+1, cutoff+1).
+
+        W is twice the sum of the leak up and the leak down; the m = 0 block is given for all n.
+        """
+        levels = self.cutoff + 1
+        beyond_down = self.coupling.table[levels:, :levels].T
+        beyond_up = self.coupling.table[:levels, levels:]
+        down, up = beyond_down @ beyond_down.T, beyond_up @ beyond_up.T
         half = 0.5 * self.model.spins
         to_lower = (half + self.m) * (half - self.m + 1.0)
         to_upper = (half - self.m) * (half + self.m + 1.0)
+        out: Array = 2.0 * (to_lower[:, None, None] * down + to_upper[:, None, None] * up)
+        return out
+
+    def leak_band(self) -> Array:
+        """The same W in the storage of `band`."""
+        levels, count, leaks = self.cutoff + 1, self.m.size, self.leaks()
         store = np.zeros((count, levels, 2 * levels))
         for n in range(levels):
-            # leaving ladder m downwards goes through T, upwards through its transpose
-            store[:, n, : levels - n] = 2.0 * (
-                to_lower[:, None] * up[n, n:] + to_upper[:, None] * down[n, n:]
-            )
+            store[:, n, : levels - n] = leaks[:, n, n:]
         if self.has_centre:
             kept = self.centre_kept
-            block = 2.0 * (to_lower[-1] * up + to_upper[-1] * down)[np.ix_(kept, kept)]
+            block = leaks[-1][np.ix_(kept, kept)]
             store[-1] = 0.0
             for n in range(kept.size):
                 store[-1, n, : kept.size - n] = block[n, n:]
@@ -231,3 +239,35 @@ class ShiftedBlock:
         common = min(self.cutoff, into.cutoff) + 1
         out[:, :, :common] = psi[:, :, :common]
         return into.flatten(out)
+
+
+def count_on_ladders(blocks: Sequence[ShiftedBlock], room: float) -> list[int]:
+    """Number of levels below the blocks' shift, for parities sharing one model and cutoff.
+
+    room: lower bound on (energy of the discarded part) - shift. The parities differ in the last
+    ladder alone, so everything above is eliminated once for all of them.
+    """
+    first = blocks[0]
+    levels, count = first.cutoff + 1, first.m.size
+    kept = first.coupling.table[:levels, :levels]
+    upper = np.ascontiguousarray(kept.T)
+    stack = -first.leaks() / room
+    n = np.arange(levels)
+    stack[:, n, n] += first.offset[:, None] + first.model.mode * n
+    negative = 0
+    carried = np.zeros((levels, levels))
+    for at in range(count - 1):
+        fewer, solved = eliminate(stack[at] - carried, upper)
+        negative += fewer
+        carried = kept @ solved
+        if at < count - 2:
+            carried *= first.steps[at] ** 2
+    out = []
+    for block in blocks:
+        last = stack[-1] - (block.steps[-1] ** 2 * carried if count > 1 else 0.0)
+        if block.has_centre:
+            last = last[np.ix_(block.centre_kept, block.centre_kept)]
+        elif block.folded:
+            last = last + block.mirror_matrix(block.coupling.table[:levels, :levels])
+        out.append(negative + (eliminate(last, None)[0] if last.size else 0))
+    return out
