@@ -73,7 +73,8 @@ export class Cursor {
   released(event) {
     const down = this.down;
     this.down = null;
-    if (!down || event.button !== 0 || !this.stage.contains(event.target)) return;
+    // the release may land on the cover that Plotly lays over everything while a button is down
+    if (!down || event.button !== 0) return;
     if (Math.hypot(event.clientX - down[0], event.clientY - down[1]) > 4) return;
     const value = this.inside(event);
     if (value === null) return;

@@ -1,6 +1,6 @@
 // How numbers are written: as many digits as the bound supports, a real minus sign, never a bare NaN.
 
-const MOST_DIGITS = 12;
+export const MOST_DIGITS = 12;
 
 export function plain(value, digits = 10) {
   if (value === null || value === undefined) return "–";
@@ -29,13 +29,13 @@ export function bound(error) {
 }
 
 // digits after the decimal point that a bound leaves meaningful
-export function supported(value, error) {
+export function supported(value, error, most = MOST_DIGITS) {
   if (value === null || value === undefined) return "–";
-  if (!error || !(error > 0)) return plain(value);
+  if (!error || !(error > 0)) return plain(value, Math.min(10, most));
   const size = Math.abs(value) > 0 ? Math.floor(Math.log10(Math.abs(value))) : 0;
-  const decimals = Math.min(-Math.floor(Math.log10(error)), MOST_DIGITS - 1 - size);
+  const decimals = Math.min(-Math.floor(Math.log10(error)), most - 1 - size);
   if (decimals < 0) return plain(value, Math.max(1, size + 1 + decimals));
-  if (size < -5) return minus(value.toExponential(Math.max(0, Math.min(MOST_DIGITS, decimals + size))));
+  if (size < -5) return minus(value.toExponential(Math.max(0, Math.min(most, decimals + size))));
   return minus(value.toFixed(Math.min(15, decimals)));
 }
 

@@ -5,6 +5,7 @@ import { bound, plain, supported } from "./format.js";
 const GLYPHS = ["●", "■", "◆", "▲", "▼", "★", "◀", "▶"];
 const PARITY = { 1: "even", "-1": "odd", 0: "no parity" };
 const PRINTED_ROWS = 9;
+const PRINTED_DIGITS = 7;
 
 function element(tag, className, text) {
   const made = document.createElement(tag);
@@ -59,7 +60,7 @@ export class Readout {
     return this.data.fields.find((one) => one.key === key);
   }
 
-  level(curve, point, rank) {
+  level(curve, point, rank, digits, unit = this.data.energy_unit) {
     const { series } = curve;
     const upper = series.energy[point][rank];
     const lower = series.energy_lower[point]?.[rank] ?? null;
@@ -67,18 +68,18 @@ export class Readout {
     const status = series.energy_status[point][rank];
     const width_words = width === null ? "no lower bound" : width > 0 ? `+0 −${bound(width)}` : "exact";
     return {
-      value: `${supported(upper, width)}${unitOf(this.data.energy_unit)}`,
+      value: `${supported(upper, width, digits)}${unitOf(unit)}`,
       bound: width_words,
       status: `${PARITY[series.parity[point][rank]]}, ${status}`,
     };
   }
 
-  number(curve, point, field) {
+  number(curve, point, field, digits, unit = field.unit) {
     const value = curve.series[field.key][point];
     const error = field.error ? curve.series[field.error]?.[point] ?? null : null;
     if (value === null) return { value: "–", bound: this.reason(curve, point) };
     return {
-      value: `${supported(value, error)}${unitOf(field.unit)}`,
+      value: `${supported(value, error, digits)}${unitOf(unit)}`,
       bound: error === null ? "" : `± ${bound(error)}${field.claim === "estimate" ? " estimated" : ""}`,
     };
   }
@@ -233,8 +234,8 @@ export class Readout {
     const fields = ["gap", "boson_number", "order_parameter", "inversion"].map((key) => this.field(key));
     const head = element("tr");
     const family = this.data.curves.some((curve) => curve.label);
-    const unit = this.data.axis.unit ? ` (${this.data.axis.unit})` : "";
-    const titles = [`${this.data.axis.symbol}${unit}`, ...(family ? ["curve"] : []), "E₀", ...fields.map((field) => field.title), "cutoff needed"];
+    const headed = (title, unit) => (unit ? `${title} (${unit})` : title);
+    const titles = [headed(this.data.axis.symbol, this.data.axis.unit), ...(family ? ["curve"] : []), headed("E₀", this.data.energy_unit), ...fields.map((field) => headed(field.title, field.unit)), "Cutoff needed"];
     for (const title of titles) head.append(element("th", "", title));
     table.append(head);
     for (const point of this.printedPoints()) {
@@ -243,8 +244,8 @@ export class Readout {
         const row = element("tr");
         row.append(element("td", "", plain(this.data.axis.values[point], 6)));
         if (family) row.append(element("td", "words", curve.label));
-        row.append(this.boundCell(this.level(curve, point, 0)));
-        for (const field of fields) row.append(this.boundCell(this.number(curve, point, field)));
+        row.append(this.boundCell(this.level(curve, point, 0, PRINTED_DIGITS, "")));
+        for (const field of fields) row.append(this.boundCell(this.number(curve, point, field, PRINTED_DIGITS, "")));
         row.append(element("td", "", plain(curve.series.cutoff_needed[point])));
         table.append(row);
       }
