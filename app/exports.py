@@ -10,14 +10,10 @@ from app import links
 from app.companions import LIMIT_KEYS
 from app.keys import SWEPT, number_text
 from app.plan import Plan
+from app.series import SERIES_KEYS
 from app.sheets import Sheet
-from solver import SERIES
 
 Row = Mapping[str, Any]
-
-SERIES_KEYS: tuple[str, ...] = tuple(
-    dict.fromkeys(key for spec in SERIES for key in (spec.key, spec.error_key) if key is not None)
-)
 
 
 def result_of(

@@ -22,7 +22,15 @@ from multiprocessing.context import SpawnProcess
 from typing import Any
 
 from app.companions import companions
-from solver import CollectiveModel, PointQuestion, SolverError, solve_chain
+from app.series import SERIES_KEYS
+from solver import (
+    SOLVER_DIGEST,
+    CollectiveModel,
+    ConvergenceError,
+    PointQuestion,
+    SolverError,
+    solve_chain,
+)
 
 logger = logging.getLogger(__name__)
 
@@ -35,6 +43,7 @@ THREAD_CAPS = (
     "NUMEXPR_NUM_THREADS",
 )
 MOST_DEATHS = 2
+_NOTHING = dict.fromkeys(SERIES_KEYS)
 STOP = "stop"
 STOP_SECONDS = 0.4
 START_SECONDS = 60.0
@@ -73,13 +82,21 @@ def cap_threads() -> None:
 
 
 def compute(questions: Sequence[PointQuestion], stopped: Callable[[], bool]) -> list[dict[str, Any]] | None:
-    """Return the rows of a chunk, or None when it was stopped between two points."""
+    """Return the rows of a chunk, or None when it was stopped between two points.
+
+    A point whose levels the solver cannot settle has a row without numbers, and a note that says so; the
+    points after it start cold.
+    """
     rows = []
     answers = solve_chain(questions)
-    for question in questions:
+    for number, question in enumerate(questions):
         if stopped():
             return None
-        answer = next(answers).row()
+        try:
+            answer = next(answers).row()
+        except ConvergenceError as error:
+            answer = {**_NOTHING, "meets_tolerance": False, "note": f"not settled: {error.message}"}
+            answers = solve_chain(questions[number + 1 :])
         # through JSON and back: what is shown at once is what the store gives back later
         rows.append(json.loads(json.dumps({"answer": answer} | companions(question), allow_nan=False)))
     return rows
@@ -94,7 +111,7 @@ def _serve(pipe: Connection) -> None:
     warm = PointQuestion(model=CollectiveModel(spins=4, mode=1.0, splitting=1.0, rotating=0.5, counter=0.5))
     compute([warm], lambda: False)
     with contextlib.suppress(EOFError, OSError):
-        pipe.send("ready")
+        pipe.send(SOLVER_DIGEST)
         while True:
             message = pipe.recv()
             if message != STOP:  # a stop that came too late
@@ -135,6 +152,7 @@ class Worker:
         self.lost = 0
         self.ready = threading.Event()
         self.closing = False
+        self.agrees = True
         self.context = multiprocessing.get_context("spawn")
         self.process: SpawnProcess | None = None
         self.pipe: Connection | None = None
@@ -173,7 +191,7 @@ class Worker:
             self.process, self.pipe = process, pipe
         if wait([pipe, process.sentinel], START_SECONDS) and pipe.poll():
             with contextlib.suppress(EOFError, OSError):
-                pipe.recv()
+                self.agrees = pipe.recv() == SOLVER_DIGEST
                 self.ready.set()
 
     def _watch(self) -> None:
@@ -183,30 +201,36 @@ class Worker:
             task = self.tasks.get()
             if task is None:
                 break
-            outcome = Outcome("stopped") if task.stopped else self._run(task)
-            while outcome is None:
-                outcome = self._after_death(task)
-            task.report(outcome)
+            self._finish(task)
         self._end()
 
-    def _after_death(self, task: Task) -> Outcome | None:
-        """Replace the dead process and try the task once more."""
-        if self.closing:
-            return Outcome("lost")
-        self._end()
-        self._start()
-        if task.stopped:
-            return Outcome("stopped")
-        self.lost += 1
-        task.deaths += 1
-        logger.warning("a computing process died; another one took its place")
-        return Outcome("lost") if task.deaths >= MOST_DEATHS else self._run(task)
+    def _finish(self, task: Task) -> None:
+        """Run a task and report its outcome, once more when the process dies over it."""
+        while True:
+            outcome = Outcome("stopped") if task.stopped else self._run(task)
+            if outcome is None and not task.stopped and not self.closing:
+                self.lost += 1
+                task.deaths += 1
+                logger.warning("a computing process died; another one takes its place")
+            over = task.stopped or self.closing or task.deaths >= MOST_DEATHS
+            if outcome is not None or over:
+                # told before a new process is started: nobody waits for that
+                task.report(outcome or Outcome("stopped" if task.stopped else "lost"))
+            if outcome is None and not self.closing:
+                self._end()
+                self._start()
+            if outcome is not None or over:
+                return
 
     def _run(self, task: Task) -> Outcome | None:
         """Return the outcome of a task, or None when the process died over it."""
         pipe, process = self.pipe, self.process
         if pipe is None or process is None:
             return None
+        if not self.agrees:
+            return Outcome(
+                "broken", trace="the solver's files have changed since the server started: restart it"
+            )
         try:
             with self.lock:
                 if task.stopped:

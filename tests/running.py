@@ -32,15 +32,23 @@ class RunningServer:
             env=os.environ | (environment or {}),
             text=True,
         )
+        self.client = httpx.Client(timeout=120.0, trust_env=False)
+        try:
+            self.address = self._read_address()
+            self.client.base_url = httpx.URL(self.address)
+            self.wait_until(lambda: self.counts()["workers_ready"] == self.counts()["workers"])
+        except BaseException:
+            self.stop(signal.SIGKILL)
+            raise
+
+    def _read_address(self) -> str:
         assert self.process.stdout is not None
         line = self.process.stdout.readline()
         found = re.search(r"http://\S+", line)
         if found is None:
             self.process.wait(10)
-            raise RuntimeError(f"the server did not start: {line} {self.log.read_text()}")
-        self.address = found.group().rstrip("/")
-        self.client = httpx.Client(base_url=self.address, timeout=120.0, trust_env=False)
-        self.wait_until(lambda: self.counts()["workers_ready"] == self.counts()["workers"])
+            raise RuntimeError(f"the server did not start: {line} {self.log.read_text()[-2000:]}")
+        return found.group().rstrip("/")
 
     @property
     def pid(self) -> int:

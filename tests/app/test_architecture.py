@@ -94,10 +94,14 @@ def test_nothing_is_evaluated_or_pickled(name: str) -> None:
 
 
 @pytest.mark.parametrize("name", MODULES)
-def test_modules_stay_small_and_user_input_is_not_asserted(name: str) -> None:
-    text = MODULES[name].read_text(encoding="utf-8")
-    assert len(text.splitlines()) <= MOST_LINES
-    assert not [node.lineno for node in ast.walk(ast.parse(text)) if isinstance(node, ast.Assert)]
+def test_modules_stay_small(name: str) -> None:
+    assert len(MODULES[name].read_text(encoding="utf-8").splitlines()) <= MOST_LINES
+
+
+@pytest.mark.parametrize("name", [name for name in MODULES if name.split(".")[0] == "app"])
+def test_user_input_is_not_asserted(name: str) -> None:
+    tree = ast.parse(MODULES[name].read_text(encoding="utf-8"))
+    assert not [node.lineno for node in ast.walk(tree) if isinstance(node, ast.Assert)]
 
 
 @pytest.mark.parametrize(

@@ -10,7 +10,8 @@ from typing import Any
 
 import pytest
 
-from app.exports import SERIES_KEYS, csv_of, curves_of
+from app.exports import csv_of, curves_of
+from app.series import SERIES_KEYS
 from tests.running import ROOT, RunningServer
 
 QUERIES = [

@@ -13,7 +13,8 @@ import pytest
 
 from tests.running import RunningServer, ServerFactory
 
-LONG = {"spins": 1500, "points": 120, "to": 2.0}
+LONG = {"spins": 40, "points": 2001, "to": 1.5}
+LONG_QUERY = "spins=40&points=2001&to=1.5"
 
 
 def start(server: RunningServer, sheet: dict[str, Any]) -> dict[str, Any]:
@@ -85,7 +86,7 @@ def test_opening_pages_computes_nothing(server: RunningServer) -> None:
 
 
 def test_progress_comes_as_events(server: RunningServer) -> None:
-    job = start(server, {"spins": 300, "points": 60, "to": 1.0})
+    job = start(server, {"spins": 30, "points": 200, "to": 1.0})
     seen = events(server, job["id"])
     names = [name for name, _ in seen]
     assert names[0] == "snapshot"
@@ -94,7 +95,7 @@ def test_progress_comes_as_events(server: RunningServer) -> None:
     done = [facts["done"] for _, facts in seen if "done" in facts]
     assert done == sorted(done)
     assert seen[-1][1]["state"] == "done"
-    assert seen[-1][1]["done"] == seen[-1][1]["total"] == 60
+    assert seen[-1][1]["done"] == seen[-1][1]["total"] == 200
     # a finished job answers with its end at once
     assert [name for name, _ in events(server, job["id"])] == ["snapshot", "end"]
 
@@ -110,10 +111,10 @@ def test_partial_results_have_gaps_not_guesses(start_server: ServerFactory) -> N
     assert any(gaps)
     assert not all(gaps)
     assert gaps == [value is None for value in result["limit"]["energy_per_spin"]]
-    answer = server.client.get("/api/sweep?spins=1500&points=120&to=2&wait=0")
+    answer = server.client.get(f"/api/sweep?{LONG_QUERY}&wait=0")
     assert answer.status_code == 202
     assert answer.json()["job"] == f"api/jobs/{job['id']}"
-    picture = server.client.get(f"/api/jobs/{job['id']}/picture?spins=1500&points=120&to=2&title=x")
+    picture = server.client.get(f"/api/jobs/{job['id']}/picture?{LONG_QUERY}&title=x")
     assert picture.status_code == 200
     assert picture.json()["complete"] is False
     other = server.client.get(f"/api/jobs/{job['id']}/picture?spins=15")
@@ -143,16 +144,32 @@ def test_cancelling_stops_the_workers_within_a_second(start_server: ServerFactor
     assert server.client.get("/api/sweep?spins=3&points=5").status_code == 200
 
 
+def test_a_point_that_takes_long_is_cut_off(start_server: ServerFactory) -> None:
+    server = start_server("--workers", "2")
+    job = start(server, LONG)
+    server.wait_until(lambda: server.counts()["workers_busy"] == 2)
+    before = server.worker_pids()
+    for pid in before:
+        os.kill(pid, signal.SIGSTOP)  # as deaf as in the middle of a long point
+    server.client.delete(f"/api/jobs/{job['id']}?for=everyone")
+    asked = time.monotonic()
+    server.wait_until(lambda: server.counts()["workers_busy"] == 0, 5.0)
+    assert time.monotonic() - asked < 1.0
+    server.wait_until(lambda: len(server.worker_pids()) == 2 and not set(before) & set(server.worker_pids()))
+    assert server.counts()["workers_lost"] == 0
+    assert server.client.get("/api/sweep?spins=3&points=5").status_code == 200
+
+
 def test_cancelled_work_goes_on_where_it_was(start_server: ServerFactory) -> None:
     server = start_server()
-    sheet = {"spins": 400, "points": 80, "to": 1.5}
+    sheet = {"spins": 30, "points": 300, "to": 1.5}
     job = start(server, sheet)
     server.wait_until(lambda: facts_of(server, job["id"])["done"] >= 8)
     server.client.delete(f"/api/jobs/{job['id']}?for=everyone")
     start(server, sheet)
     result = finish(server, job["id"])
     assert result["complete"]
-    assert server.counts()["points_computed"] == 80
+    assert server.counts()["points_computed"] == 300
     assert server.counts()["jobs_cancelled"] == 1
 
 
@@ -171,7 +188,7 @@ def test_jobs_nobody_holds_are_dropped(start_server: ServerFactory) -> None:
 
 
 def test_killed_workers_lose_nothing(start_server: ServerFactory) -> None:
-    sheet = {"spins": 400, "points": 60, "to": 1.5}
+    sheet = {"spins": 30, "points": 150, "to": 1.5}
     calm = start_server(data="calm")
     expected = finish(calm, start(calm, sheet)["id"])
     server = start_server(data="stormy")
@@ -214,7 +231,7 @@ def test_what_kills_workers_twice_is_refused(start_server: ServerFactory) -> Non
 
 @pytest.mark.parametrize("sign", [signal.SIGKILL, signal.SIGTERM])
 def test_a_restart_resumes_from_finished_chunks(start_server: ServerFactory, sign: int) -> None:
-    sheet = {"spins": 400, "points": 80, "to": 1.5}
+    sheet = {"spins": 30, "points": 300, "to": 1.5}
     first = start_server("--workers", "1")
     job = start(first, sheet)
     first.wait_until(lambda: first.counts()["chunks_computed"] >= 3)
@@ -237,7 +254,7 @@ def test_a_restart_resumes_from_finished_chunks(start_server: ServerFactory, sig
     result = finish(second, job["id"])
     counts = second.counts()
     assert counts["chunks_found"] >= 2
-    assert 0 < counts["points_computed"] < 80
+    assert 0 < counts["points_computed"] < 300
     calm = start_server("--workers", "2", data="calm")
     assert numbers(result) == numbers(finish(calm, start(calm, sheet)["id"]))
     # a third time everything is there
@@ -250,14 +267,14 @@ def test_a_restart_resumes_from_finished_chunks(start_server: ServerFactory, sig
 
 def test_the_queue_is_bounded(start_server: ServerFactory) -> None:
     server = start_server("--workers", "1", "--queue", "3")
-    for spins in (1500, 1501, 1502):
+    for spins in (40, 41, 42):
         start(server, LONG | {"spins": spins})
-    refused = server.client.post("/api/jobs", json=LONG | {"spins": 1503})
+    refused = server.client.post("/api/jobs", json=LONG | {"spins": 43})
     assert refused.status_code == 503
     assert refused.headers["retry-after"]
     assert refused.json()["error"]["code"] == "queue-full"
     # joining what runs already is no new work
-    start(server, LONG | {"spins": 1501})
+    start(server, LONG | {"spins": 41})
 
 
 def test_small_sheets_do_not_wait_for_large_ones(start_server: ServerFactory) -> None:
@@ -297,7 +314,7 @@ def test_unknown_jobs(server: RunningServer) -> None:
 
 
 def test_the_first_points_come_before_the_last(server: RunningServer) -> None:
-    job = start(server, {"spins": 150, "points": 101})
+    job = start(server, {"spins": 31, "points": 301})
     seen = [facts["done"] for name, facts in events(server, job["id"]) if name == "progress"]
     assert seen
-    assert 0 < seen[0] < 101
+    assert 0 < seen[0] < 301
