@@ -7,36 +7,56 @@ out to stay above the line; the trial vectors may live on a smaller one, or in t
 from __future__ import annotations
 
 import math
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
 
-from solver.blocks import BasisName
+from solver.blocks import BasisName, Block
 from solver.eigen import count_below_zero
 from solver.floor import Floors
 from solver.fock_basis import FockBlock
+from solver.ladder_count import plain_count, projected_count
 from solver.model import CollectiveModel
-from solver.shifted_basis import LadderCoupling, ShiftedBlock, count_on_ladders
+from solver.shifted_basis import LadderCoupling, ShiftedBlock
 
-_CLASSICAL_SHARE = 0.7
+# above this the plain certificate of the displaced basis rarely succeeds
+_PLAIN_UP_TO = 100
 
 
-def counting_cutoffs(
+@dataclass(frozen=True, slots=True)
+class Attempt:
+    """One way to count: on which cutoff, and whether with the projected operator."""
+
+    cutoff: int
+    projected: bool = False
+
+
+def counting_attempts(
     model: CollectiveModel, basis: BasisName, cutoff: int, line: float, floors: Floors
-) -> Iterator[int]:
-    """Cutoffs worth trying for a count below `line`, cheapest first."""
+) -> Iterator[Attempt]:
+    """Ways worth trying for a count below `line`, cheapest first."""
     if basis == "shifted":
         lowest = cutoff
-        while floors.above(lowest, True) <= line + model.mode:
+        while floors.above(lowest, shifted=True) <= line + model.mode:
             lowest += 1
-        yield from (lowest, lowest + 4, lowest + 10)
+        if model.spins <= _PLAIN_UP_TO:
+            yield Attempt(lowest)
+        yield Attempt(lowest, projected=True)
+        yield Attempt(lowest + 6, projected=True)
         return
     # a state on the last layer has at least w M - t sqrt(N M) - leak - field: make that > line
     total = max(abs(model.total_coupling), abs(model.coupling_difference))
-    depth = total * total * model.spins / (4.0 * model.mode * _CLASSICAL_SHARE)
-    depth += 0.5 * model.spins * math.hypot(model.splitting, model.bias) + line + model.mode
+    field = 0.5 * model.spins * math.hypot(model.splitting, model.bias) + line + model.mode
     slope = total * math.sqrt(model.spins)
-    root = (slope + math.sqrt(slope * slope + 4.0 * model.mode * max(depth, 0.0))) / (2.0 * model.mode)
-    first = max(cutoff, int(math.ceil(root * root)))
-    yield from (first, int(1.4 * first) + 4, 2 * first + 10)
+    first = cutoff
+    while True:
+        room = floors.above(first, shifted=False) - line
+        if room > 0.0:
+            leak = 0.25 * (first + 1.0) * total * total * model.spins / room
+            if model.mode * first - slope * math.sqrt(first) - leak > field:
+                break
+        first += max(1, first // 16)
+    yield Attempt(first)
+    yield Attempt(int(1.5 * first) + 8)
 
 
 def levels_below(
@@ -45,7 +65,7 @@ def levels_below(
     line: float,
     floors: Floors,
     basis: BasisName,
-    cutoff: int,
+    attempt: Attempt,
     coupling: LadderCoupling | None = None,
 ) -> list[int] | None:
     """Upper bounds on the number of levels below `line` in each sector, or None.
@@ -53,17 +73,32 @@ def levels_below(
     None when the part above the cutoff is not bounded away from the line. coupling: the ladder
     coupling of this cutoff where it is already at hand.
     """
-    room = floors.above(cutoff, basis == "shifted") - line
+    cutoff = attempt.cutoff
+    shifted = basis == "shifted"
+    share, floor = floors.best_split(cutoff, shifted=shifted)
+    room = share * model.mode * (cutoff + 1) + floor - line
     if room <= 0.0:
         return None
-    if basis == "shifted":
+    if shifted:
         if coupling is None or coupling.cutoff != cutoff:
             coupling = LadderCoupling(model, cutoff)
-        return count_on_ladders(
-            [ShiftedBlock(model, parity, cutoff, line, coupling) for parity in parities], room
-        )
+        blocks = [ShiftedBlock(model, parity, cutoff, line, coupling) for parity in parities]
+        if attempt.projected:
+            return projected_count(blocks, room, share, floor)
+        return plain_count(blocks, room)
     out = []
     for parity in parities:
         block = FockBlock(model, parity, cutoff, line)
         out.append(count_below_zero(block.band - block.leak_band() / room, block.half_width))
+    return out
+
+
+def levels_inside(blocks: Sequence[Block], line: float) -> list[int]:
+    """Number of levels below `line` of each truncated block by itself."""
+    out = []
+    for block in blocks:
+        band = block.band.copy(order="F")
+        band[0] -= line - block.shift
+        size = block.half_width if isinstance(block, FockBlock) else block.cutoff + 1
+        out.append(count_below_zero(band, size))
     return out

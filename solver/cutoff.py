@@ -24,24 +24,40 @@ def truncation_errors(profile: LayerProfile, energies: Array, cutoff: int) -> Ar
 
     energies (q,): the converged levels. Infinite where the cut leaves fewer than q states.
     """
-    kept = profile.overlaps[: cutoff + 1].sum(axis=0)
-    if cutoff + 1 >= len(profile.links):
-        return np.zeros_like(energies)
-    link = profile.links[cutoff]
-    # (E_j - E_0) S_ij keeps the digits that E_j S_ij would lose against a deep ground level
-    excess = energies - energies[0]
-    matrix = 0.5 * kept * (excess[None, :] + excess[:, None]) - 0.5 * (link + link.T)
-    scale, turn = np.linalg.eigh(kept)
-    if scale[0] < 1e-13:
-        return np.full_like(energies, np.inf)
-    whiten = turn / np.sqrt(scale)
-    values = np.linalg.eigvalsh(whiten.T @ matrix @ whiten)
-    out: Array = np.maximum(values - excess, 0.0)
-    return out
+    return _CutStates(profile, energies).errors(cutoff)
+
+
+class _CutStates:
+    """The states of a profile, cut at any layer: weights kept, and the levels they span."""
+
+    def __init__(self, profile: LayerProfile, energies: Array) -> None:
+        self.profile = profile
+        self.kept: Array = np.cumsum(profile.overlaps, axis=0)
+        # (E_j - E_0) S_ij keeps the digits that E_j S_ij would lose against a deep ground level
+        self.excess = energies - energies[0]
+
+    def errors(self, cutoff: int) -> Array:
+        at = cutoff - self.profile.first
+        if at + 1 >= len(self.kept):
+            return np.zeros_like(self.excess)
+        if at < 0:
+            return np.full_like(self.excess, np.inf)
+        kept, link, excess = self.kept[at], self.profile.links[at], self.excess
+        matrix = 0.5 * kept * (excess[None, :] + excess[:, None]) - 0.5 * (link + link.T)
+        scale, turn = np.linalg.eigh(kept)
+        if scale[0] < 1e-13:
+            return np.full_like(excess, np.inf)
+        whiten = turn / np.sqrt(scale)
+        values = np.linalg.eigvalsh(whiten.T @ matrix @ whiten)
+        out: Array = np.maximum(values - excess, 0.0)
+        return out
+
+    def enough(self, cutoff: int, need: float) -> bool:
+        return bool(np.all(self.errors(cutoff) <= need))
 
 
 def weight_above(profile: LayerProfile) -> Array:
-    """Largest weight, over the states, in layers above M; shape (L,) for M = 0..L-1."""
+    """Largest weight, over the states, in layers above M = first + l; shape (L,)."""
     weights = np.einsum("nii->ni", profile.overlaps)
     above = np.cumsum(weights[::-1], axis=0)[::-1]
     tails = np.zeros(len(weights))
@@ -51,21 +67,17 @@ def weight_above(profile: LayerProfile) -> Array:
 
 def needed_cutoff(profile: LayerProfile, energies: Array, need: float, tail: float) -> int:
     """Smallest M with every level within `need` and no state with more than `tail` above M."""
-    tails = weight_above(profile)
-    low = int(np.argmax(tails <= tail))
-    if _enough(profile, energies, low, need):
+    states = _CutStates(profile, energies)
+    low = profile.first + int(np.argmax(weight_above(profile) <= tail))
+    if states.enough(low, need):
         return low
     high = low + 1
-    while not _enough(profile, energies, high, need):
+    while not states.enough(high, need):
         low, high = high, high + 2 * (high - low)
     while high - low > 1:
         middle = (low + high) // 2
-        if _enough(profile, energies, middle, need):
+        if states.enough(middle, need):
             high = middle
         else:
             low = middle
     return high
-
-
-def _enough(profile: LayerProfile, energies: Array, cutoff: int, need: float) -> bool:
-    return bool(np.all(truncation_errors(profile, energies, cutoff) <= need))

@@ -109,6 +109,8 @@ def _scaled_lower(shifts: Array, rows: int, columns: int) -> Array:
 
 
 LARGEST_QUADRATURE = 400
+# from this shift on the overlaps are computed without scaling
+_FAR = 2.0
 
 
 @lru_cache(maxsize=64)
@@ -157,25 +159,66 @@ def displacement_matrix(shift: float, size: int) -> Array:
     return out
 
 
-def displaced(amplitudes: Array, shifts: Array, rows: int) -> Array:
+def displaced(amplitudes: Array, shifts: Array, first: int, rows: int) -> Array:
     """D(shift) applied to number amplitudes, each ladder by its own shift.
 
-    amplitudes: (q, ladders, levels); shifts: (ladders,); returns (q, ladders, rows).
+    amplitudes: (q, ladders, levels); shifts: (ladders,). Returns the levels first <= n < first +
+    rows of the result, shape (q, ladders, rows); first is even.
     """
     levels = amplitudes.shape[2]
     furthest = float(np.abs(shifts).max(initial=0.0))
-    nodes = quadrature_size(max(rows, levels), furthest)
-    if nodes > LARGEST_QUADRATURE:
-        table = displaced_overlaps(shifts, rows, levels)
-        out: Array = np.einsum("qmk,mnk->qmn", amplitudes, table, optimize=True)
-        return out
+    nodes = quadrature_size(max(first + rows, levels), furthest)
+    if nodes <= LARGEST_QUADRATURE:
+        return _displaced_by_quadrature(amplitudes, shifts, first, rows, nodes)
+    out = np.empty((*amplitudes.shape[:2], rows))
+    far = np.abs(shifts) >= _FAR
+    near = ~far
+    if far.any():
+        table = _far_table(shifts[far], first, rows, levels)
+        turned = amplitudes[:, far].transpose(1, 0, 2) @ table.transpose(1, 0, 2)
+        out[:, far] = turned.transpose(1, 0, 2)
+    if near.any():
+        full = displaced_overlaps(shifts[near], max(first + rows, levels), levels)
+        out[:, near] = np.einsum("qmk,mnk->qmn", amplitudes[:, near], full[:, first : first + rows])
+    return out
+
+
+def _far_table(shifts: Array, first: int, rows: int, columns: int) -> Array:
+    """table[k, ladder, n - first] for |shift| >= _FAR: the recurrence on D itself, unscaled.
+
+    What underflows at k = 0 stays negligible for the few columns in use.
+    """
+    n = np.arange(first, first + rows, dtype=np.float64)
+    size = np.abs(shifts)[:, None]
+    table = np.empty((columns, shifts.size, rows))
+    np.exp(-0.5 * size * size + n * np.log(size) - 0.5 * gammaln(n + 1.0), out=table[0])
+    diagonal = n / size - size
+    for k in range(columns - 1):
+        np.multiply(diagonal - k / size, table[k], out=table[k + 1])
+        if k:
+            table[k + 1] -= math.sqrt(k) * table[k - 1]
+        table[k + 1] *= 1.0 / math.sqrt(k + 1.0)
+    if first < columns:
+        # below the diagonal the recurrence is not stable: D[n, k] = (-1)^(k-n) D[k, n]
+        for k in range(first + 1, columns):
+            for low in range(first, min(k, first + rows)):
+                mirrored = table[low, :, k - first] if k < first + rows else 0.0
+                table[k, :, low - first] = (-1.0) ** (k - low) * mirrored
+    if np.any(shifts < 0.0):
+        flip = 1.0 - 2.0 * ((n[None, :] - np.arange(columns)[:, None]) % 2)
+        table *= np.where(shifts[None, :, None] < 0.0, flip[:, None, :], 1.0)
+    return table
+
+
+def _displaced_by_quadrature(amplitudes: Array, shifts: Array, first: int, rows: int, nodes: int) -> Array:
+    levels = amplitudes.shape[2]
     values, vectors = _position_basis(nodes)
-    even, odd = vectors[::2], vectors[1::2]
     phase = shifts[:, None] * values
     cosine, sine = np.cos(phase), np.sin(phase)
-    from_even = amplitudes[:, :, ::2] @ even[: (levels + 1) // 2]
-    from_odd = amplitudes[:, :, 1::2] @ odd[: levels // 2]
+    from_even = amplitudes[:, :, ::2] @ vectors[:levels:2]
+    from_odd = amplitudes[:, :, 1::2] @ vectors[1:levels:2]
+    wanted = vectors[first : first + rows]
     out = np.empty((*amplitudes.shape[:2], rows))
-    out[:, :, ::2] = (cosine * from_even - sine * from_odd) @ even[: (rows + 1) // 2].T
-    out[:, :, 1::2] = (sine * from_even + cosine * from_odd) @ odd[: rows // 2].T
+    out[:, :, ::2] = (cosine * from_even - sine * from_odd) @ wanted[::2].T
+    out[:, :, 1::2] = (sine * from_even + cosine * from_odd) @ wanted[1::2].T
     return out

@@ -208,10 +208,10 @@ def count_below_zero(band: Array, block: int) -> int:
     return negative
 
 
-def eliminate(pivot: Array, right: Array | None) -> tuple[int, Array]:
+def eliminate(pivot: Array, right: Array | None, *, likely_definite: bool = True) -> tuple[int, Array]:
     """Negative eigenvalues of a symmetric matrix (lower part given), and pivot^(-1) right."""
     nothing = np.empty((0, 0))
-    factor, info = dpotrf(pivot, lower=1, clean=0)
+    factor, info = dpotrf(pivot, lower=1, clean=0) if likely_definite else (pivot, 1)
     if info == 0:
         return 0, nothing if right is None else dpotrs(factor, right, lower=1)[0]
     factor, exchanged, _ = dsytrf(pivot, lower=1)
@@ -222,5 +222,5 @@ def eliminate(pivot: Array, right: Array | None) -> tuple[int, Array]:
 def _negative_pivots(factor: Array, exchanged: NDArray[np.int32]) -> int:
     """Negative eigenvalues of the block diagonal factor: every 2 x 2 pivot has exactly one."""
     single = exchanged > 0
-    pivots = np.diagonal(factor)
-    return int(np.sum(pivots[single] < 0.0)) + int(np.sum(~single)) // 2
+    ones = np.count_nonzero(factor.diagonal()[single] < 0.0)
+    return int(ones) + (exchanged.size - int(np.count_nonzero(single))) // 2

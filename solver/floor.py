@@ -121,15 +121,18 @@ class Floors:
         self.ground = spin_floor(model)
         self._shares: dict[tuple[float, bool], float] = {}
 
-    def above(self, cutoff: int, shifted: bool) -> float:
+    def above(self, cutoff: int, *, shifted: bool) -> float:
         """Floor of Q H Q, Q the part above the cutoff, in the unit of the model."""
-        quanta = self.model.mode * (cutoff + 1)
+        share, floor = self.best_split(cutoff, shifted=shifted)
+        return share * self.model.mode * (cutoff + 1) + floor
+
+    def best_split(self, cutoff: int, *, shifted: bool) -> tuple[float, float]:
+        """Share s and floor f with H >= s w n + f, best for n > cutoff (n displaced if shifted)."""
         if shifted and self.model.coupling_difference == 0.0:
-            return quanta + self.ground
-        best = -np.inf
-        for share in _SHARES:
-            best = max(best, share * quanta + self._share_floor(share, shifted))
-        return float(best)
+            return 1.0, self.ground
+        quanta = self.model.mode * (cutoff + 1)
+        splits = [(share, self._share_floor(share, shifted)) for share in _SHARES]
+        return max(splits, key=lambda split: split[0] * quanta + split[1])
 
     def boson_bound(self, energy: float) -> float:
         """Upper bound on <a^dag a> of any state with mean energy `energy`."""

@@ -19,20 +19,35 @@ from solver.spin import lowered, raised
 
 Array = NDArray[np.float64]
 
-_NEGLIGIBLE = 1e-26
-_CHUNK = 3_000_000
+_NEGLIGIBLE = 1e-21
+_TAIL = 4.3
+_CHUNK = 500_000
 
 
 @dataclass(frozen=True, slots=True)
 class LayerProfile:
-    """Layers n = 0..L-1 of q states of one sector.
+    """Layers n = first .. first+L-1 of q states of one sector; below and above is nothing.
 
-    overlaps[n]: Gram matrix of the parts in layer n, shape (L, q, q);
-    links[n]: <psi_i, layer n| H |psi_j, layer n+1>, shape (L, q, q), zero for the last.
+    overlaps[l]: Gram matrix of the parts in layer first + l, shape (L, q, q);
+    links[l]: <psi_i, layer first+l| H |psi_j, next layer>, shape (L, q, q), zero for the last.
     """
 
     overlaps: Array
     links: Array
+    first: int = 0
+
+
+@dataclass(frozen=True, slots=True)
+class NumberAmplitudes:
+    """Displaced-ladder states in number layers, without the parts that hold nothing.
+
+    values: (q, ladders, layers) for the ladders ladders.start..ladders.stop-1 of the block and
+    the layers n = first, first+1, ...; first is even.
+    """
+
+    values: Array
+    ladders: slice
+    first: int
 
 
 def fock_layers(block: FockBlock, vectors: Array) -> LayerProfile:
@@ -62,45 +77,71 @@ def excitation_layers(spectrum: ExcitationSpectrum, levels: list[ExcitationLevel
     return LayerProfile(overlaps, links)
 
 
-def number_amplitudes(block: ShiftedBlock, ladders: Array) -> Array:
-    """Displaced-ladder amplitudes (q, ladders, cutoff+1) in number layers: (q, ladders, layers).
+def number_amplitudes(block: ShiftedBlock, ladders: Array) -> NumberAmplitudes:
+    """Displaced-ladder amplitudes (q, ladders, cutoff+1) in number layers.
 
-    Each ladder is D(-G m) applied to its amplitudes; ladders without weight stay zero.
+    Each ladder is D(-G m) applied to its amplitudes.
     """
-    levels = block.cutoff + 1
-    shift = -block.model.displacement_per_quantum * block.m
-    weight = np.einsum("qmn,qmn->m", ladders, ladders)
-    busy = np.flatnonzero(weight > _NEGLIGIBLE)
-    reach = float(np.abs(shift[busy]).max(initial=0.0))
-    # the top displaced level reaches classically to (reach + sqrt(M))^2; beyond, a Gaussian tail
-    edge = (reach + math.sqrt(levels)) + 5.0
-    layers = max(levels, int(math.ceil(edge * edge))) + 1
-    out = np.zeros((ladders.shape[0], block.m.size, layers))
-    step = max(1, _CHUNK // (layers * levels))
-    for first in range(0, busy.size, step):
-        some = busy[first : first + step]
-        out[:, some] = displaced(ladders[:, some], shift[some], layers)
-    return out
+    weights = ladders * ladders
+    busy = np.flatnonzero(weights.sum(axis=(0, 2)) > _NEGLIGIBLE)
+    kept = slice(int(busy[0]), int(busy[-1]) + 1)
+    top = int(np.flatnonzero(weights.sum(axis=(0, 1)) > _NEGLIGIBLE)[-1]) + 1
+    shift = -block.model.displacement_per_quantum * block.m[kept]
+    first, end = _window(shift, top)
+    layers = max(end, top) - first
+    out = np.zeros((ladders.shape[0], shift.size, layers))
+    step = max(1, _CHUNK // (layers * top))
+    for start in range(0, shift.size, step):
+        some = slice(start, start + step)
+        part = ladders[:, kept][:, some, :top]
+        low, high = _window(shift[some], top)
+        low, high = max(low, first), min(high, first + layers)
+        out[:, some, low - first : high - first] = displaced(part, shift[some], low, high - low)
+    return NumberAmplitudes(out, kept, first)
 
 
-def shifted_layers(block: ShiftedBlock, amplitudes: Array) -> LayerProfile:
-    """Profile from `number_amplitudes` (q, ladders, layers) of one block."""
-    model, m = block.model, block.m
-    overlaps = np.einsum("imn,kmn->nik", amplitudes, amplitudes, optimize=True)
+def _window(shifts: Array, levels: int) -> tuple[int, int]:
+    """Layers that displaced levels below `levels` reach: an even first one, and one past the end.
+
+    Level k reaches classically to (|shift| +- sqrt(k))^2; beyond are Gaussian tails.
+    """
+    size = np.abs(shifts)
+    upper = float(size.max()) + math.sqrt(levels) + _TAIL
+    lower = max(0.0, float(size.min()) - math.sqrt(levels) - _TAIL)
+    return int(lower * lower) // 2 * 2, max(levels, int(math.ceil(upper * upper)) + 1)
+
+
+def shifted_layers(block: ShiftedBlock, amplitudes: NumberAmplitudes) -> LayerProfile:
+    """Profile of the states behind `amplitudes`."""
+    model, values = block.model, amplitudes.values
+    # layers first: (layers, q, ladders)
+    psi = np.ascontiguousarray(values.transpose(2, 0, 1))
+    overlaps = psi @ psi.transpose(0, 2, 1)
     links = np.zeros_like(overlaps)
-    here, above = amplitudes[:, :, :-1], amplitudes[:, :, 1:]
-    link = model.total_coupling * np.einsum("imn,kmn->nik", m[:, None] * here, above, optimize=True)
+    here, above = psi[:-1], psi[1:].transpose(0, 2, 1)
+    pulled = model.total_coupling * block.m[amplitudes.ladders] * here
     if model.coupling_difference != 0.0:
-        # i d Jy in the turned axes: -(d/2)(J+ - J-), ladders listed from the top down
-        steps = block.steps[:, None]
-        turn = np.einsum("imn,kmn->nik", steps * here[:, :-1], above[:, 1:], optimize=True)
-        turn -= np.einsum("imn,kmn->nik", steps * here[:, 1:], above[:, :-1], optimize=True)
-        link -= 0.5 * model.coupling_difference * turn
-        if block.folded and not block.has_centre:
-            sign = block.mirror * (1.0 - 2.0 * (np.arange(here.shape[2]) % 2))
-            edge = np.einsum("in,kn->nik", here[:, -1], above[:, -1])
-            strength = 0.5 * model.coupling_difference * block.mirror_step
-            link += strength * sign[:, None, None] * edge
-    climb = np.sqrt(np.arange(1.0, amplitudes.shape[2]) / model.spins)
+        pulled += _turned(block, amplitudes, here)
+    link = pulled @ above
+    first = amplitudes.first
+    climb = np.sqrt((first + np.arange(1.0, psi.shape[0])) / model.spins)
     links[:-1] = climb[:, None, None] * link
-    return LayerProfile(overlaps, links)
+    return LayerProfile(overlaps, links, first)
+
+
+def _turned(block: ShiftedBlock, amplitudes: NumberAmplitudes, here: Array) -> Array:
+    """-(d/2)(J+ - J-) applied to the left of a link, in the turned axes i d Jy.
+
+    here: (layers, q, ladders), ladders from the top down.
+    """
+    half = 0.5 * block.model.coupling_difference
+    kept = amplitudes.ladders
+    steps = block.steps[kept.start : kept.stop - 1]
+    out = np.zeros_like(here)
+    out[..., 1:] -= half * steps * here[..., :-1]
+    out[..., :-1] += half * steps * here[..., 1:]
+    if block.folded and not block.has_centre and kept.stop == block.m.size:
+        n = amplitudes.first + np.arange(here.shape[0])
+        sign = block.mirror * (1.0 - 2.0 * (n % 2))
+        out[..., -1] += half * block.mirror_step * sign[:, None] * here[..., -1]
+    return out

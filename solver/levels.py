@@ -17,7 +17,7 @@ from numpy.typing import NDArray
 
 from solver.blocks import BasisName, Block
 from solver.bounds import RitzSet, lower_bounds, ritz_set
-from solver.certificate import counting_cutoffs, levels_below
+from solver.certificate import counting_attempts, levels_below, levels_inside
 from solver.errors import ConvergenceError
 from solver.floor import Floors
 from solver.fock_basis import FockBlock
@@ -31,6 +31,7 @@ Status = Literal["bracketed", "estimated", "exact"]
 LARGEST_DIMENSION = 4_000_000
 _MOST_ROUNDS = 24
 _GUARDS = 1
+_PATIENT_UP_TO = 60
 
 
 @dataclass(frozen=True, slots=True)
@@ -146,6 +147,9 @@ class _Search:
         self.cutoff = first_cutoff(model, basis, count)
         self.guards = _GUARDS
         self.blockwise = False
+        # the count is refused for good where the leak of a large spin outweighs every cutoff
+        self.refused = 0
+        self.patience = 4 if model.spins <= _PATIENT_UP_TO else 0
         # residual^2 / gap is the energy error: this aims well below the tolerance
         self.accuracy = min(1e-6, 0.03 * math.sqrt(tolerance / model.mode))
 
@@ -237,14 +241,20 @@ class _Search:
         block = next(iter(sets.values())).block
         shared = block.coupling if isinstance(block, ShiftedBlock) else None
         expected = [int(np.sum(found.energies < line)) for found in sets.values()]
-        for cutoff in counting_cutoffs(self.model, self.basis, self.cutoff, line, self.floors):
-            counted = levels_below(self.model, self.parities, line, self.floors, self.basis, cutoff)
+        for attempt in counting_attempts(self.model, self.basis, self.cutoff, line, self.floors):
+            counted = levels_below(self.model, self.parities, line, self.floors, self.basis, attempt, shared)
             if counted is not None and all(map(operator.le, counted, expected)):
                 return True
-        # either a degenerate level was missed or the trial vectors are still too coarse
-        self.cutoff += 2
-        self.guards += int(self.blockwise)
-        self.blockwise = True
+        inside = levels_inside([found.block for found in sets.values()], line)
+        if any(map(operator.ne, inside, expected)):
+            # the iteration overlooked a degenerate level
+            self.guards += int(self.blockwise)
+            self.blockwise = True
+            return None
+        self.refused += 1
+        if self.refused > self.patience:
+            return False
+        self.cutoff += max(3, self.cutoff // 4)
         return None
 
     def _spectrum(self, sets: dict[int, RitzSet], line: float, certified: bool) -> Spectrum:

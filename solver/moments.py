@@ -13,10 +13,13 @@ from numpy.typing import NDArray
 
 from solver.excitation import ExcitationLevel, ExcitationSpectrum
 from solver.fock_basis import FockBlock
+from solver.layers import NumberAmplitudes
 from solver.shifted_basis import ShiftedBlock
 from solver.spin import lowered, projections, raised
 
 Array = NDArray[np.float64]
+
+_NEGLIGIBLE = 1e-20
 
 
 @dataclass(frozen=True, slots=True)
@@ -46,8 +49,10 @@ def _schmidt_weights(*parts: Array) -> Array:
     """Squared singular values of a direct sum of matrices, descending."""
     weights = []
     for part in parts:
-        if part.size:
-            small = part if part.shape[0] <= part.shape[1] else part.T
+        squares = part * part
+        busy = part[squares.sum(axis=1) > _NEGLIGIBLE][:, squares.sum(axis=0) > _NEGLIGIBLE]
+        if busy.size:
+            small = busy if busy.shape[0] <= busy.shape[1] else busy.T
             weights.append(np.linalg.eigvalsh(small @ small.T))
     merged = np.maximum(np.concatenate(weights), 0.0)
     return np.sort(merged)[::-1]
@@ -114,11 +119,10 @@ def excitation_moments(spectrum: ExcitationSpectrum, level: ExcitationLevel) -> 
     )
 
 
-def shifted_moments(block: ShiftedBlock, vector: Array, layers: Array) -> Moments:
+def shifted_moments(block: ShiftedBlock, vector: Array, layers: NumberAmplitudes) -> Moments:
     """Moments of one vector of a displaced-ladder block.
 
-    layers: the same state in number layers, shape (ladders, n), as from
-    `layers.number_amplitudes`; used for the Schmidt weights only.
+    layers: the same state (its first) in number layers; used for the Schmidt weights only.
     """
     psi = block.ladders(vector[None])
     size = block.model.spins
@@ -134,9 +138,9 @@ def shifted_moments(block: ShiftedBlock, vector: Array, layers: Array) -> Moment
     total = 0.25 * size * (size + 2.0)
     with_bias = block.parity == 0
     if with_bias:
-        schmidt = _schmidt_weights(layers)
+        schmidt = _schmidt_weights(layers.values[0])
     else:
-        schmidt = _schmidt_weights(layers[:, ::2], layers[:, 1::2])
+        schmidt = _schmidt_weights(layers.values[0, :, ::2], layers.values[0, :, 1::2])
     return Moments(
         spins=size,
         quanta=float(np.sum(once * once)),

@@ -19,6 +19,7 @@ from solver.fock_basis import FockBlock
 from solver.forecast import cheaper_basis
 from solver.layers import (
     LayerProfile,
+    NumberAmplitudes,
     excitation_layers,
     fock_layers,
     number_amplitudes,
@@ -208,59 +209,54 @@ def _from_spectrum(question: PointQuestion, spectrum: Spectrum) -> PointAnswer:
         for parity in spectrum.sectors
     }
     ground = levels[0]
-    needed = 0
-    moments: Moments | None = None
-    for parity, (energies, profile, own) in _profiles(spectrum, shown).items():
-        if parity == ground.parity:
-            moments = own
-        needed = max(
-            needed,
-            needed_cutoff(profile, energies, question.need * question.model.mode, question.tail),
+    chosen = {parity: spectrum.sectors[parity].ritz for parity, places in shown.items() if places}
+    counts = {parity: max(shown[parity]) + 1 for parity in chosen}
+    amplitudes = _shared_amplitudes(chosen, counts)
+    allowed = question.need * question.model.mode
+    needed = max(
+        needed_cutoff(
+            _profile(found, counts[parity], amplitudes.get(parity)),
+            found.energies[: counts[parity]],
+            allowed,
+            question.tail,
         )
-    assert moments is not None
+        for parity, found in chosen.items()
+    )
+    moments = _moments(chosen[ground.parity], amplitudes.get(ground.parity))
     return _assembled(question, rows, moments, _accuracy(spectrum), needed, spectrum.cutoff, spectrum.basis)
 
 
-def _profiles(
-    spectrum: Spectrum, shown: dict[int, list[int]]
-) -> dict[int, tuple[Array, LayerProfile, Moments]]:
-    """Per parity: energies and number layers of the shown levels, moments of the lowest."""
-    out = {}
-    chosen = {
-        parity: spectrum.sectors[parity].ritz for parity, places in shown.items() if places
-    }
-    counts = {parity: max(shown[parity]) + 1 for parity in chosen}
-    amplitudes = _shared_amplitudes(chosen, counts)
-    for parity, found in chosen.items():
-        vectors = found.vectors[: counts[parity]]
-        energies = found.energies[: counts[parity]]
-        if isinstance(found.block, FockBlock):
-            profile = fock_layers(found.block, vectors)
-            out[parity] = (energies, profile, fock_moments(found.block, vectors[0]))
-        elif isinstance(found.block, ShiftedBlock):
-            layers = amplitudes[parity]
-            moments = shifted_moments(found.block, vectors[0], layers[0])
-            out[parity] = (energies, shifted_layers(found.block, layers), moments)
-    return out
+def _profile(found: RitzSet, count: int, amplitudes: NumberAmplitudes | None) -> LayerProfile:
+    """Number layers of the lowest `count` states of a sector."""
+    if isinstance(found.block, ShiftedBlock) and amplitudes is not None:
+        return shifted_layers(found.block, amplitudes)
+    assert isinstance(found.block, FockBlock)
+    return fock_layers(found.block, found.vectors[:count])
 
 
-def _shared_amplitudes(
-    chosen: dict[int, RitzSet], counts: dict[int, int]
-) -> dict[int, Array]:
+def _moments(found: RitzSet, amplitudes: NumberAmplitudes | None) -> Moments:
+    """Moments of the lowest state of a sector."""
+    if isinstance(found.block, ShiftedBlock) and amplitudes is not None:
+        return shifted_moments(found.block, found.vectors[0], amplitudes)
+    assert isinstance(found.block, FockBlock)
+    return fock_moments(found.block, found.vectors[0])
+
+
+def _shared_amplitudes(chosen: dict[int, RitzSet], counts: dict[int, int]) -> dict[int, NumberAmplitudes]:
     """Number-layer amplitudes of displaced-ladder states, both parities in one pass."""
     blocks = {
-        parity: found.block
-        for parity, found in chosen.items()
-        if isinstance(found.block, ShiftedBlock)
+        parity: found.block for parity, found in chosen.items() if isinstance(found.block, ShiftedBlock)
     }
     if not blocks:
         return {}
-    stacked = np.concatenate(
-        [block.ladders(chosen[p].vectors[: counts[p]]) for p, block in blocks.items()]
-    )
+    stacked = np.concatenate([block.ladders(chosen[p].vectors[: counts[p]]) for p, block in blocks.items()])
     everything = number_amplitudes(next(iter(blocks.values())), stacked)
     edges = np.cumsum([counts[parity] for parity in blocks])[:-1]
-    return dict(zip(blocks, np.split(everything, edges), strict=True))
+    parts = np.split(everything.values, edges)
+    return {
+        parity: NumberAmplitudes(part, everything.ladders, everything.first)
+        for parity, part in zip(blocks, parts, strict=True)
+    }
 
 
 def _accuracy(spectrum: Spectrum) -> StateAccuracy:

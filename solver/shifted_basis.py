@@ -17,14 +17,12 @@ Phys. Scr. T160, 014005 (2014).
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
 
 import numpy as np
 from numpy.typing import NDArray
 
 from solver.blocks import Action, BasisName, Block
 from solver.displacement import displacement_matrix
-from solver.eigen import eliminate
 from solver.model import CollectiveModel
 from solver.spin import raising_elements
 
@@ -97,6 +95,11 @@ class ShiftedBlock:
         self.mirror_step = math.sqrt((size + 1.0) * (size + 1.0) / 4.0)
 
     @property
+    def kept_table(self) -> Array:
+        """Coupling table restricted to the levels kept, shape (cutoff+1, cutoff+1)."""
+        return self.coupling.table[: self.cutoff + 1, : self.cutoff + 1]
+
+    @property
     def _has_half(self) -> bool:
         return self.folded and not self.has_centre
 
@@ -111,7 +114,7 @@ class ShiftedBlock:
         if count > 1:
             template = np.zeros((levels, width))
             column, row = np.meshgrid(n, n, indexing="ij")
-            kept = self.coupling.table[:levels, :levels]
+            kept = self.kept_table
             template[column, levels + row - column] = kept.T
             store[: count - 1] += self.steps[:, None, None] * template
         if self._has_half:
@@ -130,7 +133,7 @@ class ShiftedBlock:
 
     def _add_mirror(self, last: Array) -> None:
         levels = self.cutoff + 1
-        inner = self.mirror_matrix(self.coupling.table[:levels, :levels])
+        inner = self.mirror_matrix(self.kept_table)
         for n in range(levels):
             last[n, : levels - n] += inner[n, n:]
 
@@ -239,35 +242,3 @@ class ShiftedBlock:
         common = min(self.cutoff, into.cutoff) + 1
         out[:, :, :common] = psi[:, :, :common]
         return into.flatten(out)
-
-
-def count_on_ladders(blocks: Sequence[ShiftedBlock], room: float) -> list[int]:
-    """Number of levels below the blocks' shift, for parities sharing one model and cutoff.
-
-    room: lower bound on (energy of the discarded part) - shift. The parities differ in the last
-    ladder alone, so everything above is eliminated once for all of them.
-    """
-    first = blocks[0]
-    levels, count = first.cutoff + 1, first.m.size
-    kept = first.coupling.table[:levels, :levels]
-    upper = np.ascontiguousarray(kept.T)
-    stack = -first.leaks() / room
-    n = np.arange(levels)
-    stack[:, n, n] += first.offset[:, None] + first.model.mode * n
-    negative = 0
-    carried = np.zeros((levels, levels))
-    for at in range(count - 1):
-        fewer, solved = eliminate(stack[at] - carried, upper)
-        negative += fewer
-        carried = kept @ solved
-        if at < count - 2:
-            carried *= first.steps[at] ** 2
-    out = []
-    for block in blocks:
-        last = stack[-1] - (block.steps[-1] ** 2 * carried if count > 1 else 0.0)
-        if block.has_centre:
-            last = last[np.ix_(block.centre_kept, block.centre_kept)]
-        elif block.folded:
-            last = last + block.mirror_matrix(block.coupling.table[:levels, :levels])
-        out.append(negative + (eliminate(last, None)[0] if last.size else 0))
-    return out
