@@ -16,6 +16,7 @@ from solver.floor import Floors
 from solver.fock_basis import FockBlock
 from solver.ladder_count import plain_count, projected_count
 from solver.model import CollectiveModel
+from solver.parity_chain import ParityChain, number_block
 from solver.shifted_basis import LadderCoupling, ShiftedBlock
 
 # above this the plain certificate of the displaced basis rarely succeeds
@@ -86,17 +87,22 @@ def levels_below(
         if attempt.projected:
             return projected_count(blocks, room, share, floor)
         return plain_count(blocks, room)
-    out = []
-    for parity in parities:
-        block = FockBlock(model, parity, cutoff, line)
-        out.append(count_below_zero(block.band - block.leak_band() / room, block.half_width))
-    return out
+    return [_count_numbers(number_block(model, parity, cutoff, line), line, room) for parity in parities]
+
+
+def _count_numbers(block: FockBlock, line: float, room: float) -> int:
+    if isinstance(block, ParityChain):
+        return block.levels_below(line, room)
+    return count_below_zero(block.band - block.leak_band() / room, block.half_width)
 
 
 def levels_inside(blocks: Sequence[Block], line: float) -> list[int]:
     """Number of levels below `line` of each truncated block by itself."""
     out = []
     for block in blocks:
+        if isinstance(block, ParityChain):
+            out.append(block.levels_below(line, math.inf))
+            continue
         band = block.band.copy(order="F")
         band[0] -= line - block.shift
         size = block.half_width if isinstance(block, FockBlock) else block.cutoff + 1

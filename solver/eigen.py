@@ -18,13 +18,14 @@ from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.linalg.lapack import dpbtrf, dpbtrs, dpotrf, dpotrs, dstevd, dsytrf, dsytrs
+from scipy.linalg.lapack import dpbtrf, dpbtrs, dpotrf, dpotrs, dstebz, dstein, dstevd, dsytrf, dsytrs
 
 from solver.errors import ConvergenceError
 
 Array = NDArray[np.float64]
 
 _DENSE_BELOW = 40
+_CHAIN_BELOW = 48
 _LONGEST_KRYLOV = 120
 _LONGEST_BLOCK = 40
 _LOOSE = 1e-3
@@ -66,6 +67,8 @@ def lowest_of_band(
     """
     size = band.shape[1]
     wanted = min(size, count + guards)
+    if band.shape[0] == 2:
+        return _lowest_of_chain(band, wanted)
     if size <= max(_DENSE_BELOW, 2 * wanted):
         values, columns = np.linalg.eigh(dense_from_band(band))
         return Subspace(values[:wanted], np.ascontiguousarray(columns[:, :wanted].T))
@@ -75,6 +78,21 @@ def lowest_of_band(
     if blockwise:
         return _block_krylov(factor, size, wanted, start, accuracy)
     return _krylov(factor, size, count, wanted, start, accuracy)
+
+
+def _lowest_of_chain(band: Array, wanted: int) -> Subspace:
+    """Lowest eigenpairs of a tridiagonal matrix by LAPACK, without the iteration."""
+    size = band.shape[1]
+    if size <= _CHAIN_BELOW:
+        values, columns, info = dstevd(band[0], band[1, : max(size - 1, 1)])
+    else:
+        count, values, blocks, splits, info = dstebz(band[0], band[1, :-1], 2, 0.0, 0.0, 1, wanted, 0.0, "B")
+        columns, info = dstein(band[0], band[1, :-1], values[:count], blocks[:count], splits)
+        order = np.argsort(values[:count], kind="stable")
+        values, columns = values[order], columns[:, order]
+    if info != 0:  # pragma: no cover - only for NaN input
+        raise ConvergenceError("levels", wanted, "finite parameters")
+    return Subspace(values[:wanted], columns[:, :wanted].T)
 
 
 def _krylov(

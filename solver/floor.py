@@ -46,6 +46,11 @@ def spin_floor(model: CollectiveModel, kept_share: float = 1.0, shifted: bool = 
     of the displaced mode b = a + G Jx instead of a. Unit of the model.
     """
     size = model.spins
+    if size == 1 and model.bias == 0.0 and not shifted:
+        # two levels: spin down pays lc^2, spin up lr^2
+        mode, half = model.mode * kept_share, 0.5 * model.splitting
+        down, up = -half - model.counter**2 / mode, half - model.rotating**2 / mode
+        return min(down, up) - _ROUNDING * max(abs(down), abs(up))
     steps = raising_elements(size)
     total, difference = model.total_coupling, model.coupling_difference
     if shifted:

@@ -20,9 +20,9 @@ from solver.bounds import RitzSet, lower_bounds, ritz_set
 from solver.certificate import counting_attempts, levels_below, levels_inside
 from solver.errors import ConvergenceError
 from solver.floor import Floors
-from solver.fock_basis import FockBlock
 from solver.forecast import first_cutoff
 from solver.model import CollectiveModel
+from solver.parity_chain import number_block
 from solver.shifted_basis import LadderCoupling, ShiftedBlock
 
 Array = NDArray[np.float64]
@@ -57,7 +57,6 @@ class Spectrum:
     sectors: dict[int, SectorLevels]
     basis: BasisName
     cutoff: int
-    next_cutoff: int
     met: bool
     floors: Floors
 
@@ -67,7 +66,7 @@ class Spectrum:
             parity: max(1, sum(level.parity == parity for level in self.levels)) for parity in self.sectors
         }
         sets = {parity: sector.ritz for parity, sector in self.sectors.items()}
-        return Start(self.basis, self.next_cutoff, counts, sets)
+        return Start(self.basis, self.cutoff, counts, sets)
 
 
 @dataclass(frozen=True, slots=True)
@@ -95,7 +94,7 @@ def sector_builder(
 ) -> Callable[[int], Block]:
     """Function making the block of a given parity; what the parities share is made once."""
     if basis == "fock":
-        return lambda parity: FockBlock(model, parity, cutoff, shift)
+        return lambda parity: number_block(model, parity, cutoff, shift)
     coupling = LadderCoupling(model, cutoff)
     return lambda parity: ShiftedBlock(model, parity, cutoff, shift, coupling)
 
@@ -151,7 +150,7 @@ class _Search:
         self.refused = 0
         self.patience = 4 if model.spins <= _PATIENT_UP_TO else 0
         # residual^2 / gap is the energy error: this aims well below the tolerance
-        self.accuracy = min(1e-6, 0.03 * math.sqrt(tolerance / model.mode))
+        self.accuracy = min(0.3 * state_accuracy, 0.03 * math.sqrt(tolerance / model.mode))
 
     def adopt(self, start: Start) -> None:
         self.cutoff = start.cutoff
@@ -171,8 +170,10 @@ class _Search:
             if certified is None:
                 continue
             spectrum = self._spectrum(sets, line, certified)
-            if spectrum.met or not self._grow(spectrum):
+            more = self._grown(spectrum)
+            if more == 0:
                 return spectrum
+            self.cutoff += more
         if spectrum is None:
             raise ConvergenceError("levels", self.count, "fewer levels, or a wider tolerance")
         return spectrum
@@ -269,24 +270,25 @@ class _Search:
                 lower = float(low[place] - found.roundoff[place])
                 rows.append(Level(upper, lower, parity, place, status))
         levels = tuple(_ordered(rows)[: self._reach(sets)])
-        met = self._met(levels, sectors)
-        return Spectrum(levels, sectors, self.basis, self.cutoff, self.cutoff, met, self.floors)
+        met = all(level.upper - level.lower <= self.tolerance for level in levels)
+        return Spectrum(levels, sectors, self.basis, self.cutoff, met, self.floors)
 
-    def _met(self, levels: tuple[Level, ...], sectors: dict[int, SectorLevels]) -> bool:
-        if any(level.upper - level.lower > self.tolerance for level in levels):
-            return False
-        return True
-
-    def _grow(self, spectrum: Spectrum) -> bool:
-        """Raise the cutoff by what the decay of the layers suggests; False when rounding limits."""
-        roundoff = max(2.0 * float(sector.ritz.roundoff.max()) for sector in spectrum.sectors.values())
+    def _grown(self, spectrum: Spectrum) -> int:
+        """Layers to add until levels and ground state are good enough; 0 when nothing helps."""
+        roundoff = 2.0 * max(float(sector.ritz.roundoff.max()) for sector in spectrum.sectors.values())
         width = max(level.upper - level.lower for level in spectrum.levels)
-        if width - roundoff < 0.05 * roundoff or self.tolerance <= roundoff and width < 4 * roundoff:
-            return False
-        decades = math.log10(width / max(self.tolerance, 1e-300))
+        sector = spectrum.sectors[spectrum.levels[0].parity]
+        decades = 0.0
+        if width > self.tolerance and width > 1.2 * roundoff:
+            decades = math.log10(width / max(self.tolerance, roundoff))
+        gap = float(sector.lower[1] if len(sector.lower) > 1 else sector.line) - spectrum.levels[0].upper
+        sine = math.sqrt(max(float(sector.ritz.leaked[0, 0]), 0.0)) / max(gap, roundoff)
+        if sine > self.state_accuracy and sine > 10.0 * roundoff / max(gap, roundoff):
+            decades = max(decades, 2.0 * math.log10(sine / self.state_accuracy))
+        if decades <= 0.0:
+            return 0
         slope = min(_decay(sector.ritz) for sector in spectrum.sectors.values())
-        self.cutoff += max(1, int(math.ceil(0.9 * decades / slope)))
-        return True
+        return max(1, int(math.ceil(0.9 * decades / slope)))
 
 
 def _ordered(levels: list[Level]) -> list[Level]:
