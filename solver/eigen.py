@@ -12,6 +12,7 @@ for inertia.
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterator
 from dataclasses import dataclass
 from functools import lru_cache
@@ -68,7 +69,7 @@ def lowest_of_band(
     size = band.shape[1]
     wanted = min(size, count + guards)
     if band.shape[0] == 2:
-        return _lowest_of_chain(band, wanted)
+        return Subspace(*lowest_of_chain(band[0], band[1, :-1], wanted))
     if size <= max(_DENSE_BELOW, 2 * wanted):
         values, columns = np.linalg.eigh(dense_from_band(band))
         return Subspace(values[:wanted], np.ascontiguousarray(columns[:, :wanted].T))
@@ -80,19 +81,18 @@ def lowest_of_band(
     return _krylov(factor, size, count, wanted, start, accuracy)
 
 
-def _lowest_of_chain(band: Array, wanted: int) -> Subspace:
-    """Lowest eigenpairs of a tridiagonal matrix by LAPACK, without the iteration."""
-    size = band.shape[1]
-    if size <= _CHAIN_BELOW:
-        values, columns, info = dstevd(band[0], band[1, : max(size - 1, 1)])
+def lowest_of_chain(along: Array, beside: Array, wanted: int) -> tuple[Array, Array]:
+    """Lowest eigenvalues (wanted,) and vectors (wanted, n) of a symmetric tridiagonal matrix."""
+    if along.size <= _CHAIN_BELOW:
+        values, columns, info = dstevd(along, beside if along.size > 1 else np.zeros(1))
     else:
-        count, values, blocks, splits, info = dstebz(band[0], band[1, :-1], 2, 0.0, 0.0, 1, wanted, 0.0, "B")
-        columns, info = dstein(band[0], band[1, :-1], values[:count], blocks[:count], splits)
+        count, values, blocks, splits, info = dstebz(along, beside, 2, 0.0, 0.0, 1, wanted, 0.0, "B")
+        columns, info = dstein(along, beside, values[:count], blocks[:count], splits)
         order = np.argsort(values[:count], kind="stable")
         values, columns = values[order], columns[:, order]
     if info != 0:  # pragma: no cover - only for NaN input
         raise ConvergenceError("levels", wanted, "finite parameters")
-    return Subspace(values[:wanted], columns[:, :wanted].T)
+    return values[:wanted], columns[:, :wanted].T
 
 
 def _krylov(
@@ -106,16 +106,17 @@ def _krylov(
     along, beside = np.zeros(longest), np.zeros(longest)
     goal = np.full(wanted, _LOOSE)
     goal[:count] = accuracy
-    check = min(longest, wanted + 5)
+    check = min(longest, 2 * wanted + 4)
     for step in range(longest):
         image, _ = dpbtrs(factor, basis[step], lower=1)
+        # three terms first, then one pass against everything: what is left is rounding
+        along[step] = image @ basis[step]
+        image -= along[step] * basis[step]
+        if step:
+            image -= beside[step - 1] * basis[step - 1]
         known = basis[: step + 1]
-        overlap = known @ image
-        image -= overlap @ known
-        again = known @ image
-        image -= again @ known
-        along[step] = overlap[step] + again[step]
-        beside[step] = np.sqrt(image @ image)
+        image -= (known @ image) @ known
+        beside[step] = math.sqrt(image @ image)
         if beside[step] < 1e-14 * along[0]:
             check = step + 1
         else:
@@ -126,7 +127,7 @@ def _krylov(
             left = beside[step] * np.abs(weights[-1, top]) / values[top]
             if step + 1 == longest or beside[step] < 1e-14 * along[0] or np.all(left < goal):
                 break
-            check += 3
+            check += 4
     used = step + 1
     chosen = weights[:, top]
     # one inverse step more costs nothing: the images are known from the recurrence

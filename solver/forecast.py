@@ -21,7 +21,7 @@ _SOLVES = 28.0
 
 def classical_quanta(model: CollectiveModel) -> float:
     """Boson number of the classical ground state, (t/2w)^2 N (1 - (w w0/t^2)^2)."""
-    pull = max(abs(model.total_coupling), abs(model.coupling_difference)) ** 2 / model.mode
+    pull = _pull(model)
     field = abs(model.splitting)
     if pull == 0.0 or (pull <= field and model.bias == 0.0):
         return 0.0
@@ -29,10 +29,25 @@ def classical_quanta(model: CollectiveModel) -> float:
     return model.spins * pull / (4.0 * model.mode) * (1.0 - tilt * tilt)
 
 
+def levels_per_sector(model: CollectiveModel, levels: int) -> int:
+    """How many levels to ask of each sector first: above the transition parities pair up."""
+    if not model.conserves_parity:
+        return levels
+    if _pull(model) > abs(model.splitting) and levels > 1:
+        return (levels + 1) // 2
+    return levels // 2 + 1
+
+
+def _pull(model: CollectiveModel) -> float:
+    """(lr + lc)^2 / w, to be compared with w0."""
+    strongest = max(abs(model.total_coupling), abs(model.coupling_difference))
+    return strongest * strongest / model.mode
+
+
 def first_cutoff(model: CollectiveModel, basis: BasisName, levels: int) -> int:
     """Cutoff to begin with, for `levels` levels at a tolerance near 1e-9 of the mode."""
-    share = levels if not model.conserves_parity else levels // 2 + 1
-    pull = max(abs(model.total_coupling), abs(model.coupling_difference)) ** 2 / model.mode
+    share = levels_per_sector(model, levels)
+    pull = _pull(model)
     if basis == "fock":
         mean = classical_quanta(model)
         softness = min(1.0, pull / (abs(model.splitting) + abs(model.bias) + 1e-300))
@@ -40,7 +55,9 @@ def first_cutoff(model: CollectiveModel, basis: BasisName, levels: int) -> int:
         return int(share + 7 + mean + (6.0 + 0.5 * share) * spread)
     gap = abs(model.displacement_per_quantum)
     kinetic = max(abs(model.splitting), abs(model.coupling_difference)) / model.mode
-    return int(share + 7 + 22.0 * gap * max(1.0, kinetic) ** 0.8 + (2.0 + gap) * min(kinetic, 2.0))
+    onset = min(1.0, pull / (abs(model.splitting) + 1e-300))
+    near = (2.0 + 3.0 * onset + gap) * min(kinetic, 2.0)
+    return int(share + 7 + 22.0 * gap * max(1.0, kinetic) ** 0.8 + near)
 
 
 def _operations(model: CollectiveModel, cutoff: int, half_width: int, dimension: float) -> float:

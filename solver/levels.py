@@ -9,8 +9,6 @@ from __future__ import annotations
 import math
 import operator
 from collections.abc import Callable
-from dataclasses import dataclass, field
-from typing import Literal
 
 import numpy as np
 from numpy.typing import NDArray
@@ -20,73 +18,20 @@ from solver.bounds import RitzSet, lower_bounds, ritz_set
 from solver.certificate import counting_attempts, levels_below, levels_inside
 from solver.errors import ConvergenceError
 from solver.floor import Floors
-from solver.forecast import first_cutoff
+from solver.forecast import first_cutoff, levels_per_sector
 from solver.model import CollectiveModel
 from solver.parity_chain import number_block
+from solver.one_spin import one_spin_levels
 from solver.shifted_basis import LadderCoupling, ShiftedBlock
+from solver.spectrum import Level, SectorLevels, Spectrum, Start, Status, in_order
 
 Array = NDArray[np.float64]
-Status = Literal["bracketed", "estimated", "exact"]
 
 LARGEST_DIMENSION = 4_000_000
 _MOST_ROUNDS = 24
 _GUARDS = 1
+_FINEST = 1e-12
 _PATIENT_UP_TO = 60
-
-
-@dataclass(frozen=True, slots=True)
-class Level:
-    """One level: upper and lower bound, its sector, its place in the sector, and the claim."""
-
-    upper: float
-    lower: float
-    parity: int
-    place: int
-    status: Status
-
-
-@dataclass(slots=True)
-class Spectrum:
-    """The lowest levels of a model and the vectors behind them.
-
-    levels: ascending by energy, over all sectors. sectors: per parity the Ritz set, lower bounds
-    of its certified levels, and `line`, below which the sector holds no more than those.
-    """
-
-    levels: tuple[Level, ...]
-    sectors: dict[int, SectorLevels]
-    basis: BasisName
-    cutoff: int
-    met: bool
-    floors: Floors
-
-    def as_start(self) -> Start:
-        """What a neighbouring point can begin from."""
-        counts = {
-            parity: max(1, sum(level.parity == parity for level in self.levels)) for parity in self.sectors
-        }
-        sets = {parity: sector.ritz for parity, sector in self.sectors.items()}
-        return Start(self.basis, self.cutoff, counts, sets)
-
-
-@dataclass(frozen=True, slots=True)
-class SectorLevels:
-    """Certified content of one sector: no more than len(lower) levels lie below `line`."""
-
-    ritz: RitzSet
-    lower: Array
-    line: float
-    certified: bool
-
-
-@dataclass(slots=True)
-class Start:
-    """What a solved neighbour offers: cutoff and vectors per parity, and how many to ask for."""
-
-    basis: BasisName
-    cutoff: int
-    counts: dict[int, int] = field(default_factory=dict)
-    sets: dict[int, RitzSet] = field(default_factory=dict)
 
 
 def sector_builder(
@@ -106,7 +51,7 @@ def lowest_levels(
     basis: BasisName,
     start: Start | None = None,
     floors: Floors | None = None,
-    state_accuracy: float = 1e-7,
+    state_accuracy: float = 1.0,
 ) -> Spectrum:
     """The `count` lowest levels of the model to `tolerance` (unit of the model).
 
@@ -115,6 +60,10 @@ def lowest_levels(
     reached. Raises ConvergenceError when the dimension passes LARGEST_DIMENSION.
     """
     floors = floors or Floors(model)
+    if model.spins == 1 and model.conserves_parity and basis == "fock":
+        quick = one_spin_levels(model, count, tolerance, floors, start, state_accuracy)
+        if quick is not None:
+            return quick
     shift = floors.ground - 0.05 * model.mode
     parities = (1, -1) if model.conserves_parity else (0,)
     search = _Search(model, count, tolerance, state_accuracy, basis, floors, shift, parities)
@@ -140,8 +89,7 @@ class _Search:
         self.model, self.count, self.tolerance = model, count, tolerance
         self.state_accuracy, self.basis, self.floors = state_accuracy, basis, floors
         self.shift, self.parities = shift, parities
-        share = count if len(parities) == 1 else count // 2 + 1
-        self.counts = dict.fromkeys(parities, share)
+        self.counts = dict.fromkeys(parities, levels_per_sector(model, count))
         self.starts: dict[int, RitzSet] = {}
         self.cutoff = first_cutoff(model, basis, count)
         self.guards = _GUARDS
@@ -150,7 +98,7 @@ class _Search:
         self.refused = 0
         self.patience = 4 if model.spins <= _PATIENT_UP_TO else 0
         # residual^2 / gap is the energy error: this aims well below the tolerance
-        self.accuracy = min(0.3 * state_accuracy, 0.03 * math.sqrt(tolerance / model.mode))
+        self.accuracy = min(0.3 * state_accuracy, 0.3 * math.sqrt(tolerance / model.mode))
 
     def adopt(self, start: Start) -> None:
         self.cutoff = start.cutoff
@@ -170,6 +118,9 @@ class _Search:
             if certified is None:
                 continue
             spectrum = self._spectrum(sets, line, certified)
+            if self._coarse(spectrum):
+                self.accuracy *= 0.02
+                continue
             more = self._grown(spectrum)
             if more == 0:
                 return spectrum
@@ -177,6 +128,17 @@ class _Search:
         if spectrum is None:
             raise ConvergenceError("levels", self.count, "fewer levels, or a wider tolerance")
         return spectrum
+
+    def _coarse(self, spectrum: Spectrum) -> bool:
+        """Whether the iteration inside the block, rather than the cutoff, limits the bounds."""
+        if self.accuracy < _FINEST:
+            return False
+        for sector in spectrum.sectors.values():
+            known = len(sector.lower)
+            inside = np.diag(sector.ritz.residuals - sector.ritz.leaked)[:known]
+            if np.any(inside > 0.2 * self.tolerance * (sector.line - sector.ritz.energies[:known])):
+                return True
+        return False
 
     def _solve(self) -> dict[int, RitzSet]:
         build = sector_builder(self.model, self.basis, self.cutoff, self.shift)
@@ -269,7 +231,7 @@ class _Search:
                 upper = float(found.energies[place] + found.roundoff[place])
                 lower = float(low[place] - found.roundoff[place])
                 rows.append(Level(upper, lower, parity, place, status))
-        levels = tuple(_ordered(rows)[: self._reach(sets)])
+        levels = tuple(in_order(rows)[: self._reach(sets)])
         met = all(level.upper - level.lower <= self.tolerance for level in levels)
         return Spectrum(levels, sectors, self.basis, self.cutoff, met, self.floors)
 
@@ -289,16 +251,6 @@ class _Search:
             return 0
         slope = min(_decay(sector.ritz) for sector in spectrum.sectors.values())
         return max(1, int(math.ceil(0.9 * decades / slope)))
-
-
-def _ordered(levels: list[Level]) -> list[Level]:
-    """Ascending in energy; levels closer than their rounding are listed even parity first."""
-    levels.sort(key=lambda level: level.upper)
-    for at in range(1, len(levels)):
-        first, second = levels[at - 1], levels[at]
-        if second.lower < first.upper and second.parity > first.parity:
-            levels[at - 1], levels[at] = second, first
-    return levels
 
 
 def _decay(found: RitzSet) -> float:

@@ -25,7 +25,8 @@ from solver.layers import (
     number_amplitudes,
     shifted_layers,
 )
-from solver.levels import Spectrum, Start, lowest_levels
+from solver.levels import lowest_levels
+from solver.spectrum import Spectrum, Start
 from solver.model import CollectiveModel
 from solver.moments import Moments, excitation_moments, fock_moments, shifted_moments
 from solver.observables import REGISTRY, StateAccuracy
