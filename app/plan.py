@@ -12,8 +12,8 @@ from app.sheets import Sheet, critical_coupling
 from solver import CollectiveModel, PointQuestion, predicted_bytes, predicted_seconds
 
 COARSE_STEP = 8
-FIRST_CHUNK_SECONDS = 0.25
-CHUNK_SECONDS = 0.4
+FIRST_CHUNK_SECONDS = 0.15
+CHUNK_SECONDS = 0.2
 MOST_POINTS_IN_CHUNK = 64
 
 
@@ -126,8 +126,8 @@ def make(sheet: Sheet) -> Plan:
         last = first + sheet.points - 1
         picked = sorted({*range(first, last + 1, COARSE_STEP), last})
         others = sorted(set(range(first, last + 1)) - set(picked))
-        coarse += _cut(picked, prices, FIRST_CHUNK_SECONDS)
-        fine += _cut(others, prices, CHUNK_SECONDS)
+        coarse += _combed(picked, prices)
+        fine += _cut(others, prices)
     chunks = tuple(
         Chunk(number, tuple(points), sum(prices[point] for point in points))
         for number, points in enumerate(coarse + fine)
@@ -137,13 +137,24 @@ def make(sheet: Sheet) -> Plan:
     )
 
 
-def _cut(points: list[int], prices: list[float], most_seconds: float) -> list[list[int]]:
-    """Cut a run of points into pieces of similar price, two at least so that two processes can share them."""
-    if not points:
-        return []
+def _pieces(points: list[int], prices: list[float], most_seconds: float) -> int:
+    """Return in how many chunks a set of points goes: two at least, so that two processes can share it."""
     total = sum(prices[point] for point in points)
     pieces = max(2, round(total / most_seconds + 0.5), -(-len(points) // MOST_POINTS_IN_CHUNK))
-    share = total / pieces
+    return min(pieces, len(points))
+
+
+def _combed(points: list[int], prices: list[float]) -> list[list[int]]:
+    """Share points out in turn, so that each chunk alone shows the whole curve."""
+    pieces = _pieces(points, prices, FIRST_CHUNK_SECONDS)
+    return [points[first::pieces] for first in range(pieces)]
+
+
+def _cut(points: list[int], prices: list[float]) -> list[list[int]]:
+    """Cut a run of points into chunks of neighbours, of similar price."""
+    if not points:
+        return []
+    share = sum(prices[point] for point in points) / _pieces(points, prices, CHUNK_SECONDS)
     cut: list[list[int]] = [[]]
     spent = 0.0
     for point in points:
