@@ -7,7 +7,7 @@ for |lr - lc| > |lr + lc| the spin tilts towards y instead, with lr - lc in plac
 
 Expanding to second order around the minimum couples two oscillators; their frequencies squared
 are the eigenvalues of [[w, q],[q, W]] [[w, r],[r, W]] with W the precession frequency,
-r = (lr+lc) cos(theta), q = lr - lc.
+r = -(lr+lc) cos(theta), q = lr - lc.
 
 Sources: Emary, Brandes, Phys. Rev. E 67, 066203 (2003); Hepp, Lieb, Ann. Phys. 76, 360 (1973);
 Hioe, Phys. Rev. A 8, 1440 (1973).
@@ -83,7 +83,7 @@ def large_n_limit(model: CollectiveModel) -> LargeNLimit:
     sine, cosine = math.sin(theta), math.cos(theta)
     energy = 0.5 * (model.splitting * cosine + model.bias * sine) - 0.25 * pull * sine * sine
     precession = -(model.splitting * cosine + model.bias * sine) + pull * sine * sine
-    lower, upper = _branches(model.mode, precession, total * cosine, difference)
+    lower, upper = _branches(model.mode, precession, -total * cosine, difference)
     return LargeNLimit(
         critical_coupling=model.critical_coupling,
         energy_per_spin=energy,
