@@ -1,6 +1,6 @@
 """The numbers behind the picture: what the value strip under the cursor and the printed table show."""
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Mapping
 from typing import Any
 
 from app.exports import curves_of
@@ -66,19 +66,18 @@ def _fields(sheet: Sheet) -> list[dict[str, Any]]:
         and spec.kind in {"number", "integer"}
     ]
     units: Mapping[str, str] = {"mode": energy_unit(sheet), "bits": "bits"}
+    # with a bias at every point there is no parity, and one gap
+    unparted = sheet.bias != 0.0 and "bias" not in sheet.swept
     return [
         {
             "key": key,
-            "title": known[key].title,
+            "title": "Gap" if unparted and key == "gap_any" else known[key].title,
             "symbol": known[key].symbol,
             "unit": units.get(known[key].unit, ""),
             "error": known[key].error_key,
             "claim": known[key].claim,
             "foremost": key in FOREMOST,
         }
-        for key in _ordered(rest)
+        for key in (*FOREMOST, *rest)
+        if not (unparted and key == "gap")
     ]
-
-
-def _ordered(rest: Sequence[str]) -> list[str]:
-    return [*FOREMOST, *rest]

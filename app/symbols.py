@@ -131,7 +131,7 @@ def axis_title(sheet: Sheet) -> str:
 
 
 def member_name(sheet: Sheet) -> str:
-    """Return the name of the model's member, such as "Dicke" or "Jaynes–Cummings"."""
+    """Return the name of the family's member, such as "Dicke model" or "Rabi model with bias"."""
     single = sheet.spins == 1 and "spins" not in sheet.swept
     if "ratio" in sheet.swept or sheet.ratio not in {0.0, 1.0}:
         name = "Anisotropic Rabi" if single else "Anisotropic Dicke"
@@ -139,7 +139,7 @@ def member_name(sheet: Sheet) -> str:
         name = "Jaynes–Cummings" if single else "Tavis–Cummings"
     else:
         name = "Rabi" if single else "Dicke"
-    return f"{name} with bias" if "bias" in sheet.swept or sheet.bias != 0.0 else name
+    return f"{name} model with bias" if _biased(sheet) else f"{name} model"
 
 
 def sheet_title(sheet: Sheet) -> str:
@@ -147,14 +147,14 @@ def sheet_title(sheet: Sheet) -> str:
     if sheet.title:
         return sheet.title
     swept = symbol(sheet.along, sheet.frame).plain
-    start, stop = number_text(sheet.start), number_text(sheet.stop)
+    start, stop = _signed(sheet.start), _signed(sheet.stop)
     spins = "" if "spins" in sheet.swept else f", N = {sheet.spins}"
-    return f"{member_name(sheet)} model{spins}: {swept} from {start} to {stop}"
+    return f"{member_name(sheet)}{spins}: {swept} from {start} to {stop}"
 
 
 def curve_label(name: str, value: float, frame: str) -> str:
     """Return the label of one curve of a family, for a figure."""
-    return f"{symbol(name, frame).figure} = {number_text(int(value) if name == 'spins' else value)}"
+    return f"{symbol(name, frame).figure} = {_signed(int(value) if name == 'spins' else value)}"
 
 
 # -- Hamiltonian -----------------------------------------------------------------------------------

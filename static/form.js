@@ -56,8 +56,10 @@ export class Form {
     return { ...fields, ...more };
   }
 
+  // Every box as it stands, to tell what has changed since.
   snapshot() {
-    return JSON.stringify(this.fields());
+    const boxes = [...this.form.elements].filter((box) => box.name || box === this.splittingAs);
+    return JSON.stringify(Object.fromEntries(boxes.map((box) => [box.name || "splitting_as", box.value])));
   }
 
   get isNew() {
@@ -108,10 +110,11 @@ export class Form {
   // `before` is the snapshot that was sent: boxes changed since then are left alone.
   show(face, before = null) {
     const sent = before === null ? null : JSON.parse(before);
+    let newer = false;
     const put = (name, text) => {
       const box = this.box(name);
-      if (sent !== null && name in sent && box === document.activeElement && box.value !== sent[name]) return;
-      if (box.value !== text) box.value = text;
+      if (sent !== null && box.value !== sent[name]) newer = true;
+      else if (box.value !== text) box.value = text;
     };
     this.texts = face.texts;
     this.splittingAs.value = face.splitting_as;
@@ -125,7 +128,7 @@ export class Form {
       for (const [value, label] of face.swept_names) select.querySelector(`option[value="${value}"]`).textContent = label;
     }
     document.querySelector('[data-field="each_values"]').hidden = !this.box("each_name").value;
-    this.committed = this.snapshot();
+    if (!newer) this.committed = this.snapshot();
   }
 
   showKnob(knob, put) {

@@ -31,6 +31,7 @@ export function bound(error) {
 // digits after the decimal point that a bound leaves meaningful
 export function supported(value, error, most = MOST_DIGITS) {
   if (value === null || value === undefined) return "–";
+  if (value === 0) return "0";
   if (!error || !(error > 0)) return plain(value, Math.min(10, most));
   const size = Math.abs(value) > 0 ? Math.floor(Math.log10(Math.abs(value))) : 0;
   const decimals = Math.min(-Math.floor(Math.log10(error)), most - 1 - size);

@@ -1,9 +1,9 @@
-// Writes title and key above each panel, in pixels, so that they fit a wall as well as a phone.
+// Title and key above each panel as part of a figure that goes into a file; the page writes its own.
 
 import { size } from "./tokens.js";
 
 const NARROW = 420; // below this width of the plots, keys are set tighter
-const GLYPHS = {
+export const GLYPHS = {
   circle: "●", square: "■", diamond: "◆", "triangle-up": "▲", "triangle-down": "▼", star: "★",
   "triangle-left": "◀", "triangle-right": "▶", "circle-open": "○",
 };
@@ -116,15 +116,24 @@ export function heads(meta, plotWidth, head) {
 
   out.extra = Math.max(0, Math.ceil(ceiling + 6 - head));
 
+  return out;
+}
+
+// The critical places: a line through each panel, its symbol in the first one.
+export function criticals(meta) {
+  const out = { annotations: [], shapes: [] };
   for (const critical of meta.critical) {
-    out.shapes.push({
-      type: "line", xref: "x", yref: "paper", x0: critical.x, x1: critical.x, y0: 0, y1: 1, layer: "above",
-      line: { color: `token:${critical.token}`, width: 1.3 },
-    });
+    for (const panel of meta.panels) {
+      out.shapes.push({
+        type: "line", xref: "x", yref: "paper", x0: critical.x, x1: critical.x,
+        y0: panel.domain[0], y1: panel.domain[1], layer: "above",
+        line: { color: `token:${critical.token}`, width: 1.3 },
+      });
+    }
     out.annotations.push({
       text: critical.label, showarrow: false, xref: "x", yref: "paper", x: critical.x, y: 1,
       xanchor: "left", yanchor: "top", xshift: 3, yshift: -1, bgcolor: "token:paper/0.8", borderpad: 1,
-      font: { size: style.keySize + 1, color: `token:${critical.token}` },
+      font: { size: size("size-key") + 1, color: `token:${critical.token}` },
     });
   }
   return out;

@@ -143,7 +143,7 @@ async function showFace(query, before) {
   part("title").textContent = face.title;
   part("note").textContent = face.note;
   part("note").hidden = !face.note;
-  part("member").textContent = `${face.member} model`;
+  part("member").textContent = face.member;
   part("hamiltonian").innerHTML = face.hamiltonian;
   part("values").replaceChildren(...face.values.map((value) => Object.assign(document.createElement("li"), { innerHTML: value })));
   form.show(face, before);
@@ -163,10 +163,12 @@ async function commit() {
     return;
   }
   const before = form.snapshot();
+  form.committed = before;
   let answer;
   try {
     answer = await post("api/link", form.fields());
   } catch (problem) {
+    form.committed = null; // whatever comes next is new
     if (mine === ticket) failed(problem);
     return;
   }

@@ -1,6 +1,7 @@
 // The stacked figure: drawn by Plotly from our figure data, in the colours of the stylesheet.
 
-import { heads } from "./heads.js";
+import { criticals, heads } from "./heads.js";
+import { Overlay } from "./overlay.js";
 import { resolver, size } from "./tokens.js";
 
 const NARROW = 640;
@@ -15,6 +16,7 @@ export class Plot {
     this.onDrawn = () => {};
     this.onZoom = () => {};
     this.wired = false;
+    this.overlay = new Overlay(stage);
     this.width = 0;
     new ResizeObserver(() => this.resized()).observe(stage);
   }
@@ -30,8 +32,8 @@ export class Plot {
     return this.draw();
   }
 
-  // The figure as Plotly takes it, at a width and with the stylesheet's colours.
-  dressed(width) {
+  // The figure as Plotly takes it, at a width and with the stylesheet's colours; for a file with its heads in it.
+  dressed(width, forFile) {
     const { layout, data, config } = this.figure;
     const narrow = width < NARROW;
     const grow = size("size-tick") / 13;
@@ -41,17 +43,24 @@ export class Plot {
       margin.r = 10;
     } else margin.l = Math.round(margin.l * Math.max(1, grow * 0.95));
     if (grow > 1) margin.b = Math.round(margin.b * grow);
-    const written = heads(layout.meta, width - margin.l - margin.r, margin.t);
+    const inner = width - margin.l - margin.r;
+    const { annotations, shapes } = criticals(layout.meta);
+    if (forFile) {
+      const written = heads(layout.meta, inner, margin.t);
+      annotations.push(...written.annotations);
+      shapes.push(...written.shapes);
+      margin.t += written.extra;
+    } else margin.t = Math.max(24, this.overlay.write(layout.meta, margin.l, inner));
     const plots = (layout.height - layout.margin.t - layout.margin.b) * this.shrink * Math.max(1, grow);
-    margin.t += written.extra;
+    if (!forFile) this.overlay.place(layout.meta, margin.t, Math.round(plots));
     const touch = matchMedia("(pointer: coarse)").matches;
     const full = {
       ...layout,
       width,
-      height: Math.round(plots + margin.t + margin.b),
+      height: Math.round(plots) + margin.t + margin.b,
       margin,
-      annotations: written.annotations,
-      shapes: written.shapes,
+      annotations,
+      shapes,
       dragmode: touch ? false : layout.dragmode,
     };
     const resolve = resolver();
@@ -61,7 +70,7 @@ export class Plot {
   async draw() {
     if (!this.figure) return;
     this.width = this.fixedWidth ?? this.stage.clientWidth;
-    const { data, layout, config } = this.dressed(this.width);
+    const { data, layout, config } = this.dressed(this.width, false);
     const drawn = window.Plotly.react(this.element, data, layout, config);
     if (!this.wired) {
       this.wired = true;
@@ -118,7 +127,7 @@ export class Plot {
   // A picture for a file: title, plots and the link, at a width of its own.
   async image(format, title, footer) {
     const width = Math.max(900, this.width);
-    const { data, layout } = this.dressed(width);
+    const { data, layout } = this.dressed(width, true);
     const zoom = this.range();
     if (zoom) layout.xaxis.range = zoom;
     layout.margin.t += 40;
@@ -126,7 +135,7 @@ export class Plot {
     layout.height += 66;
     const ink = layout.font.color;
     layout.annotations.push(
-      { text: title, showarrow: false, xref: "paper", yref: "paper", x: 0, y: 1, xanchor: "left", yanchor: "bottom", yshift: layout.margin.t - 34, xshift: -2, font: { size: 20, color: ink } },
+      { text: title, showarrow: false, xref: "paper", yref: "paper", x: 0, y: 1, xanchor: "left", yanchor: "bottom", yshift: layout.margin.t - 34, xshift: -2, font: { size: 20, color: ink, family: getComputedStyle(document.documentElement).getPropertyValue("--font-title").trim() } },
       { text: footer, showarrow: false, xref: "paper", yref: "paper", x: 0, y: 0, xanchor: "left", yanchor: "top", yshift: -layout.margin.b + 22, font: { size: 11, color: ink } },
     );
     return window.Plotly.toImage({ data, layout, config: { staticPlot: true } }, { format, width, height: layout.height, scale: format === "png" ? 2 : 1 });

@@ -6,6 +6,7 @@ const GLYPHS = ["●", "■", "◆", "▲", "▼", "★", "◀", "▶"];
 const PARITY = { 1: "even", "-1": "odd", 0: "no parity" };
 const PRINTED_ROWS = 9;
 const PRINTED_DIGITS = 7;
+const TABLE_DIGITS = 9;
 
 function element(tag, className, text) {
   const made = document.createElement(tag);
@@ -172,8 +173,8 @@ export class Readout {
       const name = element("th");
       name.scope = "row";
       name.append(element("span", `swatch token-${curve.token}`, GLYPHS[number]), curve.label);
-      row.append(name, this.boundCell(this.level(curve, point, 0)));
-      for (const field of fields) row.append(this.boundCell(this.number(curve, point, field)));
+      row.append(name, this.boundCell(this.level(curve, point, 0, TABLE_DIGITS)));
+      for (const field of fields) row.append(this.boundCell(this.number(curve, point, field, TABLE_DIGITS)));
       const { series } = curve;
       for (const text of [plain(series.cutoff_needed[point]), plain(series.cutoff_used[point]), series.basis[point]]) row.append(element("td", "", text));
       table.append(row);
@@ -231,7 +232,7 @@ export class Readout {
 
   writeRunSheet() {
     const table = element("table", "values");
-    const fields = ["gap", "boson_number", "order_parameter", "inversion"].map((key) => this.field(key));
+    const fields = ["gap", "boson_number", "order_parameter", "inversion"].map((key) => this.field(key) ?? this.field("gap_any"));
     const head = element("tr");
     const family = this.data.curves.some((curve) => curve.label);
     const headed = (title, unit) => (unit ? `${title} (${unit})` : title);

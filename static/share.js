@@ -105,6 +105,10 @@ export class Share {
 
   async image(kind) {
     const { title, href } = this.now();
+    if (!this.plot.figure) {
+      this.say("There is no picture yet.");
+      return;
+    }
     const address = await this.plot.image(kind, escapeText(title), escapeText(`Softmode  ${href}`).slice(0, 190));
     save(bytesOf(address, kind), this.name(kind));
     this.say(`${kind.toUpperCase()} saved.`);

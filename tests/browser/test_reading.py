@@ -73,7 +73,7 @@ def test_the_full_list_has_every_level_and_number(visit: VisitFactory, server: R
     by_name = {row[0]: row for row in rows}
     for rank in range(6):
         assert number(by_name[f"E{rank}"][1]) == pytest.approx(series["energy"][20][rank], abs=1e-9)
-    entropy = next(row for name, row in by_name.items() if "ntropy" in name)
+    entropy = next(row for name, row in by_name.items() if "entanglement" in name)
     assert number(entropy[1]) == pytest.approx(series["entropy"][20], abs=1e-6)
 
 

@@ -132,3 +132,20 @@ def test_without_event_streams_the_page_asks_instead(visit: VisitFactory) -> Non
     page.route("**/events", lambda route: route.abort())
     one.open("/sweep?spins=60&points=41&to=1")
     assert page.locator("#strip").is_visible()
+
+
+def test_a_long_note_gets_a_short_link_that_opens(visit: VisitFactory) -> None:
+    one = visit()
+    page = one.open("/sweep?spins=2&points=9")
+    page.click("#group-words summary")
+    note = "Measured on a Tuesday, détuning ± 3 kHz. " * 45
+    with page.expect_response(lambda answer: "/api/face" in answer.url):
+        page.fill("#box-note", note.strip())
+        page.focus("#box-spins")
+    one.until("location.search.startsWith('?stored=')")
+    one.commit("spins", "3")
+    again = visit()
+    again.open(f"/sweep?{one.query}")
+    assert again.page.inner_text("#note") == note.strip()
+    assert again.page.input_value("#box-spins") == "3"
+    assert again.query == one.query
