@@ -8,7 +8,7 @@ import hashlib
 import re
 from collections.abc import Mapping
 from typing import Any
-from urllib.parse import quote, unquote_to_bytes
+from urllib.parse import quote, unquote_to_bytes, urlsplit
 
 from app.errors import RequestError, SheetError
 from app.keys import KEYS, MAP_KEYS, SWEPT, Key, nearest_name, number_text
@@ -68,7 +68,11 @@ def parse_link(link: str) -> Sheet:
     address, mark, query = text.partition("?")
     if not mark and "=" in address:
         address, query = "", address
-    if address.rstrip("/").rpartition("/")[2] not in {"", "sweep"}:
+    try:
+        page = urlsplit(address).path.rpartition("/")[2]
+    except ValueError:
+        page = address
+    if page not in {"", "sweep"}:
         raise SheetError("unknown-page", "this is not a link to a sweep", "link", link, "/sweep?…")
     if query.startswith(f"{STORED_KEY}="):
         raise SheetError(

@@ -57,6 +57,7 @@ class Guard:
         self.names = {"localhost", "127.0.0.1", "::1", settings.host.strip("[]").lower()}
         self.names |= {name.lower() for name in settings.allowed_hosts}
         self.reachable = not is_loopback(settings.host)
+        self._failed_logins = asyncio.Lock()
         if self.reachable:
             own = socket.gethostname().lower()
             self.names |= {own, f"{own}.local"}
@@ -252,7 +253,8 @@ class Guard:
         fields = dict(parse_qsl((await limited.body()).decode("utf-8", "replace")))
         target = safe_return(fields.get("next", ""))
         if not self._is_key(fields.get("key", "")):
-            await asyncio.sleep(FAILED_LOGIN_SECONDS)
+            async with self._failed_logins:  # one after another, so that guessing stays slow
+                await asyncio.sleep(FAILED_LOGIN_SECONDS)
             return login_page(target, "This is not the key.", 401)
         expires = str(int(time.time()) + SESSION_SECONDS)
         answer = RedirectResponse(target or "./", 303)

@@ -185,8 +185,15 @@ class Worker:
     def _start(self) -> None:
         pipe, theirs = self.context.Pipe()
         process = self.context.Process(target=_serve, args=(theirs,), daemon=True)
-        process.start()
-        theirs.close()
+        try:
+            process.start()
+        except OSError as error:  # no memory, or too many processes
+            logger.warning("a computing process cannot be started: %s", error)
+            pipe.close()
+            time.sleep(1.0)
+            return
+        finally:
+            theirs.close()
         with self.lock:
             self.process, self.pipe = process, pipe
         if wait([pipe, process.sentinel], START_SECONDS) and pipe.poll():

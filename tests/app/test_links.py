@@ -140,6 +140,30 @@ def test_forms_refuse_what_is_unclear(typed: dict[str, Any], field: str) -> None
     assert caught.value.allowed
 
 
+@pytest.mark.parametrize(
+    "link",
+    [
+        "http://lab:8150/softmode/sweep?spins=3",
+        "https://lab/softmode/?spins=3",
+        "http://lab?spins=3",
+        "/sweep?spins=3#plot",
+        "sweep?spins=3",
+        "?spins=3",
+        " spins=3\n",
+    ],
+)
+def test_links_are_read_with_and_without_host(link: str) -> None:
+    assert links.query_of(links.parse_link(link)) == "spins=3"
+
+
+@pytest.mark.parametrize(
+    "link", ["http://[/sweep?spins=3", "http://lab/map?spins=3", "ftp", "/sweeps?spins=3"]
+)
+def test_other_addresses_are_refused(link: str) -> None:
+    with pytest.raises(SheetError):
+        links.parse_link(link)
+
+
 def test_default_ranges_follow_the_model() -> None:
     assert links.parse("splitting=4").stop == pytest.approx(1.5)
     assert links.parse("splitting=0").stop == 1.5
