@@ -49,10 +49,11 @@ def ritz_set(
     guards: int,
     start: Array | None,
     accuracy: float,
+    *,
     blockwise: bool = False,
 ) -> RitzSet:
     """Solve a block for its count lowest levels (and guards, only located) and their residuals."""
-    found = lowest_of_band(block.band, count, guards, start, accuracy, blockwise)
+    found = lowest_of_band(block.band, count, guards, start, accuracy, blockwise=blockwise)
     action = block.act(found.vectors)
     projected = found.vectors @ action.inside.T
     values, turn = np.linalg.eigh(0.5 * (projected + projected.T))
@@ -78,7 +79,8 @@ def lower_bounds(energies: Array, residuals: Array, line: float) -> Array:
     correction = root[:, None] * residuals * root[None, :]
     # the correction alone keeps its relative precision where it is far below the energies
     if energies.size == 1:
-        return energies - correction[0]
+        only: Array = energies - correction[0]
+        return only
     centre = energies[0]
     out: Array = np.linalg.eigvalsh(np.diag(energies - centre) - correction) + centre
     return out

@@ -15,6 +15,7 @@ from solver.eigen import count_below_zero
 from solver.floor import Floors
 from solver.fock_basis import FockBlock
 from solver.ladder_count import plain_count, projected_count
+from solver.layer_count import projected_number_count
 from solver.model import CollectiveModel
 from solver.parity_chain import ParityChain, number_block
 from solver.shifted_basis import LadderCoupling, ShiftedBlock
@@ -44,20 +45,11 @@ def counting_attempts(
         yield Attempt(lowest, projected=True)
         yield Attempt(lowest + 6, projected=True)
         return
-    # a state on the last layer has at least w M - t sqrt(N M) - leak - field: make that > line
-    total = max(abs(model.total_coupling), abs(model.coupling_difference))
-    field = 0.5 * model.spins * math.hypot(model.splitting, model.bias) + line + model.mode
-    slope = total * math.sqrt(model.spins)
-    first = cutoff
-    while True:
-        room = floors.above(first, shifted=False) - line
-        if room > 0.0:
-            leak = 0.25 * (first + 1.0) * total * total * model.spins / room
-            if model.mode * first - slope * math.sqrt(first) - leak > field:
-                break
-        first += max(1, first // 16)
-    yield Attempt(first)
-    yield Attempt(int(1.5 * first) + 8)
+    lowest = cutoff
+    while floors.above(lowest, shifted=False) <= line + model.mode:
+        lowest += 1 + lowest // 32
+    yield Attempt(lowest, projected=True)
+    yield Attempt(lowest + lowest // 8 + 6, projected=True)
 
 
 def levels_below(
@@ -87,13 +79,19 @@ def levels_below(
         if attempt.projected:
             return projected_count(blocks, room, share, floor)
         return plain_count(blocks, room)
-    return [_count_numbers(number_block(model, parity, cutoff, line), line, room) for parity in parities]
+    return [
+        _count_numbers(number_block(model, parity, cutoff, line), line, room, share, floor)
+        for parity in parities
+    ]
 
 
-def _count_numbers(block: FockBlock, line: float, room: float) -> int:
-    if isinstance(block, ParityChain):
-        return block.levels_below(line, room)
-    return count_below_zero(block.band - block.leak_band() / room, block.half_width)
+def _count_numbers(block: FockBlock, line: float, room: float, share: float, floor: float) -> int:
+    if not isinstance(block, ParityChain):
+        return projected_number_count(block, room, share, floor)
+    # one state per layer: going far beyond the cutoff costs less than projecting
+    model, cutoff = block.model, 4 * block.cutoff + 40
+    longer = ParityChain(model, block.parity, cutoff, line)
+    return longer.levels_below(line, room + share * model.mode * (cutoff - block.cutoff))
 
 
 def levels_inside(blocks: Sequence[Block], line: float) -> list[int]:

@@ -122,7 +122,7 @@ def _position_basis(size: int) -> tuple[Array, Array]:
     """
     values, vectors = eigh_tridiagonal(np.zeros(size), np.sqrt(np.arange(1.0, size)))
     signs = 1.0 - 2.0 * ((np.arange(size) // 2) % 2)
-    return values, np.ascontiguousarray(signs[:, None] * vectors)
+    return np.asarray(values, dtype=np.float64), np.array(signs[:, None] * vectors, dtype=np.float64)
 
 
 def _padded(size: int, shift: float) -> int:

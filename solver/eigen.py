@@ -57,6 +57,7 @@ def lowest_of_band(
     guards: int,
     start: Array | None,
     accuracy: float,
+    *,
     blockwise: bool = False,
 ) -> Subspace:
     """The count + guards lowest eigenpairs of a positive definite banded matrix.
@@ -87,7 +88,7 @@ def lowest_of_chain(along: Array, beside: Array, wanted: int) -> tuple[Array, Ar
         values, columns, info = dstevd(along, beside if along.size > 1 else np.zeros(1))
     else:
         count, values, blocks, splits, info = dstebz(along, beside, 2, 0.0, 0.0, 1, wanted, 0.0, "B")
-        columns, info = dstein(along, beside, values[:count], blocks[:count], splits)
+        columns, info = dstein(along, beside, values[:count], blocks, splits)
         order = np.argsort(values[:count], kind="stable")
         values, columns = values[order], columns[:, order]
     if info != 0:  # pragma: no cover - only for NaN input
@@ -173,7 +174,8 @@ def _block_krylov(factor: Array, size: int, count: int, start: Array | None, acc
 
 @lru_cache(maxsize=32)
 def _noise(width: int, size: int) -> Array:
-    return np.random.default_rng(size).standard_normal((width, size)) / np.sqrt(size)
+    noise: Array = np.random.default_rng(size).standard_normal((width, size)) / np.sqrt(size)
+    return noise
 
 
 def _starting_rows(size: int, width: int, start: Array | None) -> Array:
@@ -183,7 +185,7 @@ def _starting_rows(size: int, width: int, start: Array | None) -> Array:
         known = start[:width]
         rows *= 1e-3
         rows[: known.shape[0]] += known
-    return rows
+    return np.asarray(rows, dtype=np.float64)
 
 
 def block_pairs(band: Array, block: int) -> Iterator[tuple[Array, Array | None]]:
@@ -204,8 +206,7 @@ def block_pairs(band: Array, block: int) -> Iterator[tuple[Array, Array | None]]
         if following <= 0:
             yield diagonal, None
             return
-        reach = here + lower[:following, :here] if following <= here else None
-        assert reach is not None
+        reach = here + lower[:following, :here]
         below = band[np.clip(reach, 0, width - 1), columns[None, :]]
         yield diagonal, np.where((reach >= 0) & (reach < width), below, 0.0)
 

@@ -81,7 +81,7 @@ def excitation_levels(model: CollectiveModel, count: int) -> ExcitationSpectrum:
         if len(same) >= 2:
             break
         wanted += 2
-    return ExcitationSpectrum(model, turned, tuple(search.level(*row) for row in rows))
+    return ExcitationSpectrum(model, turned, tuple(search.level(row[1], row[2]) for row in rows))
 
 
 class _BlockSearch:
@@ -134,7 +134,7 @@ class _BlockSearch:
             tilt = field / total
             quanta = model.spins * total / (4.0 * model.mode**2) * (1.0 - tilt * tilt)
             up = 0.5 * model.spins * (1.0 - math.copysign(tilt, model.splitting))
-            guess = int(round(quanta + up))
+            guess = round(quanta + up)
         elif model.splitting < 0.0:
             guess = model.spins
         best, step = guess, max(1, int(math.sqrt(guess)))
@@ -159,7 +159,7 @@ class _BlockSearch:
             int((target - self.floors.share_floor(share)) / (share * self.model.mode)) + 1
             for share in (0.25, 0.5, 0.7, 0.85, 0.95)
         )
-        heap = [(-math.inf, 0, max(highest, max(self.seen)))]
+        heap = [(-math.inf, 0, max(highest, *self.seen))]
         margin = 64.0 * _EPS * (abs(target) + self.model.mode)
         while heap:
             bound, low, high = heapq.heappop(heap)
@@ -188,7 +188,7 @@ class _BlockSearch:
         diagonal, beside = self._tridiagonal(low, high)
         return lowest_of_tridiagonal(diagonal, beside)
 
-    def level(self, energy: float, excitations: int, place: int) -> ExcitationLevel:
+    def level(self, excitations: int, place: int) -> ExcitationLevel:
         """Energy and vector of one found level."""
         diagonal, beside = self._tridiagonal(excitations, excitations)
         scale = float(np.abs(diagonal).max()) + 2.0 * float(np.abs(beside).max(initial=0.0))
@@ -196,5 +196,9 @@ class _BlockSearch:
             return ExcitationLevel(excitations, 0, float(diagonal[0]), 2 * _EPS * scale, np.ones(1))
         values, vectors = eigh_tridiagonal(diagonal, beside, select="i", select_range=(0, place))
         return ExcitationLevel(
-            excitations, place, float(values[place]), 8.0 * _EPS * scale, vectors[:, place].copy()
+            excitations,
+            place,
+            float(values[place]),
+            8.0 * _EPS * scale,
+            np.array(vectors[:, place], dtype=np.float64),
         )

@@ -25,7 +25,7 @@ from solver.spin import projections, raising_elements
 Array = NDArray[np.float64]
 
 # shares of the boson energy tried when bounding the part above the cutoff
-_SHARES = (0.25, 0.5, 0.7, 0.85, 0.95)
+_SHARES = (0.1, 0.25, 0.5, 0.7, 0.85, 0.95)
 _ROUNDING = 16.0 * np.finfo(np.float64).eps
 
 
@@ -39,7 +39,7 @@ def lowest_of_tridiagonal(diagonal: Array, beside: Array) -> float:
     return float(values[0])
 
 
-def spin_floor(model: CollectiveModel, kept_share: float = 1.0, shifted: bool = False) -> float:
+def spin_floor(model: CollectiveModel, kept_share: float = 1.0, *, shifted: bool = False) -> float:
     """Lowest eigenvalue of the spin matrix left when kept_share of the boson energy is used.
 
     kept_share: 1 - s in (0, 1]. With shifted=True the split-off share s is counted in quanta
@@ -53,11 +53,8 @@ def spin_floor(model: CollectiveModel, kept_share: float = 1.0, shifted: bool = 
         return min(down, up) - _ROUNDING * max(abs(down), abs(up))
     steps = raising_elements(size)
     total, difference = model.total_coupling, model.coupling_difference
-    if shifted:
-        # in displaced quanta the Jx part needs no share of the boson energy
-        along = total * total / model.mode
-    else:
-        along = total * total / (model.mode * kept_share)
+    # in displaced quanta the Jx part needs no share of the boson energy
+    along = total * total / (model.mode * (1.0 if shifted else kept_share))
     across = difference * difference / (model.mode * kept_share)
     product = total * difference / model.mode / (1.0 if shifted else kept_share)
     return _lowest(model, steps, along / size, across / size, product / size)
@@ -136,21 +133,22 @@ class Floors:
         if shifted and self.model.coupling_difference == 0.0:
             return 1.0, self.ground
         quanta = self.model.mode * (cutoff + 1)
-        splits = [(share, self._share_floor(share, shifted)) for share in _SHARES]
+        splits = [(share, self._share_floor(share, shifted=shifted)) for share in _SHARES]
         return max(splits, key=lambda split: split[0] * quanta + split[1])
 
     def boson_bound(self, energy: float) -> float:
         """Upper bound on <a^dag a> of any state with mean energy `energy`."""
         return min(
-            (energy - self._share_floor(share, False)) / (share * self.model.mode) for share in _SHARES
+            (energy - self._share_floor(share, shifted=False)) / (share * self.model.mode)
+            for share in _SHARES
         )
 
     def share_floor(self, share: float) -> float:
         """Floor f with H >= share * w a^dag a + f."""
-        return self._share_floor(share, False)
+        return self._share_floor(share, shifted=False)
 
-    def _share_floor(self, share: float, shifted: bool) -> float:
+    def _share_floor(self, share: float, *, shifted: bool) -> float:
         key = (share, shifted)
         if key not in self._shares:
-            self._shares[key] = spin_floor(self.model, 1.0 - share, shifted)
+            self._shares[key] = spin_floor(self.model, 1.0 - share, shifted=shifted)
         return self._shares[key]

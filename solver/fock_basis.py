@@ -7,6 +7,7 @@ j = m + N/2 spin excitations; parity +1 keeps n + j even.
 from __future__ import annotations
 
 import math
+from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
@@ -27,23 +28,38 @@ class FockBlock:
 
     def __init__(self, model: CollectiveModel, parity: int, cutoff: int, shift: float) -> None:
         self.model, self.parity, self.cutoff, self.shift = model, parity, cutoff, shift
-        self.steps = raising_elements(model.spins)
         self._root = math.sqrt(model.spins)
-        size = model.spins + 1
-        if parity == 0:
-            self.quanta: Index = np.repeat(np.arange(cutoff + 1), size)
-            self.raised: Index = np.tile(np.arange(size), cutoff + 1)
-        else:
-            # two layers in a row hold all j once: build one pair and repeat it
-            first = np.arange((1 - parity) // 2, size, 2)
-            second = np.arange((1 + parity) // 2, size, 2)
-            pairs = cutoff // 2 + 1
-            levels = np.repeat(np.tile([0, 1], pairs), np.tile([first.size, second.size], pairs))
-            quanta = levels + 2 * np.repeat(np.arange(pairs), size)
-            spins = np.tile(np.concatenate((first, second)), pairs)
-            kept = quanta <= cutoff
-            self.quanta, self.raised = quanta[kept], spins[kept]
         self.dimension = self.quanta.size
+
+    @cached_property
+    def steps(self) -> Array:
+        """Raising elements of the spin, shape (N,)."""
+        return raising_elements(self.model.spins)
+
+    @cached_property
+    def quanta(self) -> Index:
+        """n of each state, shape (dimension,)."""
+        return self._labels[0]
+
+    @cached_property
+    def raised(self) -> Index:
+        """j = m + N/2 of each state, shape (dimension,)."""
+        return self._labels[1]
+
+    @cached_property
+    def _labels(self) -> tuple[Index, Index]:
+        size, cutoff, parity = self.model.spins + 1, self.cutoff, self.parity
+        if parity == 0:
+            return np.repeat(np.arange(cutoff + 1), size), np.tile(np.arange(size), cutoff + 1)
+        # two layers in a row hold all j once: build one pair and repeat it
+        first = np.arange((1 - parity) // 2, size, 2)
+        second = np.arange((1 + parity) // 2, size, 2)
+        pairs = cutoff // 2 + 1
+        levels = np.repeat(np.tile([0, 1], pairs), np.tile([first.size, second.size], pairs))
+        quanta = levels + 2 * np.repeat(np.arange(pairs), size)
+        spins = np.tile(np.concatenate((first, second)), pairs)
+        kept = quanta <= cutoff
+        return quanta[kept], spins[kept]
 
     def _diagonal(self) -> Array:
         half = 0.5 * self.model.spins

@@ -12,11 +12,13 @@ import math
 from solver.blocks import BasisName
 from solver.model import CollectiveModel
 
-# seconds per floating point operation in the banded kernels, and fixed cost per sector
-_SECONDS_PER_OPERATION = 1.0e-9
+# seconds per floating point operation in the banded kernels, and fixed costs
+_SECONDS_PER_OPERATION = 5.0e-10
 _SECONDS_PER_SECTOR = 1.5e-3
 _SECONDS_PER_BLOCK = 4.0e-5
+_SECONDS_PER_AMPLITUDE = 5.0e-8
 _SOLVES = 28.0
+_PLAIN_COUNT_UP_TO = 100
 
 
 def classical_quanta(model: CollectiveModel) -> float:
@@ -57,30 +59,32 @@ def first_cutoff(model: CollectiveModel, basis: BasisName, levels: int) -> int:
     kinetic = max(abs(model.splitting), abs(model.coupling_difference)) / model.mode
     onset = min(1.0, pull / (abs(model.splitting) + 1e-300))
     near = (2.0 + 3.0 * onset + gap) * min(kinetic, 2.0)
-    return int(share + 7 + 22.0 * gap * max(1.0, kinetic) ** 0.8 + near)
-
-
-def _operations(model: CollectiveModel, cutoff: int, half_width: int, dimension: float) -> float:
-    return dimension * half_width * (half_width + 4.0 * _SOLVES)
+    near += (4.0 + 8.0 * onset) * max(0.0, kinetic - 2.0)
+    # the spin also leans towards y, where this basis carries no displacement
+    aside = model.spins * (0.5 * model.coupling_difference / model.mode) ** 2
+    total = abs(model.total_coupling)
+    lean = min(1.0, abs(model.coupling_difference) / total) if total > 0.0 else 1.0
+    turned = onset**4 * (1.2 * aside * lean**4 + 2.0 * math.sqrt(aside) * lean)
+    return int(share + 7 + 22.0 * gap * max(1.0, kinetic) ** 0.8 + near + turned)
 
 
 def predicted_cost(model: CollectiveModel, basis: BasisName, levels: int) -> float:
     """Seconds on one core for all sectors of one model, started cold."""
     size, cutoff = model.spins, first_cutoff(model, basis, levels)
-    folded = model.conserves_parity
-    sectors = 2 if folded else 1
+    sectors = 2 if model.conserves_parity else 1
+    dimension = (cutoff + 1.0) * (size + 1.0) / sectors
     if basis == "fock":
-        half_width = size // 2 + 1 if folded else size + 2
-        dimension = (cutoff + 1.0) * (size + 1.0) / sectors
-        counted = 2.5 * cutoff
+        inner = size // 2 + 1 if sectors == 2 else size + 2
+        half_width, pieces, paired = inner, sectors * (cutoff + 1.0), 2.0
     else:
-        half_width = 2 * cutoff + 1
-        dimension = (cutoff + 1.0) * (size + 1.0) / sectors
-        counted = (size + 1.0) / sectors
-    work = _operations(model, cutoff, half_width, dimension) * _SECONDS_PER_OPERATION
-    inner = min(half_width, cutoff + 1) if basis == "shifted" else half_width
-    count = counted * (_SECONDS_PER_BLOCK + 3.0 * inner**3 * _SECONDS_PER_OPERATION)
-    return sectors * (_SECONDS_PER_SECTOR + work + count)
+        inner = cutoff + 1
+        # the parities share the elimination
+        half_width, pieces = 2 * cutoff + 1, (size + 1.0) / sectors
+        paired = 1.0 if size <= _PLAIN_COUNT_UP_TO else 2.0
+    work = sectors * dimension * half_width * (half_width + 4.0 * _SOLVES)
+    count = pieces * (_SECONDS_PER_BLOCK + 3.0 * (paired * inner) ** 3 * _SECONDS_PER_OPERATION)
+    layers = sectors * dimension * levels * _SECONDS_PER_AMPLITUDE
+    return sectors * _SECONDS_PER_SECTOR + work * _SECONDS_PER_OPERATION + count + layers
 
 
 def cheaper_basis(model: CollectiveModel, levels: int) -> BasisName:

@@ -45,7 +45,7 @@ def projected_count(blocks: Sequence[ShiftedBlock], room: float, share: float, f
     # offset already carries -E: back to A = H - s w n - f
     positive[:, n, n] = first.offset[:, None] + energy - floor + (1.0 - share) * mode * n
     leaks = first.leaks() / room
-    remainder = share * mode * n + floor - energy
+    remainder = np.asarray(share * mode * n + floor - energy, dtype=np.float64)
     lasts = [
         _paired(remainder[kept], part, leaks[-1][np.ix_(kept, kept)])
         for kept, part in _last_parts(blocks, positive[-1])

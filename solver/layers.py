@@ -108,7 +108,7 @@ def _window(shifts: Array, levels: int) -> tuple[int, int]:
     size = np.abs(shifts)
     upper = float(size.max()) + math.sqrt(levels) + _TAIL
     lower = max(0.0, float(size.min()) - math.sqrt(levels) - _TAIL)
-    return int(lower * lower) // 2 * 2, max(levels, int(math.ceil(upper * upper)) + 1)
+    return int(lower * lower) // 2 * 2, max(levels, math.ceil(upper * upper) + 1)
 
 
 def shifted_layers(block: ShiftedBlock, amplitudes: NumberAmplitudes) -> LayerProfile:

@@ -20,10 +20,10 @@ from solver.errors import ConvergenceError
 from solver.floor import Floors
 from solver.forecast import first_cutoff, levels_per_sector
 from solver.model import CollectiveModel
-from solver.parity_chain import number_block
 from solver.one_spin import one_spin_levels
+from solver.parity_chain import number_block
 from solver.shifted_basis import LadderCoupling, ShiftedBlock
-from solver.spectrum import Level, SectorLevels, Spectrum, Start, Status, in_order
+from solver.spectrum import Level, SectorLevels, Spectrum, Start, in_order
 
 Array = NDArray[np.float64]
 
@@ -114,17 +114,18 @@ class _Search:
             if not self._complete(sets):
                 continue
             line = self._line(sets)
-            certified = self._certified(sets, line)
-            if certified is None:
-                continue
-            spectrum = self._spectrum(sets, line, certified)
+            spectrum = self._spectrum(sets, line)
             if self._coarse(spectrum):
                 self.accuracy *= 0.02
                 continue
             more = self._grown(spectrum)
-            if more == 0:
-                return spectrum
-            self.cutoff += more
+            if more:
+                self.cutoff += more
+                continue
+            # the count comes last: it is the dear part, and only the final cutoff needs it
+            certified = self._certified(sets, line)
+            if certified is not None:
+                return spectrum if certified else spectrum.as_estimate()
         if spectrum is None:
             raise ConvergenceError("levels", self.count, "fewer levels, or a wider tolerance")
         return spectrum
@@ -157,7 +158,9 @@ class _Search:
                 known = _mirrored(next(iter(self.starts.values())), block)
             first = None if known is None else known.block.embed(known.vectors, block)
             wanted = min(self.counts[parity], block.dimension)
-            sets[parity] = ritz_set(block, wanted, self.guards, first, self.accuracy, self.blockwise)
+            sets[parity] = ritz_set(
+                block, wanted, self.guards, first, self.accuracy, blockwise=self.blockwise
+            )
             self.starts[parity] = sets[parity]
         return sets
 
@@ -220,17 +223,17 @@ class _Search:
         self.cutoff += max(3, self.cutoff // 4)
         return None
 
-    def _spectrum(self, sets: dict[int, RitzSet], line: float, certified: bool) -> Spectrum:
-        status: Status = "bracketed" if certified else "estimated"
+    def _spectrum(self, sets: dict[int, RitzSet], line: float) -> Spectrum:
+        """Levels below the line with their bounds, taking the count for granted."""
         sectors, rows = {}, []
         for parity, found in sets.items():
             inside = int(np.sum(found.energies < line))
             low = lower_bounds(found.energies[:inside], found.residuals[:inside, :inside], line)
-            sectors[parity] = SectorLevels(found, low - found.roundoff[:inside], line, certified)
+            sectors[parity] = SectorLevels(found, low - found.roundoff[:inside], line)
             for place in range(inside):
                 upper = float(found.energies[place] + found.roundoff[place])
                 lower = float(low[place] - found.roundoff[place])
-                rows.append(Level(upper, lower, parity, place, status))
+                rows.append(Level(upper, lower, parity, place, "bracketed"))
         levels = tuple(in_order(rows)[: self._reach(sets)])
         met = all(level.upper - level.lower <= self.tolerance for level in levels)
         return Spectrum(levels, sectors, self.basis, self.cutoff, met, self.floors)
@@ -250,7 +253,7 @@ class _Search:
         if decades <= 0.0:
             return 0
         slope = min(_decay(sector.ritz) for sector in spectrum.sectors.values())
-        return max(1, int(math.ceil(0.9 * decades / slope)))
+        return max(1, math.ceil(1.1 * decades / slope) + 1)
 
 
 def _decay(found: RitzSet) -> float:

@@ -60,12 +60,12 @@ class CollectiveModel:
 
     @property
     def total_coupling(self) -> float:
-        """lr + lc, the coupling of the displacement to Jx."""
+        """Lr + lc, the coupling of the displacement to Jx."""
         return self.rotating + self.counter
 
     @property
     def coupling_difference(self) -> float:
-        """lr - lc, the coupling of the momentum to Jy."""
+        """Lr - lc, the coupling of the momentum to Jy."""
         return self.rotating - self.counter
 
     @property
@@ -95,7 +95,7 @@ class CollectiveModel:
 
     @property
     def critical_coupling(self) -> float:
-        """lr at which lr + lc = sqrt(w |w0|), the ratio lc / lr held (large N, no bias).
+        """Lr at which lr + lc = sqrt(w |w0|), the ratio lc / lr held (large N, no bias).
 
         Hioe, Phys. Rev. A 8, 1440 (1973). For lr = 0 the ratio counts as 1.
         """

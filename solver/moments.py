@@ -158,7 +158,7 @@ def shifted_moments(block: ShiftedBlock, vector: Array, layers: NumberAmplitudes
 
 
 def _annihilated(psi: Array, shift: Array, root: Array) -> Array:
-    """a psi = (b - G m) psi on every ladder; stays inside the truncation."""
+    """A psi = (b - G m) psi on every ladder; stays inside the truncation."""
     out = -shift * psi
     out[:, :-1] += root * psi[:, 1:]
     return out

@@ -111,7 +111,7 @@ def _bounded(
         upper = values[:inside] + floors.ground
         leaked = last[:, None] * last
         ritz = RitzSet(chain, upper, kept, leaked, leaked, np.full(inside, scale))
-        sectors[parity] = SectorLevels(ritz, upper - (lift + scale), absolute, True)
+        sectors[parity] = SectorLevels(ritz, upper - (lift + scale), absolute)
         rows += [
             Level(energy + scale, energy - lift - scale, parity, place, "bracketed")
             for place, energy in enumerate(upper.tolist())

@@ -26,11 +26,11 @@ from solver.layers import (
     shifted_layers,
 )
 from solver.levels import lowest_levels
-from solver.spectrum import Spectrum, Start
 from solver.model import CollectiveModel
 from solver.moments import Moments, excitation_moments, fock_moments, shifted_moments
 from solver.observables import REGISTRY, StateAccuracy
 from solver.shifted_basis import ShiftedBlock
+from solver.spectrum import Spectrum, Start
 
 Array = NDArray[np.float64]
 
@@ -144,7 +144,7 @@ def answer_point(
     return _from_spectrum(question, spectrum), spectrum.as_start()
 
 
-def _gap(rows: _Rows, same_parity: bool) -> tuple[float | None, float | None]:
+def _gap(rows: _Rows, *, same_parity: bool) -> tuple[float | None, float | None]:
     """Distance from the ground level to the next one (of its own parity), with error."""
     for at in range(1, len(rows.upper)):
         if not same_parity or rows.parity[at] == rows.parity[0]:
@@ -170,8 +170,8 @@ def _assembled(
         observables[entry.key], observables[f"{entry.key}_error"] = value, error
         if value is None and entry.undefined and entry.undefined not in notes:
             notes.append(entry.undefined)
-    gap, gap_error = _gap(rows, True)
-    gap_any, gap_any_error = _gap(rows, False)
+    gap, gap_error = _gap(rows, same_parity=True)
+    gap_any, gap_any_error = _gap(rows, same_parity=False)
     count = question.levels
     wanted = question.tolerance * question.model.mode
     widest = max(up - low for up, low in zip(rows.upper[:count], rows.lower[:count], strict=True))
@@ -231,7 +231,8 @@ def _profile(found: RitzSet, count: int, amplitudes: NumberAmplitudes | None) ->
     """Number layers of the lowest `count` states of a sector."""
     if isinstance(found.block, ShiftedBlock) and amplitudes is not None:
         return shifted_layers(found.block, amplitudes)
-    assert isinstance(found.block, FockBlock)
+    if not isinstance(found.block, FockBlock):
+        raise TypeError("number layers of a displaced block come from its amplitudes")
     return fock_layers(found.block, found.vectors[:count])
 
 
@@ -239,7 +240,8 @@ def _moments(found: RitzSet, amplitudes: NumberAmplitudes | None) -> Moments:
     """Moments of the lowest state of a sector."""
     if isinstance(found.block, ShiftedBlock) and amplitudes is not None:
         return shifted_moments(found.block, found.vectors[0], amplitudes)
-    assert isinstance(found.block, FockBlock)
+    if not isinstance(found.block, FockBlock):
+        raise TypeError("moments of a displaced block need its amplitudes")
     return fock_moments(found.block, found.vectors[0])
 
 

@@ -41,7 +41,7 @@ class LadderCoupling:
         self.cutoff = cutoff
         gap = abs(model.displacement_per_quantum)
         spread = 6.0 + 2.0 * gap * math.sqrt(cutoff + 1.0) + gap * gap
-        self.reach = cutoff + 1 + int(math.ceil(spread + 3.0 * math.sqrt(spread)))
+        self.reach = cutoff + 1 + math.ceil(spread + 3.0 * math.sqrt(spread))
         full = displacement_matrix(-model.displacement_per_quantum, self.reach + 1)
         table = 0.5 * model.splitting * full[: self.reach, : self.reach]
         if model.coupling_difference != 0.0:
@@ -80,7 +80,7 @@ class ShiftedBlock:
         count = size // 2 + 1 if self.folded else size + 1
         if self.folded and size % 2:
             count = (size + 1) // 2
-        self.m: Array = 0.5 * size - np.arange(count)
+        self.m: Array = 0.5 * size - np.arange(count, dtype=np.float64)
         self.steps: Array = raising_elements(size)[::-1][: count - 1].copy()
         # sign of the mirror image: psi[-m, n] = mirror * (-1)^n psi[m, n]
         self.mirror = parity * (-1) ** size
@@ -236,7 +236,8 @@ class ShiftedBlock:
 
     def embed(self, vectors: Array, into: Block) -> Array:
         """The same vectors at another cutoff (same sector; the model may be a neighbour)."""
-        assert isinstance(into, ShiftedBlock)
+        if not isinstance(into, ShiftedBlock):
+            raise TypeError("a displaced-ladder vector fits displaced ladders only")
         psi = self.ladders(vectors)
         out = np.zeros((psi.shape[0], into.m.size, into.cutoff + 1))
         common = min(self.cutoff, into.cutoff) + 1

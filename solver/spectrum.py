@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import Literal
 
 import numpy as np
@@ -42,6 +42,11 @@ class Spectrum:
     met: bool
     floors: Floors
 
+    def as_estimate(self) -> Spectrum:
+        """The same numbers where the count below the lines could not be proven."""
+        levels = tuple(replace(level, status="estimated") for level in self.levels)
+        return replace(self, levels=levels)
+
     def as_start(self) -> Start:
         """What a neighbouring point can begin from."""
         counts = {
@@ -58,7 +63,6 @@ class SectorLevels:
     ritz: RitzSet
     lower: Array
     line: float
-    certified: bool
 
 
 @dataclass(slots=True)

@@ -7,9 +7,9 @@ from dataclasses import dataclass
 from typing import Literal
 
 from solver.forecast import cheaper_basis, predicted_cost, predicted_dimension
-from solver.spectrum import Start
 from solver.observables import REGISTRY
 from solver.point import PointAnswer, PointQuestion, answer_point
+from solver.spectrum import Start
 
 
 @dataclass(frozen=True, slots=True)
