@@ -51,7 +51,11 @@ def check_gaps(answer: PointAnswer, reference: DenseSpectrum) -> None:
     own, every = reference.energies[answer.parity[0]], reference.merged()
     assert answer.gap_any >= 0.0
     assert abs(answer.gap_any - (every[1][0] - every[0][0])) <= answer.gap_any_error
-    assert answer.gap is not None
+    if answer.gap is None:
+        # allowed only when the computed levels hold no second one of the parity, and it says so
+        assert answer.parity.count(answer.parity[0]) == 1
+        assert "gap" in (answer.note or "")
+        return
     assert abs(answer.gap - float(own[1] - own[0])) <= answer.gap_error
 
 
