@@ -16,7 +16,7 @@ Davis, Kahan, SIAM J. Numer. Anal. 7, 1 (1970), for the angle.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
@@ -27,8 +27,7 @@ from solver.eigen import lowest_of_band
 Array = NDArray[np.float64]
 
 
-@dataclass(frozen=True, slots=True)
-class RitzSet:
+class RitzSet(NamedTuple):
     """Lowest Ritz pairs of one block (q of them, ascending).
 
     energies (q,); vectors (q, dimension); residuals: Gram matrix (q, q) of H psi - U psi,

@@ -128,7 +128,7 @@ def _krylov(
             left = beside[step] * np.abs(weights[-1, top]) / values[top]
             if step + 1 == longest or beside[step] < 1e-14 * along[0] or np.all(left < goal):
                 break
-            check += 4
+            check += 3
     used = step + 1
     chosen = weights[:, top]
     # one inverse step more costs nothing: the images are known from the recurrence

@@ -50,6 +50,10 @@ def first_cutoff(model: CollectiveModel, basis: BasisName, levels: int) -> int:
     """Cutoff to begin with, for `levels` levels at a tolerance near 1e-9 of the mode."""
     share = levels_per_sector(model, levels)
     pull = _pull(model)
+    if basis == "fock" and model.spins == 1:
+        reach = 0.5 * max(abs(model.total_coupling), abs(model.coupling_difference)) / model.mode
+        bow = (9.5 + levels / 3.0) * reach**0.7
+        return int(0.5 * levels + 5.5 + 1.4 * reach * reach + bow)
     if basis == "fock":
         mean = classical_quanta(model)
         softness = min(1.0, pull / (abs(model.splitting) + abs(model.bias) + 1e-300))

@@ -39,11 +39,12 @@ def one_spin_levels(
     Arguments as in `levels.lowest_levels`.
     """
     cutoff = first_cutoff(model, "fock", count) if start is None else start.cutoff
+    wanted = count // 2 + 3
     for _ in range(_ROUNDS):
         shift = floors.ground
         chains = {parity: ParityChain(model, parity, cutoff, shift) for parity in (1, -1)}
         found = {
-            parity: lowest_of_chain(chain.along, chain.beside, min(count + 2, chain.dimension))
+            parity: lowest_of_chain(chain.along, chain.beside, min(wanted, chain.dimension))
             for parity, chain in chains.items()
         }
         line = _line(found[1][0], found[-1][0], count)
@@ -65,19 +66,17 @@ def one_spin_levels(
 
 def _line(even: Array, odd: Array, count: int) -> float | None:
     """Energy (above the shift) for the count: in the widest gap above the wanted levels."""
-    merged = sorted([(float(value), 1) for value in even] + [(float(value), -1) for value in odd])
-    again = [at for at, pair in enumerate(merged) if pair[1] == merged[0][1]]
-    reach = max(count, 2, again[1] + 1)
-    top = bisect_left(merged, (min(float(even[-1]), float(odd[-1])), -2))
-    last = min(top, reach + 2)
+    first, second = even.tolist(), odd.tolist()
+    own = first if first[0] <= second[0] else second
+    top = min(first[-1], second[-1])
+    merged = sorted(first + second)
+    # both gaps must exist: reach past the second level of the ground state's parity
+    reach = max(count, 2, bisect_left(merged, own[1]) + 1)
+    last = min(bisect_left(merged, top), reach + 2)
     if last < reach:
         return None
-    lower, upper = max(
-        ((merged[at - 1][0], merged[at][0]) for at in range(reach, last + 1) if at < len(merged)),
-        key=lambda pair: pair[1] - pair[0],
-        default=(0.0, 0.0),
-    )
-    return lower + 0.6 * (upper - lower) if upper > lower else None
+    width, at = max((merged[at] - merged[at - 1], at) for at in range(reach, last + 1))
+    return merged[at - 1] + 0.6 * width if width > 0.0 else None
 
 
 def _bounded(
@@ -90,9 +89,13 @@ def _bounded(
 ) -> Spectrum | None:
     """Levels below the line with their bounds, or None where the count is not certified."""
     absolute = line + floors.ground
-    room = floors.above(cutoff, shifted=False) - absolute
+    # any share of the boson energy gives a valid room; half is good almost everywhere
+    room = 0.5 * model.mode * (cutoff + 1) + floors.share_floor(0.5) - absolute
+    if room <= 0.0:
+        room = floors.above(cutoff, shifted=False) - absolute
     if room <= 0.0:
         return None
+    ground, mode = floors.ground, model.mode
     sectors: dict[int, SectorLevels] = {}
     rows: list[Level] = []
     for parity, chain in chains.items():
@@ -102,19 +105,21 @@ def _bounded(
         if chain.levels_below(absolute, room) > inside:
             return None
         kept = vectors[:inside]
-        last = kept[:, -1] * chain.leak
+        last = kept[:, -1]
         # the matrix of lower bounds is diagonal up to the leak: its trace bounds the shift
-        leaks = last.tolist()
-        lift = sum(leak * leak / (line - energy) for leak, energy in zip(leaks, energies, strict=False))
+        squared = chain.leak * chain.leak
+        lift = squared * sum(
+            end * end / (line - energy) for end, energy in zip(last.tolist(), energies, strict=False)
+        )
         lift *= 1.0 + 1e-12
-        scale = 8.0 * _EPS * (abs(floors.ground) + model.mode * 2.0 + line + abs(chain.beside[-1]))
-        upper = values[:inside] + floors.ground
-        leaked = last[:, None] * last
+        scale = 8.0 * _EPS * (abs(ground) + 2.0 * mode + line + chain.reach)
+        leaked = squared * np.multiply.outer(last, last)
+        upper = values[:inside] + ground
         ritz = RitzSet(chain, upper, kept, leaked, leaked, np.full(inside, scale))
         sectors[parity] = SectorLevels(ritz, upper - (lift + scale), absolute)
-        rows += [
-            Level(energy + scale, energy - lift - scale, parity, place, "bracketed")
-            for place, energy in enumerate(upper.tolist())
-        ]
+        above, below = ground + scale, ground - lift - scale
+        for place in range(inside):
+            energy = energies[place]
+            rows.append(Level(energy + above, energy + below, parity, place, "bracketed"))
     levels = tuple(in_order(rows))
     return Spectrum(levels, sectors, "fock", cutoff, True, floors)

@@ -20,9 +20,10 @@ _EPS = float(np.finfo(np.float64).eps)
 
 
 @lru_cache(maxsize=256)
-def _ladder(length: int) -> tuple[Array, Array]:
+def _ladder(length: int) -> tuple[Array, Array, Array]:
+    """n, sqrt(n+1) and (-1)^n for n < length."""
     n = np.arange(length, dtype=np.float64)
-    return n, np.sqrt(n + 1.0)
+    return n, np.sqrt(n + 1.0), 1.0 - 2.0 * (n % 2.0)
 
 
 class ParityChain(FockBlock):
@@ -31,20 +32,19 @@ class ParityChain(FockBlock):
     def __init__(self, model: CollectiveModel, parity: int, cutoff: int, shift: float) -> None:
         self.model, self.parity, self.cutoff, self.shift = model, parity, cutoff, shift
         self.dimension = cutoff + 1
-        n, root = _ladder(cutoff + 1)
-        half = 0.5 * model.splitting
+        n, root, sign = _ladder(cutoff + 1)
         # parity +1 starts with the spin down
-        even, odd = (-half, half) if parity > 0 else (half, -half)
-        self.along: Array = model.mode * n - shift
-        self.along[::2] += even
-        self.along[1::2] += odd
+        self.along: Array = model.mode * n - (0.5 * parity * model.splitting) * sign - shift
         # raising the spin with n goes with lc, lowering it with lr
-        first, second = (model.counter, model.rotating) if parity > 0 else (model.rotating, model.counter)
-        climb = root.copy()
-        climb[::2] *= first
-        climb[1::2] *= second
+        if model.rotating == model.counter:
+            climb = model.rotating * root
+        else:
+            middle, apart = 0.5 * model.total_coupling, 0.5 * parity * model.coupling_difference
+            climb = root * (middle - apart * sign)
         self.beside: Array = climb[:-1]
         self.leak = float(climb[-1])
+        # size of the largest coupling, for rounding
+        self.reach = (abs(model.rotating) + abs(model.counter)) * float(root[-1])
 
     @cached_property
     def quanta(self) -> NDArray[np.int64]:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, field, replace
-from typing import Literal
+from typing import Literal, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
@@ -16,8 +16,7 @@ Array = NDArray[np.float64]
 Status = Literal["bracketed", "estimated", "exact"]
 
 
-@dataclass(frozen=True, slots=True)
-class Level:
+class Level(NamedTuple):
     """One level: upper and lower bound, its sector, its place in the sector, and the claim."""
 
     upper: float
@@ -44,7 +43,7 @@ class Spectrum:
 
     def as_estimate(self) -> Spectrum:
         """The same numbers where the count below the lines could not be proven."""
-        levels = tuple(replace(level, status="estimated") for level in self.levels)
+        levels = tuple(level._replace(status="estimated") for level in self.levels)
         return replace(self, levels=levels)
 
     def as_start(self) -> Start:
@@ -56,8 +55,7 @@ class Spectrum:
         return Start(self.basis, self.cutoff, counts, sets)
 
 
-@dataclass(frozen=True, slots=True)
-class SectorLevels:
+class SectorLevels(NamedTuple):
     """Certified content of one sector: no more than len(lower) levels lie below `line`."""
 
     ritz: RitzSet
