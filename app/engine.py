@@ -8,11 +8,12 @@ import asyncio
 import contextlib
 import datetime as dt
 import logging
+import time
 from collections import Counter, OrderedDict
 from typing import Any
 
 from app import identity, plan
-from app.errors import BusyError, JobFailedError, NotFoundError, SheetError, SoftmodeError
+from app.errors import BusyError, JobFailedError, NotFoundError, PriceError, SheetError, SoftmodeError
 from app.exports import result_of
 from app.jobs import Job
 from app.plan import Chunk
@@ -25,6 +26,7 @@ logger = logging.getLogger(__name__)
 
 MOST_REMEMBERED_JOBS = 200
 TIDY_SECONDS = 1.0
+OVERSPENDING = 2.0
 
 
 class Engine:
@@ -329,7 +331,26 @@ class Engine:
                 job.drop_lapsed()
                 if job.is_active and not job.leases:
                     self.cancel(job)
+                self._check_spending(job)
             self._forget()
+
+    def _check_spending(self, job: Job) -> None:
+        """Stop a job that takes far longer than its price: a wrong forecast must not hold the workers."""
+        now = time.monotonic()
+        spent = job.pace[1] + sum(now - task.handed_over for task in job.active.values())
+        most = OVERSPENDING * self.settings.price_ceiling
+        if job.is_active and spent > most:
+            self._fail(
+                job,
+                PriceError(
+                    "took-too-long",
+                    f"this took much longer than predicted and was stopped after {spent:.0f} s of processor "
+                    "time; ask for fewer spins, fewer levels, a smaller coupling or a larger 'tol'",
+                    "points",
+                    job.total,
+                    f"at most {most:.0f} s of processor time for a sheet",
+                ),
+            )
 
     def _forget(self) -> None:
         """Forget the jobs used longest ago when there are too many points in memory; the store has them."""

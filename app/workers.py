@@ -73,6 +73,7 @@ class Task:
     report: Callable[[Outcome], None]
     deaths: int = 0
     stopped: bool = False
+    handed_over: float = field(default_factory=time.monotonic)
 
 
 def cap_threads() -> None:
@@ -98,8 +99,14 @@ def compute(questions: Sequence[PointQuestion], stopped: Callable[[], bool]) -> 
             answer = {**_NOTHING, "meets_tolerance": False, "note": f"not settled: {error.message}"}
             answers = solve_chain(questions[number + 1 :])
         # through JSON and back: what is shown at once is what the store gives back later
-        rows.append(json.loads(json.dumps({"answer": answer} | companions(question), allow_nan=False)))
+        row = {"answer": answer} | companions(question)
+        rows.append(json.loads(json.dumps(row, allow_nan=False, default=_plain_scalar)))
     return rows
+
+
+def _plain_scalar(value: Any) -> Any:
+    """Return what a numpy scalar holds as a Python number or truth value."""
+    return value.item()
 
 
 def _serve(pipe: Connection) -> None:

@@ -300,6 +300,18 @@ def test_expensive_sheets_are_refused_before_they_run(start_server: ServerFactor
     assert server.client.get("/api/sweep?spins=2&points=5").status_code == 200
 
 
+def test_a_wrong_forecast_cannot_hold_the_workers(start_server: ServerFactory) -> None:
+    server = start_server("--ceiling", "1", "--workers", "1")
+    job = start(server, {"spins": 10, "points": 60})
+    for pid in server.worker_pids():
+        os.kill(pid, signal.SIGSTOP)  # a point that takes for ever
+    server.wait_until(lambda: facts_of(server, job["id"])["state"] in {"failed", "done"}, 30.0)
+    facts = facts_of(server, job["id"])
+    assert facts["state"] == "failed"
+    assert facts["error"]["code"] == "took-too-long"
+    assert server.client.get("/api/sweep?spins=3&points=5").status_code == 200
+
+
 def test_unknown_jobs(server: RunningServer) -> None:
     for answer in (
         server.client.get("/api/jobs/none"),
