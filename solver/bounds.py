@@ -25,6 +25,7 @@ from solver.blocks import Block
 from solver.eigen import lowest_of_band
 
 Array = NDArray[np.float64]
+_EPS = float(np.finfo(np.float64).eps)
 
 
 class RitzSet(NamedTuple):
@@ -65,7 +66,8 @@ def ritz_set(
         vectors=vectors,
         residuals=rest @ rest.T + leaked,
         leaked=leaked,
-        roundoff=(turn.T**2) @ action.roundoff,
+        # the small eigenproblem errs by its own norm, whichever value one looks at
+        roundoff=(turn.T**2) @ action.roundoff + 8.0 * _EPS * abs(values[-1]),
     )
 
 

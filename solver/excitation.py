@@ -51,25 +51,34 @@ class ExcitationSpectrum:
     """Lowest levels of a model that conserves excitations.
 
     model: the one solved, with counter = 0; turned: it is the original rotated by pi about x,
-    so that Jz changes sign and j becomes N - j.
+    so that Jz changes sign and j becomes N - j. tilt: (w0, eps)/W where an uncoupled spin was
+    solved along its field of size W.
     """
 
     model: CollectiveModel
     turned: bool
     levels: tuple[ExcitationLevel, ...]
+    tilt: tuple[float, float] = (1.0, 0.0)
 
     def parity(self, level: ExcitationLevel) -> int:
-        """Parity of a level in the original frame."""
+        """Parity of a level in the original frame; 0 where the field is tilted."""
+        if self.tilt[1] != 0.0:
+            return 0
         sign = 1 if level.block % 2 == 0 else -1
         return sign * (-1) ** self.model.spins if self.turned else sign
 
 
 def excitation_levels(model: CollectiveModel, count: int) -> ExcitationSpectrum:
-    """The `count` lowest levels of a model with lr = 0 or lc = 0 and no bias.
+    """The `count` lowest levels of a model with lr = 0 or lc = 0 (and no bias unless both are 0).
 
     At least two levels of the ground state's parity are included, so that the gap exists.
     Raises ConvergenceError when the search would visit too many blocks.
     """
+    tilt = (1.0, 0.0)
+    if model.bias != 0.0:
+        field = math.hypot(model.splitting, model.bias)
+        tilt = (model.splitting / field, model.bias / field)
+        model = CollectiveModel(model.spins, model.mode, field, 0.0, 0.0)
     turned = model.rotating == 0.0 and model.counter != 0.0
     if turned:
         model = CollectiveModel(model.spins, model.mode, -model.splitting, model.counter, 0.0, 0.0)
@@ -77,11 +86,11 @@ def excitation_levels(model: CollectiveModel, count: int) -> ExcitationSpectrum:
     while True:
         search = _BlockSearch(model, wanted)
         rows = search.run()
-        same = [row for row in rows if (row[1] - rows[0][1]) % 2 == 0]
+        same = [row for row in rows if tilt[1] != 0.0 or (row[1] - rows[0][1]) % 2 == 0]
         if len(same) >= 2:
             break
         wanted += 2
-    return ExcitationSpectrum(model, turned, tuple(search.level(row[1], row[2]) for row in rows))
+    return ExcitationSpectrum(model, turned, tuple(search.level(row[1], row[2]) for row in rows), tilt)
 
 
 class _BlockSearch:

@@ -31,6 +31,10 @@ LARGEST_DIMENSION = 4_000_000
 _MOST_ROUNDS = 24
 _GUARDS = 1
 _FINEST = 1e-12
+# a gap this many roundings wide separates levels; parities this close may be listed either way
+_CLEAR = 1e4
+_DOUBLET = 1e-9
+_EXTRA_LEVELS = 60
 _PATIENT_UP_TO = 60
 
 
@@ -93,6 +97,7 @@ class _Search:
         self.starts: dict[int, RitzSet] = {}
         self.cutoff = first_cutoff(model, basis, count)
         self.guards = _GUARDS
+        self.most = count + _EXTRA_LEVELS
         self.blockwise = False
         # the count is refused for good where the leak of a large spin outweighs every cutoff
         self.refused = 0
@@ -114,6 +119,10 @@ class _Search:
             if not self._complete(sets):
                 continue
             line = self._line(sets)
+            if line is None:
+                self.counts = {parity: have + 2 for parity, have in self.counts.items()}
+                self.blockwise = True
+                continue
             spectrum = self._spectrum(sets, line)
             if self._coarse(spectrum):
                 self.accuracy *= 0.02
@@ -187,19 +196,30 @@ class _Search:
 
     def _reach(self, sets: dict[int, RitzSet]) -> int:
         """How many of the merged levels must be certified: the asked ones and both gaps."""
-        pairs = sorted((float(energy), parity) for parity, found in sets.items() for energy in found.energies)
-        again = [at for at, pair in enumerate(pairs) if pair[1] == pairs[0][1]]
-        second = again[1] + 1 if len(again) > 1 else len(pairs)
-        return max(self.count, 2, second)
+        merged = np.sort(np.concatenate([found.energies for found in sets.values()]))
+        reach = max(self.count, 2)
+        for found in sets.values():
+            # either parity of a closed doublet may count as the ground state's
+            if found.energies[0] <= merged[0] + _DOUBLET * self.model.mode:
+                second = found.energies[min(1, len(found.energies) - 1)]
+                reach = max(reach, int(np.searchsorted(merged, second)) + 1)
+        return reach
 
-    def _line(self, sets: dict[int, RitzSet]) -> float:
-        """Energy at which levels are counted: in the widest gap above the last wanted level."""
+    def _line(self, sets: dict[int, RitzSet]) -> float | None:
+        """Energy at which levels are counted: in the widest gap above the last wanted level.
+
+        None where every such gap is as narrow as rounding: a line inside a degenerate cluster
+        would count the cluster wrongly.
+        """
         merged = np.sort(np.concatenate([found.energies for found in sets.values()]))
         top = min(found.energies[-1] for found in sets.values())
         usable = merged[(merged <= top)]
         reach = self._reach(sets)
         lower, upper = usable[reach - 1 : -1], usable[reach:]
         at = int(np.argmax(upper - lower))
+        roundoff = max(float(found.roundoff.max()) for found in sets.values())
+        if upper[at] - lower[at] < _CLEAR * roundoff and max(self.counts.values()) < self.most:
+            return None
         return float(lower[at] + 0.6 * (upper[at] - lower[at]))
 
     def _certified(self, sets: dict[int, RitzSet], line: float) -> bool | None:
@@ -234,7 +254,8 @@ class _Search:
                 upper = float(found.energies[place] + found.roundoff[place])
                 lower = float(low[place] - found.roundoff[place])
                 rows.append(Level(upper, lower, parity, place, "bracketed"))
-        levels = tuple(in_order(rows)[: self._reach(sets)])
+        roundoff = max(float(found.roundoff.max()) for found in sets.values())
+        levels = tuple(in_order(rows, 4.0 * roundoff)[: self._reach(sets)])
         met = all(level.upper - level.lower <= self.tolerance for level in levels)
         return Spectrum(levels, sectors, self.basis, self.cutoff, met, self.floors)
 

@@ -85,8 +85,8 @@ class CollectiveModel:
 
     @property
     def conserves_excitations(self) -> bool:
-        """a^dag a + Jz (or a^dag a - Jz) commutes with H."""
-        return self.bias == 0.0 and (self.rotating == 0.0 or self.counter == 0.0)
+        """Whether a^dag a + Jz (or a^dag a - Jz) commutes with H, or nothing couples at all."""
+        return self.is_uncoupled or (self.bias == 0.0 and (self.rotating == 0.0 or self.counter == 0.0))
 
     @property
     def displacement_per_quantum(self) -> float:

@@ -101,20 +101,22 @@ def excitation_moments(spectrum: ExcitationSpectrum, level: ExcitationLevel) -> 
     m = j - 0.5 * size
     if spectrum.turned:
         m = -m
-    jzz = float(weights @ (m * m))
-    equal = 0.5 * (0.25 * size * (size + 2.0) - jzz)
+    along = float(weights @ m)
+    along_square = float(weights @ (m * m))
+    across_square = 0.5 * (0.25 * size * (size + 2.0) - along_square)
+    cosine, sine = spectrum.tilt
     return Moments(
         spins=size,
         quanta=float(weights @ n),
         pairs=float(weights @ (n * (n - 1.0))),
         amplitude=0.0,
         square=0.0,
-        jx=0.0,
-        jz=float(weights @ m),
-        jxx=equal,
-        jyy=equal,
-        jzz=jzz,
-        jxz=0.0,
+        jx=sine * along,
+        jz=cosine * along,
+        jxx=sine**2 * along_square + cosine**2 * across_square,
+        jyy=across_square,
+        jzz=cosine**2 * along_square + sine**2 * across_square,
+        jxz=sine * cosine * (along_square - across_square),
         schmidt=np.sort(weights)[::-1],
     )
 

@@ -35,7 +35,7 @@ class StateAccuracy:
 
     def shift_of(self, value: float, extra: float = 0.0) -> float:
         """Bound on the change of <A>, 0 <= A <= a^dag a + extra, with computed <A> = value."""
-        admixed = self.admixed_quanta + extra * self.sine**2
+        admixed = max(0.0, self.admixed_quanta) + extra * self.sine**2
         cosine = math.sqrt(max(1e-300, 1.0 - self.sine**2))
         root = (math.sqrt(max(value, 0.0)) + math.sqrt(admixed)) / cosine
         moved = self.sine**2 * root**2 + 2.0 * root * math.sqrt(admixed) + admixed
@@ -156,7 +156,8 @@ def squeezing_ramsey(moments: Moments, accuracy: StateAccuracy) -> Pair:
     moved = 2.0 * math.sqrt(2.0) * (min(1.0, accuracy.sine) + accuracy.rounding)
     shortest = length - moved
     if shortest <= 0.0:
-        return value / length**2, None
+        # the mean spin is not told from zero
+        return None, None
     return value / length**2, (value + error) / shortest**2 - value / length**2
 
 
@@ -164,7 +165,10 @@ def entropy(moments: Moments, accuracy: StateAccuracy) -> Pair:
     """-sum p log2 p over the Schmidt weights."""
     weights = moments.schmidt[moments.schmidt > 1e-18]
     value = max(0.0, float(-np.sum(weights * np.log2(weights))))
-    distance = min(0.5, accuracy.sine)
+    if accuracy.sine > 0.5:
+        # the continuity bound is no bound there; between none and the most there can be
+        return value, math.log2(moments.spins + 1.0)
+    distance = accuracy.sine
     error = distance * math.log2(max(moments.spins, 1))
     if distance > 0.0:
         error += -distance * math.log2(distance) - (1.0 - distance) * math.log2(1.0 - distance)

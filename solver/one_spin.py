@@ -58,7 +58,7 @@ def one_spin_levels(
             width = max(level.upper - level.lower for level in spectrum.levels)
             rounding = 2.0 * float(ground.ritz.roundoff[0])
             if sine <= state_accuracy and width <= max(tolerance, 1.5 * rounding):
-                spectrum.met = width <= tolerance
+                spectrum.met = bool(width <= tolerance)
                 return spectrum
         cutoff += _MARGIN + cutoff // 6
     return None
@@ -121,5 +121,5 @@ def _bounded(
         for place in range(inside):
             energy = energies[place]
             rows.append(Level(energy + above, energy + below, parity, place, "bracketed"))
-    levels = tuple(in_order(rows))
+    levels = tuple(in_order(rows, 2.0 * scale))
     return Spectrum(levels, sectors, "fock", cutoff, True, floors)

@@ -167,7 +167,8 @@ def _assembled(
     notes = rows.notes
     for entry in REGISTRY:
         value, error = entry.compute(moments, accuracy)
-        observables[entry.key], observables[f"{entry.key}_error"] = value, error
+        observables[entry.key] = None if value is None else float(value)
+        observables[f"{entry.key}_error"] = None if error is None else float(error)
         if value is None and entry.undefined and entry.undefined not in notes:
             notes.append(entry.undefined)
     gap, gap_error = _gap(rows, same_parity=True)
@@ -175,7 +176,9 @@ def _assembled(
     count = question.levels
     wanted = question.tolerance * question.model.mode
     widest = max(up - low for up, low in zip(rows.upper[:count], rows.lower[:count], strict=True))
-    meets = widest <= wanted
+    meets = bool(widest <= wanted)
+    if gap is None or gap_any is None:
+        notes.append("the gap needs a second level")
     if not meets:
         notes.append(f"bounds reach {widest:.1e}; rounding or size stands in the way of tol")
     return PointAnswer(
@@ -273,11 +276,11 @@ def _accuracy(spectrum: Spectrum) -> StateAccuracy:
     residual += float(sector.ritz.roundoff[0])
     sine = sine_of_angle(residual, energy, following)
     if sine >= 1.0:
-        return StateAccuracy(1.0, spectrum.floors.boson_bound(energy), _EPS)
+        return StateAccuracy(1.0, max(0.0, spectrum.floors.boson_bound(energy)), _EPS)
     room = following - energy
     lowered = residual * residual / room
     floor = spectrum.floors.share_floor(_QUANTA_SHARE)
-    admixed = (lowered + sine**2 * (energy - floor)) / (_QUANTA_SHARE * model.mode)
+    admixed = (lowered + sine**2 * max(0.0, energy - floor)) / (_QUANTA_SHARE * model.mode)
     return StateAccuracy(sine, admixed, 8.0 * _EPS * math.sqrt(sector.ritz.block.dimension))
 
 

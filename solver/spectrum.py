@@ -73,11 +73,11 @@ class Start:
     sets: dict[int, RitzSet] = field(default_factory=dict)
 
 
-def in_order(levels: list[Level]) -> list[Level]:
+def in_order(levels: list[Level], rounding: float) -> list[Level]:
     """Ascending in energy; levels closer than their rounding are listed even parity first."""
     levels.sort(key=lambda level: level.upper)
     for at in range(1, len(levels)):
         first, second = levels[at - 1], levels[at]
-        if second.lower < first.upper and second.parity > first.parity:
+        if second.upper - first.upper < rounding and second.parity > first.parity:
             levels[at - 1], levels[at] = second, first
     return levels
