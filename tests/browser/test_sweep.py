@@ -38,7 +38,7 @@ def test_default_sweep_draws_all_panels(visit: VisitFactory) -> None:
     critical = page.evaluate(
         "document.getElementById('plot').layout.shapes.filter(s => s.xref === 'x').map(s => s.x0)"
     )
-    assert critical == [pytest.approx(0.5)]
+    assert critical == [pytest.approx(0.5)] * 5
     assert page.locator("#hamiltonian math msqrt").count() == 1
 
 
