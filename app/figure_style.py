@@ -32,7 +32,8 @@ class Stroke:
 
     def line(self) -> dict[str, Any]:
         """Return the line of a trace."""
-        return {"color": f"token:{self.token}", "dash": self.dash, "width": self.width}
+        # every point is drawn: merging nearly straight stretches shows as corners on a wall
+        return {"color": f"token:{self.token}", "dash": self.dash, "width": self.width, "simplify": False}
 
     def key(self, label: str) -> dict[str, Any]:
         """Return one entry of a panel's key."""

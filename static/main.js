@@ -189,12 +189,12 @@ async function go(answer, before, same = false) {
   state.query = answer.query;
   state.computation = answer.id;
   showLink();
-  const face = showFace(answer.query, before);
+  // the numbers are asked for first, they take longest
   if (view) {
     if (!same) watch.redraw(answer.query);
   } else compute();
   try {
-    await face;
+    await showFace(answer.query, before);
   } catch (problem) {
     failed(problem);
   }
