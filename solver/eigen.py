@@ -27,7 +27,8 @@ Array = NDArray[np.float64]
 
 _DENSE_BELOW = 40
 _CHAIN_BELOW = 48
-_LONGEST_KRYLOV = 120
+_LONGEST_KRYLOV = 48
+_MOST_SHIFTS = 5
 _LONGEST_BLOCK = 40
 _LOOSE = 1e-3
 
@@ -79,7 +80,36 @@ def lowest_of_band(
         raise ConvergenceError("shift", int(info), "a shift below the spectrum")
     if blockwise:
         return _block_krylov(factor, size, wanted, start, accuracy)
-    return _krylov(factor, size, count, wanted, start, accuracy)
+    moved = 0.0
+    for _ in range(_MOST_SHIFTS):
+        found, settled = _krylov(factor, size, count, wanted, start, accuracy)
+        if settled:
+            break
+        # levels crowd far above the shift: move it up, as far as the matrix stays definite
+        nearer = _shift_up(band, found.values, moved)
+        if nearer is None:
+            break
+        factor, moved = nearer
+        start = found.vectors
+    return Subspace(found.values + moved, found.vectors)
+
+
+def _shift_up(band: Array, values: Array, moved: float) -> tuple[Array, float] | None:
+    """Cholesky factor after a larger shift below the lowest value found, and that shift.
+
+    values: distances of the found levels from the present shift `moved`.
+    """
+    spread = float(values[-1] - values[0])
+    for margin in (0.3, 1.0, 3.0):
+        further = float(values[0]) - margin * spread
+        if further <= 0.1 * values[0]:
+            return None
+        trial = band.copy(order="F")
+        trial[0] -= moved + further
+        factor, info = dpbtrf(trial, lower=1)
+        if info == 0:
+            return factor, moved + further
+    return None
 
 
 def lowest_of_chain(along: Array, beside: Array, wanted: int) -> tuple[Array, Array]:
@@ -98,8 +128,8 @@ def lowest_of_chain(along: Array, beside: Array, wanted: int) -> tuple[Array, Ar
 
 def _krylov(
     factor: Array, size: int, count: int, wanted: int, start: Array | None, accuracy: float
-) -> Subspace:
-    """Lanczos on the inverse with full reorthogonalisation."""
+) -> tuple[Subspace, bool]:
+    """Lanczos on the inverse with full reorthogonalisation, and whether it reached its goal."""
     longest = min(_LONGEST_KRYLOV, size - 1)
     basis = np.empty((longest + 1, size))
     vector = _starting_rows(size, 1, None if start is None else start.sum(axis=0)[None])[0]
@@ -108,6 +138,7 @@ def _krylov(
     goal = np.full(wanted, _LOOSE)
     goal[:count] = accuracy
     check = min(longest, 2 * wanted + 4)
+    settled = False
     for step in range(longest):
         image, _ = dpbtrs(factor, basis[step], lower=1)
         # three terms first, then one pass against everything: what is left is rounding
@@ -126,7 +157,8 @@ def _krylov(
             values, weights, _ = dstevd(along[: step + 1], beside[: max(step, 1)])
             top = slice(None, -wanted - 1, -1)
             left = beside[step] * np.abs(weights[-1, top]) / values[top]
-            if step + 1 == longest or beside[step] < 1e-14 * along[0] or np.all(left < goal):
+            settled = bool(np.all(left < goal)) or beside[step] < 1e-14 * along[0]
+            if settled or step + 1 == longest:
                 break
             check += 3
     used = step + 1
@@ -137,7 +169,7 @@ def _krylov(
     if beside[step] >= 1e-14 * along[0]:
         improved += (beside[step] * chosen[-1])[:, None] * basis[used]
     rows = np.linalg.qr(improved.T)[0].T
-    return Subspace(1.0 / values[top], np.ascontiguousarray(rows))
+    return Subspace(1.0 / values[top], np.ascontiguousarray(rows)), settled
 
 
 def _block_krylov(factor: Array, size: int, count: int, start: Array | None, accuracy: float) -> Subspace:
