@@ -10,6 +10,7 @@ from solver.errors import ConvergenceError, ModelError, QuestionError, SolverErr
 from solver.model import LARGEST_SPINS, CollectiveModel
 from solver.observables import REGISTRY, Observable
 from solver.point import PointAnswer, PointQuestion, answer_point
+from solver.portrait import STATE_NAMES, Portrait, draw_portrait, portrait_seconds
 from solver.sweep import SERIES, SeriesSpec, predicted_bytes, predicted_seconds, solve_chain
 from solver.thermodynamic import LargeNLimit, large_n_limit
 
@@ -30,6 +31,7 @@ __all__ = [
     "REGISTRY",
     "SERIES",
     "SOLVER_DIGEST",
+    "STATE_NAMES",
     "CollectiveModel",
     "ConvergenceError",
     "LargeNLimit",
@@ -37,12 +39,15 @@ __all__ = [
     "Observable",
     "PointAnswer",
     "PointQuestion",
+    "Portrait",
     "QuestionError",
     "SeriesSpec",
     "SolverError",
     "answer_point",
+    "draw_portrait",
     "effective_spin_levels",
     "large_n_limit",
+    "portrait_seconds",
     "predicted_bytes",
     "predicted_seconds",
     "solve_chain",

@@ -128,13 +128,20 @@ def solve_chain(questions: Sequence[PointQuestion]) -> Iterator[PointAnswer]:
 
     The chain starts cold, so its answers depend on the sequence alone, bit for bit.
     """
+    return (answer for answer, _ in solve_chain_with_states(questions))
+
+
+def solve_chain_with_states(
+    questions: Sequence[PointQuestion],
+) -> Iterator[tuple[PointAnswer, Start | None]]:
+    """The same chain, each answer with the vectors behind it (None where blocks are exact)."""
     start: Start | None = None
     for question in questions:
         reusable = start
         if start is not None and next(iter(start.sets.values())).block.model.spins != question.model.spins:
             reusable = None
         answer, start = answer_point(question, reusable)
-        yield answer
+        yield answer, start
 
 
 def predicted_seconds(question: PointQuestion) -> float:
