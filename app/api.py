@@ -11,7 +11,7 @@ from starlette.exceptions import HTTPException
 from starlette.responses import JSONResponse, Response, StreamingResponse
 from starlette.types import ASGIApp, Receive, Scope, Send
 
-from app import __version__, assets, exports, identity, limits, links, pages, streams
+from app import __version__, assets, exports, identity, limits, links, pages, point_pages, streams
 from app.engine import Engine
 from app.errors import (
     BusyError,
@@ -26,11 +26,11 @@ from app.faults import error_response, on_error
 from app.figures import picture
 from app.jobs import Job
 from app.keys import Key
+from app.points import PointDesk
 from app.security import Guard
 from app.settings import Settings
 from app.sheets import Sheet
 
-WAIT = Key("wait", "real", 30.0, "seconds to wait for the result", low=0.0, high=300.0)
 PARTIAL = Key("partial", "choice", "0", "whether an unfinished result will do", choices=("0", "1"))
 
 router = APIRouter()
@@ -57,9 +57,11 @@ def create_app(settings: Settings) -> FastAPI:
     )
     app.router.redirect_slashes = False
     app.state.engine = engine
+    app.state.points = PointDesk(engine)
     app.state.settings = settings
     app.include_router(router)
     app.include_router(pages.router)
+    app.include_router(point_pages.router)
     app.add_exception_handler(SoftmodeError, on_error)
     app.add_exception_handler(HTTPException, on_error)
     app.add_middleware(StoredLinks, engine=engine)
@@ -174,7 +176,7 @@ def _raise_if_over(job: Job) -> None:
 
 async def _finished(request: Request, pairs: dict[str, str]) -> tuple[Sheet, dict[str, Any] | None, Job]:
     """Return the sheet of a query and its result, or None in its place when `wait` seconds are not enough."""
-    wait = links.take(pairs, "wait", WAIT)
+    wait = links.take(pairs, "wait", links.WAIT)
     sheet = links.from_pairs(pairs)
     engine = _engine(request)
     job, _ = await engine.submit(sheet, _client(request), by_polling=True, extra_seconds=wait)
@@ -228,11 +230,7 @@ async def sweep_python(request: Request) -> Response:
 async def link_of_form(request: Request) -> Response:
     """Return the canonical link for what was typed into a form; a long one is stored under a short name."""
     sheet = links.from_form(await _body(request))
-    query = links.query_of(sheet)
-    if links.needs_storing(query):
-        short = links.stored_query(query)
-        await _engine(request).store.keep_link(short.partition("=")[2], query)
-        query = short
+    query = await _engine(request).store.shortened(links.query_of(sheet))
     return _json(
         {"link": links.whole(query), "query": query, "sheet": sheet.data(), "id": identity.sheet_id(sheet)}
     )

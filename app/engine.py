@@ -172,7 +172,14 @@ class Engine:
 
     def facts(self) -> dict[str, Any]:
         """Return counters since the start."""
-        names = ("jobs_started", "jobs_cancelled", "chunks_computed", "chunks_found", "points_computed")
+        names = (
+            "jobs_started",
+            "jobs_cancelled",
+            "chunks_computed",
+            "chunks_found",
+            "points_computed",
+            "portraits_started",
+        )
         return {name: self.counts[name] for name in names} | {
             "jobs_active": sum(job.is_active for job in self.jobs.values()),
             "workers": self.pool.size,

@@ -4,12 +4,14 @@ import csv
 import io
 import json
 from collections.abc import Mapping, Sequence
+from dataclasses import asdict
 from typing import Any
 
 from app import links
 from app.companions import LIMIT_KEYS
 from app.keys import SWEPT, number_text
-from app.plan import Plan
+from app.places import Place
+from app.plan import Plan, model_at
 from app.series import SERIES_KEYS
 from app.sheets import Sheet
 
@@ -50,7 +52,7 @@ def result_of(
     drawn = []
     for number, curve in enumerate(plan.curves):
         part = rows[number * sheet.points : (number + 1) * sheet.points]
-        drawn.append({"name": curve.name, "value": curve.value} | _columns(sheet, part))
+        drawn.append({"name": curve.name, "value": curve.value} | columns_of(sheet, part))
     if sheet.each is None:
         result |= {key: value for key, value in drawn[0].items() if key not in {"name", "value"}}
     else:
@@ -60,7 +62,29 @@ def result_of(
     return result
 
 
-def _columns(sheet: Sheet, rows: Sequence[Row | None]) -> dict[str, Any]:
+def point_of(place: Place, row: Row, *, name: str, provenance: Mapping[str, Any]) -> dict[str, Any]:
+    """Return the public result of one point: that of a sweep with one value, and its `portrait`."""
+    model = asdict(model_at(place.sheet, place.at, place.member))
+    below, above = (
+        None if x is None else links.whole(links.place_query(place.moved(x)), links.POINT_PAGE)
+        for x in place.neighbours
+    )
+    return {
+        "sheet": place.sheet.data(),
+        "link": links.whole(links.place_query(place), links.POINT_PAGE),
+        "id": name,
+        "complete": True,
+        "provenance": dict(provenance),
+        "axis": {"name": place.sheet.along, "values": [place.at]},
+        "member": place.member,
+        "model": model,
+        "neighbours": {"below": below, "above": above},
+        **columns_of(place.sheet, [row]),
+        "portrait": row["portrait"],
+    }
+
+
+def columns_of(sheet: Sheet, rows: Sequence[Row | None]) -> dict[str, Any]:
     """Return the series of one curve as columns, None where a point is missing."""
     answers = [None if row is None else row["answer"] for row in rows]
     limits = [None if row is None else row["limit"] for row in rows]

@@ -7,6 +7,15 @@ stylesheet. A font size is written "token:size-NAME".
 from dataclasses import dataclass
 from typing import Any
 
+# no buttons of Plotly's own: ours can be reached with the keyboard
+QUIET = {
+    "displayModeBar": False,
+    "responsive": False,
+    "doubleClick": "reset",
+    "showTips": False,
+    "scrollZoom": False,
+}
+
 MOST_MARKED = {"solid": 7, "dash": 4}
 
 FAMILY_SYMBOLS = (

@@ -48,13 +48,7 @@ def sweep_figure(sheet: Sheet, result: Mapping[str, Any]) -> dict[str, Any]:
     return {
         "data": [trace for panel in panels for trace in panel.traces],
         "layout": _layout(sheet, panels, curves),
-        "config": {
-            "displayModeBar": False,
-            "responsive": False,
-            "doubleClick": "reset",
-            "showTips": False,
-            "scrollZoom": False,
-        },
+        "config": dict(style.QUIET),
     }
 
 

@@ -12,9 +12,11 @@ from urllib.parse import quote, unquote_to_bytes, urlsplit
 
 from app.errors import RequestError, SheetError
 from app.keys import KEYS, MAP_KEYS, SWEPT, Key, nearest_name, number_text
+from app.places import MEMBER, STATE, Place, place_of
 from app.sheets import Sheet, critical_coupling
 
 PAGE = "/sweep"
+POINT_PAGE = "/point"
 LONGEST_LINK = 1800
 STORED_KEY = "stored"
 STORED_NAME = re.compile(r"[0-9a-f]{32}")
@@ -98,9 +100,27 @@ def link_of(sheet: Sheet) -> str:
     return whole(query_of(sheet))
 
 
-def whole(query: str) -> str:
+def whole(query: str, page: str = PAGE) -> str:
     """Return the link for a query string."""
-    return f"{PAGE}?{query}" if query else PAGE
+    return f"{page}?{query}" if query else page
+
+
+def place_from_pairs(pairs: Mapping[str, str]) -> Place:
+    """Return the point that decoded keys and values of a link name; raise SheetError."""
+    rest = dict(pairs)
+    options = {key.name: take(rest, key.name, key) for key in (MEMBER, STATE)}
+    return place_of(from_pairs(rest), options)
+
+
+def place_query(place: Place) -> str:
+    """Return the canonical query string of a point: that of its sheet with `at`, then its own options."""
+    options = place.options()
+    own = [
+        f"{key.name}={quote(key.write(options[key.name]), safe=_SAFE)}"
+        for key in (MEMBER, STATE)
+        if key.name in options
+    ]
+    return "&".join([query_of(place.sheet), *own])
 
 
 def stored_query(query: str) -> str:
@@ -135,6 +155,7 @@ def take(pairs: dict[str, str], name: str, key: Key) -> Any:
     return key.read(pairs.pop(name)) if name in pairs else key.default
 
 
+WAIT = Key("wait", "real", 30.0, "seconds to wait for the result", low=0.0, high=300.0)
 COUPLING_FORMS = ("lambda", "single", "critical")
 
 
@@ -216,7 +237,9 @@ def check_length(query: str, most: int) -> None:
 __all__ = [
     "LONGEST_LINK",
     "MAP_KEYS",
+    "POINT_PAGE",
     "SWEPT",
+    "WAIT",
     "check_length",
     "from_form",
     "from_pairs",
@@ -224,6 +247,8 @@ __all__ = [
     "needs_storing",
     "parse",
     "parse_link",
+    "place_from_pairs",
+    "place_query",
     "query_of",
     "split_query",
     "stored_name",

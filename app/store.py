@@ -16,6 +16,7 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
+from app import links
 from app.database import Database, prepare_directory, take_lock
 from app.errors import StartError, StoreError
 
@@ -142,6 +143,14 @@ class Store:
 
         await self._database.write(write)
 
+    async def shortened(self, query: str) -> str:
+        """Return a query that can be passed around: itself, or the short name under which it is now kept."""
+        if not links.needs_storing(query):
+            return query
+        short = links.stored_query(query)
+        await self.keep_link(short.partition("=")[2], query)
+        return short
+
     async def link(self, name: str) -> str | None:
         """Return the query kept under a short name."""
         return await self._database.read(
@@ -153,8 +162,8 @@ class Store:
 
         def read(connection: sqlite3.Connection) -> dict[str, int]:
             results = connection.execute("SELECT count(*) FROM results").fetchone()[0]
-            links = connection.execute("SELECT count(*) FROM links").fetchone()[0]
-            return {"results": results, "bytes": _used(connection), "links": links, "budget": self.budget}
+            kept = connection.execute("SELECT count(*) FROM links").fetchone()[0]
+            return {"results": results, "bytes": _used(connection), "links": kept, "budget": self.budget}
 
         return await self._database.read(read)
 

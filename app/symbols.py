@@ -1,5 +1,6 @@
 """What the quantities are called in each frame: words, symbols, units, and the Hamiltonian in MathML."""
 
+from collections.abc import Mapping
 from dataclasses import dataclass
 from html import escape
 
@@ -152,6 +153,16 @@ def sheet_title(sheet: Sheet) -> str:
     return f"{member_name(sheet)}{spins}: {swept} from {start} to {stop}"
 
 
+def place_title(sheet: Sheet, places: Mapping[str, float]) -> str:
+    """Return the title of one point of a sheet."""
+    known = {} if "spins" in sheet.swept else {"spins": sheet.spins}
+    parts = [
+        f"{symbol(name, sheet.frame).plain} = {_signed(int(value) if name == 'spins' else value)}"
+        for name, value in {**known, **places}.items()
+    ]
+    return f"{sheet.title or member_name(sheet)}: {', '.join(parts)}"
+
+
 def curve_label(name: str, value: float, frame: str) -> str:
     """Return the label of one curve of a family, for a figure."""
     return f"{symbol(name, frame).figure} = {_signed(int(value) if name == 'spins' else value)}"
@@ -251,8 +262,11 @@ def _trap_terms(sheet: Sheet) -> str:
     return terms + (f"<mo>−</mo>{_EPSILON}{_spin('S', 'z')}" if _biased(sheet) else "")
 
 
-def values_in_force(sheet: Sheet) -> list[str]:
-    """Return the values behind the symbols as MathML elements: fixed ones, the sweep, the family."""
+def values_in_force(sheet: Sheet, places: Mapping[str, float] | None = None) -> list[str]:
+    """Return the values behind the symbols as MathML elements: fixed ones, the sweep, the family.
+
+    With `places`, what is swept or varied stands at the one value given there.
+    """
     unit = "" if sheet.unit == "none" else f"<mspace width='.25em'/><mtext>{escape(sheet.unit)}</mtext>"
     shown = []
     fixed: dict[str, float] = {
@@ -268,6 +282,10 @@ def values_in_force(sheet: Sheet) -> list[str]:
     for name, value in fixed.items():
         if not _overridden(name, sheet):
             shown.append(_equation(name, f"<mn>{_signed(value)}</mn>", sheet, unit))
+    if places is not None:
+        return shown + [
+            _equation(name, f"<mn>{_signed(value)}</mn>", sheet, unit) for name, value in places.items()
+        ]
     interval = f"<mn>{_signed(sheet.start)}</mn><mo>…</mo><mn>{_signed(sheet.stop)}</mn>"
     shown.append(_equation(sheet.along, interval, sheet, unit))
     if sheet.each is not None:

@@ -29,6 +29,8 @@ from solver import (
     ConvergenceError,
     PointQuestion,
     SolverError,
+    StateName,
+    draw_portrait,
     solve_chain,
 )
 
@@ -67,10 +69,14 @@ class Outcome:
 
 @dataclass
 class Task:
-    """A chunk under way: its questions, and what to call with its outcome (from a thread of the pool)."""
+    """A chunk under way: its questions, and what to call with its outcome (from a thread of the pool).
+
+    With `portrait`, only the last point is answered, with the pictures of that state.
+    """
 
     questions: Sequence[PointQuestion]
     report: Callable[[Outcome], None]
+    portrait: StateName | None = None
     deaths: int = 0
     stopped: bool = False
     handed_over: float = field(default_factory=time.monotonic)
@@ -98,10 +104,21 @@ def compute(questions: Sequence[PointQuestion], stopped: Callable[[], bool]) -> 
         except ConvergenceError as error:
             answer = {**_NOTHING, "meets_tolerance": False, "note": f"not settled: {error.message}"}
             answers = solve_chain(questions[number + 1 :])
-        # through JSON and back: what is shown at once is what the store gives back later
-        row = {"answer": answer} | companions(question)
-        rows.append(json.loads(json.dumps(row, allow_nan=False, default=_plain_scalar)))
+        rows.append(_plain_row({"answer": answer} | companions(question)))
     return rows
+
+
+def compute_portrait(questions: Sequence[PointQuestion], state: StateName) -> list[dict[str, Any]]:
+    """Return the row of the last point of a chunk, the same as `compute` gives it, with its `portrait`."""
+    found = draw_portrait(questions, state)
+    row = {"answer": found.answer.row(), "portrait": found.pictures()} | companions(questions[-1])
+    return [_plain_row(row)]
+
+
+def _plain_row(row: dict[str, Any]) -> dict[str, Any]:
+    """Return a row through JSON and back: what is shown at once is what the store gives back later."""
+    plain: dict[str, Any] = json.loads(json.dumps(row, allow_nan=False, default=_plain_scalar))
+    return plain
 
 
 def _plain_scalar(value: Any) -> Any:
@@ -122,14 +139,18 @@ def _serve(pipe: Connection) -> None:
         while True:
             message = pipe.recv()
             if message != STOP:  # a stop that came too late
-                pipe.send(_answer(message, pipe))
+                questions, portrait = message
+                pipe.send(_answer(questions, portrait, pipe))
 
 
-def _answer(questions: Sequence[PointQuestion], pipe: Connection) -> Outcome:
+def _answer(questions: Sequence[PointQuestion], portrait: StateName | None, pipe: Connection) -> Outcome:
     started = time.process_time()
     try:
-        # nothing but a stop is sent while a chunk is under way
-        rows = compute(questions, lambda: pipe.poll() and pipe.recv() == STOP)
+        if portrait is not None:
+            rows: list[dict[str, Any]] | None = compute_portrait(questions, portrait)
+        else:
+            # nothing but a stop is sent while a chunk is under way
+            rows = compute(questions, lambda: pipe.poll() and pipe.recv() == STOP)
     except SolverError as error:
         facts = {
             "message": error.message,
@@ -250,7 +271,7 @@ class Worker:
                 if task.stopped:
                     return Outcome("stopped")
                 self.current = task
-                pipe.send(tuple(task.questions))
+                pipe.send((tuple(task.questions), task.portrait))
             if pipe not in wait([pipe, process.sentinel]):
                 return None
             outcome = pipe.recv()

@@ -10,7 +10,7 @@ from solver.errors import ConvergenceError, ModelError, QuestionError, SolverErr
 from solver.model import LARGEST_SPINS, CollectiveModel
 from solver.observables import REGISTRY, Observable
 from solver.point import PointAnswer, PointQuestion, answer_point
-from solver.portrait import STATE_NAMES, Portrait, draw_portrait, portrait_seconds
+from solver.portrait import STATE_NAMES, Portrait, StateName, draw_portrait, portrait_seconds
 from solver.sweep import SERIES, SeriesSpec, predicted_bytes, predicted_seconds, solve_chain
 from solver.thermodynamic import LargeNLimit, large_n_limit
 
@@ -43,6 +43,7 @@ __all__ = [
     "QuestionError",
     "SeriesSpec",
     "SolverError",
+    "StateName",
     "answer_point",
     "draw_portrait",
     "effective_spin_levels",

@@ -179,7 +179,7 @@ def wigner_map(state: SchmidtState, points: int = 201) -> WignerMap:
     middle, half_x = 0.0, max(-along.low, along.high)
     if along.low > 0.0 or along.high < 0.0:
         middle, half_x = 0.5 * (along.low + along.high), 0.5 * (along.high - along.low)
-    half_x, half_p = (max(_SMALLEST_WINDOW, 1.15 * half) for half in (half_x, across.high))
+    half_x, half_p = (max(_SMALLEST_WINDOW, 1.02 * half) for half in (half_x, across.high))
     if max(half_x, half_p) <= _ROUND_UP_TO * min(half_x, half_p):
         half_x = half_p = max(half_x, half_p)
     x = middle + np.linspace(-half_x, half_x, points)

@@ -15,7 +15,7 @@ from typing import Any, Literal
 import numpy as np
 from numpy.typing import NDArray
 
-from solver.errors import QuestionError
+from solver.errors import ConvergenceError, QuestionError
 from solver.excitation import ExcitationSpectrum, excitation_levels
 from solver.fock_basis import FockBlock
 from solver.forecast import classical_quanta
@@ -103,10 +103,11 @@ def _rounded(values: Array) -> list[list[float]]:
 def draw_portrait(questions: Sequence[PointQuestion], state: StateName = "ground") -> Portrait:
     """Portrait of the last of a chain of questions; the answer is that of `solve_chain`, bit for bit.
 
-    Raises QuestionError for a symmetry-broken state where the ground doublet is open, and
-    ConvergenceError as `solve_chain` does.
+    After a point that cannot be settled the chain starts anew. Raises QuestionError for a
+    symmetry-broken state where the ground doublet is open, and ConvergenceError when the last
+    point itself cannot be settled.
     """
-    *_, (answer, start) = solve_chain_with_states(questions)
+    answer, start = _last_of_chain(questions)
     question = questions[-1]
     closed = start is not None and _splitting(question, answer, start) is not None
     if state != "ground" and not closed:
@@ -126,6 +127,16 @@ def draw_portrait(questions: Sequence[PointQuestion], state: StateName = "ground
         wigner_map(found),
         husimi_map(found),
     )
+
+
+def _last_of_chain(questions: Sequence[PointQuestion]) -> tuple[PointAnswer, Start | None]:
+    chain = solve_chain_with_states(questions)
+    for number in range(len(questions) - 1):
+        try:
+            next(chain)
+        except ConvergenceError:
+            chain = solve_chain_with_states(questions[number + 1 :])
+    return next(chain)
 
 
 def portrait_seconds(question: PointQuestion) -> float:

@@ -40,6 +40,7 @@ cursor.describe = (point) => readout.describe(point);
 cursor.onPin = (value) => pinned(value);
 readout.onStep = (count) => cursor.step(count);
 readout.onPin = () => cursor.pin();
+readout.onOpen = () => openPoint();
 
 // -- pictures ---------------------------------------------------------------------------------------
 
@@ -232,6 +233,17 @@ function pinned(value) {
   form.box("at").value = value === null ? "" : String(value);
   readout.show(cursor.point, value !== null);
   commit();
+}
+
+// The point under the cursor, on its own page; the way back leads to the sweep with the cursor pinned there.
+async function openPoint() {
+  const value = readout.data.axis.values[readout.point];
+  try {
+    const answer = await post("api/link", form.fields({ at: String(value) }));
+    location.assign(withQuery("point", answer.query));
+  } catch (problem) {
+    failed(problem);
+  }
 }
 
 let zoomTimer = null;

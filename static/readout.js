@@ -1,31 +1,20 @@
 // The value strip under the cursor, the full list of values, and the table of the printed run sheet.
 
-import { bound, plain, supported } from "./format.js";
+import { plain } from "./format.js";
+import { cellOf, element, Values } from "./values.js";
 
 const GLYPHS = ["●", "■", "◆", "▲", "▼", "★", "◀", "▶"];
-const PARITY = { 1: "even", "-1": "odd", 0: "no parity" };
 const PRINTED_ROWS = 9;
 const PRINTED_DIGITS = 7;
 const TABLE_DIGITS = 9;
 
-function element(tag, className, text) {
-  const made = document.createElement(tag);
-  if (className) made.className = className;
-  if (text !== undefined) made.textContent = text;
-  return made;
-}
-
-function unitOf(unit) {
-  return unit ? ` ${unit}` : "";
-}
-
-export class Readout {
+export class Readout extends Values {
   constructor(strip, more, moreTable, runSheet) {
+    super();
     this.strip = strip;
     this.more = more;
     this.moreTable = moreTable;
     this.runSheet = runSheet;
-    this.data = null;
     this.buttons = null;
     this.point = null;
     more.querySelector("details").addEventListener("toggle", () => this.writeMore());
@@ -41,11 +30,6 @@ export class Readout {
     return axis.values.map((x, point) => [x, curves.some((curve) => curve.series.energy[point] !== null)]);
   }
 
-  place(point) {
-    const { axis } = this.data;
-    return `${axis.symbol} = ${plain(axis.values[point])}${unitOf(axis.unit)}`;
-  }
-
   // One line for screen readers.
   describe(point) {
     if (!this.data || point === null) return "no values yet";
@@ -55,38 +39,6 @@ export class Readout {
       return `${curve.label ? `${curve.label}: ` : ""}E0 ${level.value} ${level.bound}, boson number ${bosons.value} ${bosons.bound}`;
     });
     return `${this.place(point)}; ${parts.join("; ")}`;
-  }
-
-  field(key) {
-    return this.data.fields.find((one) => one.key === key);
-  }
-
-  level(curve, point, rank, digits, unit = this.data.energy_unit) {
-    const { series } = curve;
-    const upper = series.energy[point][rank];
-    const lower = series.energy_lower[point]?.[rank] ?? null;
-    const width = lower === null ? null : upper - lower;
-    const status = series.energy_status[point][rank];
-    const width_words = width === null ? "no lower bound" : width > 0 ? `+0 −${bound(width)}` : "exact";
-    return {
-      value: `${supported(upper, width, digits)}${unitOf(unit)}`,
-      bound: width_words,
-      status: `${PARITY[series.parity[point][rank]]}, ${status}`,
-    };
-  }
-
-  number(curve, point, field, digits, unit = field.unit) {
-    const value = curve.series[field.key][point];
-    const error = field.error ? curve.series[field.error]?.[point] ?? null : null;
-    if (value === null) return { value: "–", bound: this.reason(curve, point) };
-    return {
-      value: `${supported(value, error, digits)}${unitOf(unit)}`,
-      bound: error === null ? "" : `± ${bound(error)}${field.claim === "estimate" ? " estimated" : ""}`,
-    };
-  }
-
-  reason(curve, point) {
-    return curve.notes.find((note) => note.point === point)?.note ?? "";
   }
 
   // -- strip --------------------------------------------------------------------------------------
@@ -112,15 +64,16 @@ export class Readout {
       this.head = element("div", "strip-head");
       this.where = element("span", "place");
       this.state = element("span", "status");
-      this.buttons = { left: element("button", "", "◀"), right: element("button", "", "▶"), pin: element("button") };
+      this.buttons = { left: element("button", "", "◀"), right: element("button", "", "▶"), pin: element("button"), open: element("button", "", "Open this point") };
       this.buttons.left.setAttribute("aria-label", "Cursor one point to the left");
       this.buttons.right.setAttribute("aria-label", "Cursor one point to the right");
       for (const button of Object.values(this.buttons)) button.type = "button";
-      this.head.append(this.buttons.left, this.where, this.buttons.right, this.buttons.pin, this.state);
+      this.head.append(this.buttons.left, this.where, this.buttons.right, this.buttons.pin, this.buttons.open, this.state);
       this.strip.append(this.head);
       this.buttons.left.addEventListener("click", () => this.onStep(-1));
       this.buttons.right.addEventListener("click", () => this.onStep(1));
       this.buttons.pin.addEventListener("click", () => this.onPin());
+      this.buttons.open.addEventListener("click", () => this.onOpen());
     }
     this.where.textContent = this.place(point);
     this.buttons.pin.textContent = pinned ? "Unpin" : "Pin here";
@@ -135,14 +88,7 @@ export class Readout {
     const curve = this.data.curves[0];
     const list = element("dl", "cells");
     if (!curve.series.energy[point]) return list;
-    const cell = (title, value, words, second) => {
-      const box = element("div", second ? "cell second-row" : "cell");
-      box.append(element("dt", "", title));
-      const text = element("dd");
-      text.append(element("span", "value", value), " ", element("span", "bound", words));
-      box.append(text);
-      list.append(box);
-    };
+    const cell = (...parts) => list.append(cellOf(...parts));
     const ground = this.level(curve, point, 0);
     cell(`E₀ ground level, ${ground.status}`, ground.value, ground.bound);
     for (const field of this.data.fields.filter((one) => one.foremost)) {

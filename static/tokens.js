@@ -32,7 +32,8 @@ export function resolver() {
   };
   const resolve = (item) => {
     if (typeof item === "string") return item.startsWith("token:") ? look(item) : item;
-    if (Array.isArray(item)) return typeof item[0] === "number" || item[0] === null ? item : item.map(resolve);
+    // rows of numbers are left alone, but the steps of a colour scale are pairs of a number and a token
+    if (Array.isArray(item)) return typeof item.at(-1) === "number" || item.at(-1) === null ? item : item.map(resolve);
     if (item && typeof item === "object") {
       return Object.fromEntries(Object.entries(item).map(([key, value]) => [key, resolve(value)]));
     }

@@ -1,0 +1,190 @@
+"""The page of one point, its JSON, and its pictures."""
+
+import asyncio
+from dataclasses import dataclass
+from typing import Any
+
+from fastapi import APIRouter, Request
+from starlette.responses import HTMLResponse, JSONResponse, Response
+
+from app import exports, links
+from app.assets import asset_url, shelf
+from app.errors import SoftmodeError
+from app.figure_point import point_figures
+from app.figure_readout import readout
+from app.identity import versions
+from app.keys import number_text
+from app.pages import FILES, environment, plotly_mark
+from app.places import STATE, Place
+from app.points import PointDesk
+from app.store import Store
+from app.symbols import hamiltonian, member_name, place_title, symbol, values_in_force
+
+router = APIRouter()
+
+STATE_WORDS = {
+    "ground": "ground state",
+    "plus": "broken symmetry, ⟨a⟩ > 0",
+    "minus": "broken symmetry, ⟨a⟩ < 0",
+}
+
+
+@dataclass(frozen=True)
+class Way:
+    """A link to another page: what it says, where it leads (nothing at an end), whether it is this page."""
+
+    words: str
+    address: str | None
+    here: bool = False
+
+
+@dataclass(frozen=True)
+class PointPage:
+    """Everything the template `point.html` names; after an error only `error` and `sweep` mean anything."""
+
+    title: str
+    member: str
+    note: str
+    hamiltonian: str
+    values: list[str]
+    query: str
+    error: dict[str, Any] | None
+    sweep: str
+    below: Way
+    above: Way
+    members: list[Way]
+    states: list[Way]
+    assets: str
+    scripts: dict[str, str]
+    plotly_mark: str
+    versions: dict[str, str]
+    boot: dict[str, Any]
+
+
+@router.get("/point")
+async def point(request: Request) -> Response:
+    """Show a point; opening the page computes nothing, its script asks for the numbers."""
+    query = _query(request)
+    try:
+        place = links.place_from_pairs(links.split_query(query))
+    except SoftmodeError as error:
+        return _rendered(_broken_page(error), error.status)
+    return _rendered(await _page(place, request.app.state.engine.store), 200)
+
+
+@router.get("/api/point")
+async def point_json(request: Request) -> Response:
+    """Return the result of a point, or 202 when it takes longer than `wait`: then ask again."""
+    _, result = await _result(request)
+    return _accepted() if result is None else await _json(result)
+
+
+@router.get("/api/point/picture")
+async def point_picture(request: Request) -> Response:
+    """Return the figures of a point and the numbers behind them."""
+    place, result = await _result(request)
+    if result is None:
+        return _accepted()
+    portrait = result["portrait"]
+    told = ("state", "doublet_closed", "mean", "above_needed", "parity_of_n")
+    return await _json(
+        {
+            "figures": await asyncio.to_thread(point_figures, place.sheet, result),
+            "readout": readout(place.sheet, result),
+            "portrait": {key: portrait[key] for key in told} | {"resolved": portrait["wigner"]["resolved"]},
+        }
+    )
+
+
+def _query(request: Request) -> str:
+    return str(request.scope["query_string"].decode("latin-1"))
+
+
+async def _result(request: Request) -> tuple[Place, dict[str, Any] | None]:
+    """Return the point that a query names and its result, None in its place when `wait` is not enough."""
+    pairs = links.split_query(_query(request))
+    wait = links.take(pairs, "wait", links.WAIT)
+    place = links.place_from_pairs(pairs)
+    desk: PointDesk = request.app.state.points
+    return place, await desk.ask(place, wait)
+
+
+def _accepted() -> Response:
+    return JSONResponse({"state": "running"}, 202, headers={"Retry-After": "1"})
+
+
+async def _json(data: Any) -> Response:
+    return Response(await asyncio.to_thread(exports.encode, data), media_type="application/json")
+
+
+async def _page(place: Place, store: Store) -> PointPage:
+    sheet = place.sheet
+    query = await store.shortened(links.place_query(place))
+
+    async def to(other: Place) -> str:
+        return links.whole(await store.shortened(links.place_query(other)), links.POINT_PAGE).lstrip("/")
+
+    below, above = place.neighbours
+    along = symbol(sheet.along, sheet.frame).plain
+    members = []
+    if sheet.each is not None:
+        name = symbol(sheet.each.name, sheet.frame).plain
+        for value in sheet.each.values:
+            other = await to(place.other(member=value))
+            members.append(Way(f"{name} = {_shown(value)}", other, value == place.member))
+    return PointPage(
+        title=place_title(sheet, place.values()),
+        member=member_name(sheet),
+        note=sheet.note,
+        hamiltonian=hamiltonian(sheet),
+        values=values_in_force(sheet, place.values()),
+        query=query,
+        error=None,
+        sweep=links.whole(await store.shortened(links.query_of(sheet))).lstrip("/"),
+        below=Way(f"{along} = {_shown(below)}", None if below is None else await to(place.moved(below))),
+        above=Way(f"{along} = {_shown(above)}", None if above is None else await to(place.moved(above))),
+        members=members,
+        states=[
+            Way(STATE_WORDS[name], await to(place.other(state=name)), name == place.state)
+            for name in STATE.choices
+        ],
+        **_shell(query, None),
+    )
+
+
+def _broken_page(error: SoftmodeError) -> PointPage:
+    problem = error.body()["error"]
+    nowhere = Way("", None)
+    return PointPage(
+        "This point cannot be shown", "", "", "", [], "", problem, "sweep", nowhere, nowhere, [], [],
+        **_shell("", problem),
+    )  # fmt: skip
+
+
+def _shell(query: str, problem: dict[str, Any] | None) -> dict[str, Any]:
+    """Return what every page carries for its script."""
+    named = versions()
+    return {
+        "assets": shelf().digest,
+        "scripts": {name: asset_url(name) for name in FILES},
+        "plotly_mark": plotly_mark(),
+        "versions": named,
+        "boot": {
+            "query": query,
+            "error": problem,
+            "assets": shelf().digest,
+            "solver": named["solver"],
+        },
+    }
+
+
+def _shown(value: float | None) -> str:
+    """Return a value for the words of a way; short, the link itself is exact."""
+    if value is None:
+        return ""
+    return number_text(float(f"{value:.6g}")).replace("-", "−")
+
+
+def _rendered(page: PointPage, status: int) -> HTMLResponse:
+    fields = {name: getattr(page, name) for name in page.__dataclass_fields__}
+    return HTMLResponse(environment().get_template("point.html").render(fields), status)
