@@ -1,7 +1,9 @@
 """The pages: HTML for people, and the face of a sheet as JSON for the page's own script."""
 
+import dataclasses
 import functools
 import re
+from collections.abc import Mapping
 from dataclasses import asdict, dataclass
 from pathlib import Path
 from typing import Any
@@ -26,8 +28,20 @@ FILES = ("softmode.css", "theme.js", "main.js", "point.js", "icon.svg", PLOTLY)
 COUPLING_AS = Key("coupling_as", "choice", "lambda", "meaning of the box", choices=links.COUPLING_FORMS)
 
 
-@dataclass(frozen=True)
-class SweepPage:
+@dataclass(frozen=True, kw_only=True)
+class Shell:
+    """What every page carries beside its content; `boot` is for its script."""
+
+    error: dict[str, Any] | None
+    assets: str
+    scripts: dict[str, str]
+    plotly_mark: str
+    versions: dict[str, str]
+    boot: dict[str, Any]
+
+
+@dataclass(frozen=True, kw_only=True)
+class SweepPage(Shell):
     """Everything the template `sweep.html` names.
 
     `face` is what the page shows of its sheet; after an error it is that of the default sheet, `typed`
@@ -36,21 +50,15 @@ class SweepPage:
 
     face: Face
     invented: str
-    error: dict[str, Any] | None
     typed: dict[str, Any]
     choices: dict[str, list[tuple[str, str]]]
     ranges: dict[str, str]
-    assets: str
-    scripts: dict[str, str]
-    plotly_mark: str
-    versions: dict[str, str]
-    boot: dict[str, Any]
 
 
 @router.get("/")
 async def front(request: Request) -> Response:
     """Show the sweep of an invented laboratory; a query is that of `/sweep`."""
-    query = _query(request)
+    query = query_of(request)
     if query:
         return await sweep(request)
     return _sweep_page(scenario.example(), None, {}, scenario.MARK)
@@ -59,7 +67,7 @@ async def front(request: Request) -> Response:
 @router.get("/sweep")
 async def sweep(request: Request) -> Response:
     """Show a sweep; opening the page computes nothing, its script asks for the picture."""
-    query = _query(request)
+    query = query_of(request)
     try:
         sheet = links.parse(query)
     except SoftmodeError as error:
@@ -70,12 +78,13 @@ async def sweep(request: Request) -> Response:
 @router.get("/api/face")
 async def face(request: Request) -> Response:
     """Return the face of a sheet for the page's script."""
-    pairs = links.split_query(_query(request))
+    pairs = links.split_query(query_of(request))
     coupling_as = links.take(pairs, "coupling_as", COUPLING_AS)
     return JSONResponse(asdict(face_of(links.from_pairs(pairs), coupling_as)))
 
 
-def _query(request: Request) -> str:
+def query_of(request: Request) -> str:
+    """Return the query string as it came."""
     return str(request.scope["query_string"].decode("latin-1"))
 
 
@@ -90,28 +99,35 @@ def _sweep_page(
     sheet: Sheet, error: SoftmodeError | None, typed: dict[str, Any], invented: str
 ) -> HTMLResponse:
     shown = face_of(sheet)
-    problem = error.body()["error"] if error is not None else None
     page = SweepPage(
         face=shown,
         invented=invented,
-        error=problem,
         typed=typed,
         choices=_choices(sheet.frame),
         ranges={name: _range_words(key) for name, key in KEYS.items()},
-        assets=shelf().digest,
-        scripts={name: asset_url(name) for name in FILES},
-        plotly_mark=plotly_mark(),
-        versions=versions(),
-        boot={
-            "query": shown.query,
-            "texts": shown.texts,
-            "error": problem,
-            "assets": shelf().digest,
-            "solver": versions()["solver"],
-        },
+        **shell(error, {"query": shown.query, "texts": shown.texts}),
     )
-    fields = {name: getattr(page, name) for name in page.__dataclass_fields__}
-    html = environment().get_template("sweep.html").render(fields)
+    return rendered("sweep.html", page, error)
+
+
+def shell(error: SoftmodeError | None, boot: Mapping[str, Any]) -> dict[str, Any]:
+    """Return the fields of a Shell; `boot` is what the page's own script needs."""
+    problem = error.body()["error"] if error is not None else None
+    named = versions()
+    return {
+        "error": problem,
+        "assets": shelf().digest,
+        "scripts": {name: asset_url(name) for name in FILES},
+        "plotly_mark": plotly_mark(),
+        "versions": named,
+        "boot": {**boot, "error": problem, "assets": shelf().digest, "solver": named["solver"]},
+    }
+
+
+def rendered(template: str, page: Shell, error: SoftmodeError | None) -> HTMLResponse:
+    """Return a page as HTML, with the status of its error."""
+    fields = {field.name: getattr(page, field.name) for field in dataclasses.fields(page)}
+    html = environment().get_template(template).render(fields)
     return HTMLResponse(html, error.status if error is not None else 200)
 
 

@@ -1,24 +1,23 @@
 """The page of one point, its JSON, and its pictures."""
 
 import asyncio
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 from fastapi import APIRouter, Request
-from starlette.responses import HTMLResponse, JSONResponse, Response
+from starlette.responses import JSONResponse, Response
 
 from app import exports, links
-from app.assets import asset_url, shelf
 from app.errors import SoftmodeError
+from app.face import Face, face_of
 from app.figure_point import point_figures
 from app.figure_readout import readout
-from app.identity import versions
 from app.keys import number_text
-from app.pages import FILES, environment, plotly_mark
+from app.pages import Shell, query_of, rendered, shell
 from app.places import STATE, Place
 from app.points import PointDesk
 from app.store import Store
-from app.symbols import hamiltonian, member_name, place_title, symbol, values_in_force
+from app.symbols import place_title, symbol, values_in_force
 
 router = APIRouter()
 
@@ -38,38 +37,30 @@ class Way:
     here: bool = False
 
 
-@dataclass(frozen=True)
-class PointPage:
-    """Everything the template `point.html` names; after an error only `error` and `sweep` mean anything."""
+@dataclass(frozen=True, kw_only=True)
+class PointPage(Shell):
+    """Everything the template `point.html` names.
 
-    title: str
-    member: str
-    note: str
-    hamiltonian: str
-    values: list[str]
-    query: str
-    error: dict[str, Any] | None
+    `face` is that of the sheet, with title, values and query of the point; after an error, of the default
+    sheet. `sweep` leads back, `below` and `above` to the neighbours.
+    """
+
+    face: Face
     sweep: str
     below: Way
     above: Way
     members: list[Way]
     states: list[Way]
-    assets: str
-    scripts: dict[str, str]
-    plotly_mark: str
-    versions: dict[str, str]
-    boot: dict[str, Any]
 
 
 @router.get("/point")
 async def point(request: Request) -> Response:
     """Show a point; opening the page computes nothing, its script asks for the numbers."""
-    query = _query(request)
     try:
-        place = links.place_from_pairs(links.split_query(query))
+        place = links.place_from_pairs(links.split_query(query_of(request)))
     except SoftmodeError as error:
-        return _rendered(_broken_page(error), error.status)
-    return _rendered(await _page(place, request.app.state.engine.store), 200)
+        return rendered("point.html", _broken_page(error), error)
+    return rendered("point.html", await _page(place, request.app.state.engine.store), None)
 
 
 @router.get("/api/point")
@@ -96,13 +87,9 @@ async def point_picture(request: Request) -> Response:
     )
 
 
-def _query(request: Request) -> str:
-    return str(request.scope["query_string"].decode("latin-1"))
-
-
 async def _result(request: Request) -> tuple[Place, dict[str, Any] | None]:
     """Return the point that a query names and its result, None in its place when `wait` is not enough."""
-    pairs = links.split_query(_query(request))
+    pairs = links.split_query(query_of(request))
     wait = links.take(pairs, "wait", links.WAIT)
     place = links.place_from_pairs(pairs)
     desk: PointDesk = request.app.state.points
@@ -133,13 +120,12 @@ async def _page(place: Place, store: Store) -> PointPage:
             other = await to(place.other(member=value))
             members.append(Way(f"{name} = {_shown(value)}", other, value == place.member))
     return PointPage(
-        title=place_title(sheet, place.values()),
-        member=member_name(sheet),
-        note=sheet.note,
-        hamiltonian=hamiltonian(sheet),
-        values=values_in_force(sheet, place.values()),
-        query=query,
-        error=None,
+        face=replace(
+            face_of(sheet),
+            title=place_title(sheet, place.values()),
+            values=values_in_force(sheet, place.values()),
+            query=query,
+        ),
         sweep=links.whole(await store.shortened(links.query_of(sheet))).lstrip("/"),
         below=Way(f"{along} = {_shown(below)}", None if below is None else await to(place.moved(below))),
         above=Way(f"{along} = {_shown(above)}", None if above is None else await to(place.moved(above))),
@@ -148,34 +134,21 @@ async def _page(place: Place, store: Store) -> PointPage:
             Way(STATE_WORDS[name], await to(place.other(state=name)), name == place.state)
             for name in STATE.choices
         ],
-        **_shell(query, None),
+        **shell(None, {"query": query}),
     )
 
 
 def _broken_page(error: SoftmodeError) -> PointPage:
-    problem = error.body()["error"]
     nowhere = Way("", None)
     return PointPage(
-        "This point cannot be shown", "", "", "", [], "", problem, "sweep", nowhere, nowhere, [], [],
-        **_shell("", problem),
-    )  # fmt: skip
-
-
-def _shell(query: str, problem: dict[str, Any] | None) -> dict[str, Any]:
-    """Return what every page carries for its script."""
-    named = versions()
-    return {
-        "assets": shelf().digest,
-        "scripts": {name: asset_url(name) for name in FILES},
-        "plotly_mark": plotly_mark(),
-        "versions": named,
-        "boot": {
-            "query": query,
-            "error": problem,
-            "assets": shelf().digest,
-            "solver": named["solver"],
-        },
-    }
+        face=replace(face_of(links.parse("")), title="This point cannot be shown"),
+        sweep=links.whole("").lstrip("/"),
+        below=nowhere,
+        above=nowhere,
+        members=[],
+        states=[],
+        **shell(error, {"query": ""}),
+    )
 
 
 def _shown(value: float | None) -> str:
@@ -183,8 +156,3 @@ def _shown(value: float | None) -> str:
     if value is None:
         return ""
     return number_text(float(f"{value:.6g}")).replace("-", "−")
-
-
-def _rendered(page: PointPage, status: int) -> HTMLResponse:
-    fields = {name: getattr(page, name) for name in page.__dataclass_fields__}
-    return HTMLResponse(environment().get_template("point.html").render(fields), status)
