@@ -31,6 +31,7 @@ from app.security import Guard
 from app.settings import Settings
 from app.sheets import Sheet
 
+FIRST = Key("first", "real", 0.0, "seconds to wait for the first picture", low=0.0, high=5.0)
 PARTIAL = Key("partial", "choice", "0", "whether an unfinished result will do", choices=("0", "1"))
 
 router = APIRouter()
@@ -241,7 +242,12 @@ async def link_of_form(request: Request) -> Response:
 
 @router.post("/api/jobs")
 async def start_job(request: Request) -> Response:
-    """Start the job of a sheet, or join it, and hand out a lease."""
+    """Start the job of a sheet, or join it, and hand out a lease.
+
+    With `first` the answer waits that many seconds for the first points and brings their picture.
+    """
+    pairs = _pairs(request)
+    patience = links.take(pairs, "first", FIRST)
     body = await _body(request)
     if set(body) == {"link"}:
         if not isinstance(body["link"], str):
@@ -255,6 +261,14 @@ async def start_job(request: Request) -> Response:
         raise job.error
     facts = job.snapshot(engine.pool.size)
     facts |= {"lease": lease, "lease_seconds": engine.settings.lease_seconds}
+    if patience:
+        await job.wait_until(lambda one: one.done > 0 or not one.is_active, patience)
+        facts |= job.snapshot(engine.pool.size)
+        if job.done > 0 and job.error is None:
+            facts["picture"] = await _picture(engine, job, sheet)
+            return Response(
+                await asyncio.to_thread(exports.encode, facts), 202, media_type="application/json"
+            )
     return _json(facts, 200 if job.state == "done" else 202)
 
 
@@ -358,13 +372,16 @@ async def job_picture(request: Request, name: str) -> Response:
     sheet = _sheet_for(job, _pairs(request))
     if job.error is not None:
         raise job.error
+    drawn = await _picture(engine, job, sheet)
+    return Response(await asyncio.to_thread(exports.encode, drawn), media_type="application/json")
+
+
+async def _picture(engine: Engine, job: Job, sheet: Sheet) -> dict[str, Any]:
+    """Return the figure of what a job has computed so far."""
     revision = job.revision
     result = await engine.result(job, sheet)
-
-    def drawn() -> bytes:
-        return exports.encode({"revision": revision, "complete": result["complete"]} | picture(sheet, result))
-
-    return Response(await asyncio.to_thread(drawn), media_type="application/json")
+    drawn = await asyncio.to_thread(picture, sheet, result)
+    return {"revision": revision, "complete": result["complete"]} | drawn
 
 
 # -- the server ---------------------------------------------------------------------------------

@@ -12,7 +12,8 @@ from app.sheets import Sheet, critical_coupling
 from solver import CollectiveModel, PointQuestion, predicted_bytes, predicted_seconds
 
 COARSE_STEP = 8
-FIRST_CHUNK_SECONDS = 0.15
+# a chunk this short brings a first curve while the finger is still on the key
+FIRST_CHUNK_SECONDS = 0.03
 CHUNK_SECONDS = 0.2
 MOST_POINTS_IN_CHUNK = 64
 

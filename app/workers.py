@@ -36,6 +36,7 @@ from solver import (
 
 logger = logging.getLogger(__name__)
 
+NICENESS = 5
 THREAD_CAPS = (
     "OMP_NUM_THREADS",
     "OPENBLAS_NUM_THREADS",
@@ -132,8 +133,10 @@ def _serve(pipe: Connection) -> None:
     parent = multiprocessing.parent_process()
     if parent is not None:
         threading.Thread(target=_follow, args=(parent.sentinel,), daemon=True).start()
-    warm = PointQuestion(model=CollectiveModel(spins=4, mode=1.0, splitting=1.0, rotating=0.5, counter=0.5))
-    compute([warm], lambda: False)
+    # the server, and a browser on the same machine, come first: they show what is computed here
+    os.nice(NICENESS)
+    warm = [CollectiveModel(spins, 1.0, 1.0, 0.6, 0.6) for spins in (1, 4, 20)]
+    compute([PointQuestion(model=model) for model in warm], lambda: False)
     with contextlib.suppress(EOFError, OSError):
         pipe.send(SOLVER_DIGEST)
         while True:

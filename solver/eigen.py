@@ -27,7 +27,8 @@ Array = NDArray[np.float64]
 
 _DENSE_BELOW = 40
 _CHAIN_BELOW = 48
-_LONGEST_KRYLOV = 48
+_LONGEST_KRYLOV = 40
+_STEPS_PER_LEVEL = 4
 _MOST_SHIFTS = 5
 _LONGEST_BLOCK = 40
 _LOOSE = 1e-3
@@ -130,7 +131,7 @@ def _krylov(
     factor: Array, size: int, count: int, wanted: int, start: Array | None, accuracy: float
 ) -> tuple[Subspace, bool]:
     """Lanczos on the inverse with full reorthogonalisation, and whether it reached its goal."""
-    longest = min(_LONGEST_KRYLOV, size - 1)
+    longest = min(_LONGEST_KRYLOV + _STEPS_PER_LEVEL * wanted, size - 1)
     basis = np.empty((longest + 1, size))
     vector = _starting_rows(size, 1, None if start is None else start.sum(axis=0)[None])[0]
     basis[0] = vector / np.linalg.norm(vector)

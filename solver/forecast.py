@@ -8,6 +8,8 @@ forecast costs time, never correctness: the search goes on until the bounds hold
 from __future__ import annotations
 
 import math
+from dataclasses import dataclass
+from functools import lru_cache
 
 from solver.blocks import BasisName
 from solver.model import CollectiveModel
@@ -91,18 +93,31 @@ def predicted_cost(model: CollectiveModel, basis: BasisName, levels: int) -> flo
     return sectors * _SECONDS_PER_SECTOR + work * _SECONDS_PER_OPERATION + count + layers
 
 
+@dataclass(frozen=True, slots=True)
+class Forecast:
+    """Cheaper basis of a model, with its seconds on one core and its basis states per sector."""
+
+    basis: BasisName
+    seconds: float
+    dimension: float
+
+
+@lru_cache(maxsize=8192)
+def forecast(model: CollectiveModel, levels: int) -> Forecast:
+    """What the lowest `levels` of a model will need, in the basis expected to take less time."""
+    fock = predicted_cost(model, "fock", levels)
+    chosen: BasisName = "fock"
+    seconds = fock
+    leans_aside = abs(model.coupling_difference) > abs(model.total_coupling)
+    if model.spins > 1 and not leans_aside:
+        shifted = predicted_cost(model, "shifted", levels)
+        if shifted <= fock:
+            chosen, seconds = "shifted", shifted
+    sectors = 2 if model.conserves_parity else 1
+    dimension = (first_cutoff(model, chosen, levels) + 1.0) * (model.spins + 1.0) / sectors
+    return Forecast(chosen, seconds, dimension)
+
+
 def cheaper_basis(model: CollectiveModel, levels: int) -> BasisName:
     """The basis expected to take less time."""
-    if model.spins == 1:
-        return "fock"
-    if abs(model.coupling_difference) > abs(model.total_coupling):
-        return "fock"
-    fock, shifted = (predicted_cost(model, basis, levels) for basis in ("fock", "shifted"))
-    return "fock" if fock < shifted else "shifted"
-
-
-def predicted_dimension(model: CollectiveModel, levels: int) -> float:
-    """Basis states per sector in the cheaper basis."""
-    cutoff = first_cutoff(model, cheaper_basis(model, levels), levels)
-    sectors = 2 if model.conserves_parity else 1
-    return (cutoff + 1.0) * (model.spins + 1.0) / sectors
+    return forecast(model, levels).basis

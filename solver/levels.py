@@ -137,7 +137,7 @@ class _Search:
                 return spectrum if certified else spectrum.as_estimate()
         if spectrum is None:
             raise ConvergenceError("levels", self.count, "fewer levels, or a wider tolerance")
-        return spectrum
+        return spectrum.as_estimate()
 
     def _coarse(self, spectrum: Spectrum) -> bool:
         """Whether the iteration inside the block, rather than the cutoff, limits the bounds."""

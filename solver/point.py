@@ -148,9 +148,11 @@ def _gap(rows: _Rows, *, same_parity: bool) -> tuple[float | None, float | None]
     """Distance from the ground level to the next one (of its own parity), with error."""
     for at in range(1, len(rows.upper)):
         if not same_parity or rows.parity[at] == rows.parity[0]:
-            value = rows.upper[at] - rows.upper[0]
-            error = max(rows.upper[at] - rows.lower[at], rows.upper[0] - rows.lower[0])
-            return max(value, 0.0), error
+            value = max(rows.upper[at] - rows.upper[0], 0.0)
+            most = max(rows.upper[at] - rows.lower[0], rows.upper[0] - rows.lower[at])
+            least = max(rows.lower[at] - rows.upper[0], 0.0)
+            error = max(most - value, value - least)
+            return value, error
     return None, None
 
 

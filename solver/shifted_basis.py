@@ -52,6 +52,8 @@ class LadderCoupling:
             table[1:] -= half * root[:-1] * full[: self.reach - 1, : self.reach]
         self.table: Array = np.ascontiguousarray(table)
         self.overlap: Array = full
+        # norm of the error of the overlaps in units of rounding, as measured against mpmath
+        self.precision = 12.0 + 3.0 * math.sqrt(self.reach)
         self.size = 0.5 * abs(model.splitting) + abs(model.coupling_difference) * math.sqrt(
             (self.reach + 1.0) / model.spins
         )
@@ -195,8 +197,9 @@ class ShiftedBlock:
         steps = 2.0 * np.sum(self.steps * norms[:, 1:] * norms[:, :-1], axis=1)
         if self._has_half:
             steps = steps + self.mirror_step * norms[:, -1] ** 2
-        moved = np.sum(np.abs(diagonal) * psi * psi, axis=(1, 2)) + self.coupling.size * steps
-        roundoff = _EPS * (4.0 * moved + 2.0 * abs(self.shift))
+        moved = 4.0 * np.sum(np.abs(diagonal) * psi * psi, axis=(1, 2))
+        moved += (4.0 + self.coupling.precision) * self.coupling.size * steps
+        roundoff = _EPS * (moved + 2.0 * abs(self.shift))
         return Action(self.flatten(out[:, :, :levels]), outside @ outside.T, roundoff)
 
     def leaks(self) -> Array:

@@ -6,7 +6,7 @@ from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from typing import Literal
 
-from solver.forecast import cheaper_basis, predicted_cost, predicted_dimension
+from solver.forecast import forecast
 from solver.observables import REGISTRY
 from solver.point import PointAnswer, PointQuestion, answer_point
 from solver.spectrum import Start
@@ -149,10 +149,10 @@ def predicted_seconds(question: PointQuestion) -> float:
     model = question.model
     if model.conserves_excitations:
         return 2e-3 + 2e-6 * model.spins * question.levels
-    return predicted_cost(model, cheaper_basis(model, question.levels), question.levels)
+    return forecast(model, question.levels).seconds
 
 
 def predicted_bytes(question: PointQuestion) -> int:
     """Expected peak memory for one point."""
     vectors = 160.0 + question.levels
-    return int(8.0 * vectors * predicted_dimension(question.model, question.levels)) + 20_000_000
+    return int(8.0 * vectors * forecast(question.model, question.levels).dimension) + 20_000_000

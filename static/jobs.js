@@ -3,6 +3,7 @@
 import { ask, askJson, handshake, post, withQuery } from "./net.js";
 
 const PICTURE_PAUSE = 250; // at most four pictures a second
+const FIRST_PATIENCE = 0.4; // seconds
 const WATCHDOG = 40_000; // the server sends a heartbeat every 15 s
 const POLL = 1_000;
 const FIRST_RETRY = 500;
@@ -35,13 +36,20 @@ export class Watch {
     const run = { query, alive: true, failures: 0, revision: -1, drawn: -1, lastPicture: 0 };
     this.run = run;
     try {
-      const facts = await post("api/jobs", { link });
+      // the first points are there before a stream could be: the answer waits for them
+      const { picture, ...facts } = await post(`api/jobs?first=${FIRST_PATIENCE}`, { link });
       if (!run.alive) {
         this.drop(facts.id, facts.lease);
         return;
       }
       Object.assign(run, { id: facts.id, lease: facts.lease, pause: facts.lease_seconds * 333 });
       run.pulse = setInterval(() => this.heartbeat(run), run.pause);
+      if (picture) {
+        run.revision = picture.revision;
+        run.drawn = picture.revision;
+        run.lastPicture = performance.now();
+        await this.calls.picture(picture);
+      }
       this.take(run, facts);
       if (ACTIVE.has(facts.state)) this.listen(run);
     } catch (problem) {

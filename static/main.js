@@ -13,6 +13,7 @@ import { Share } from "./share.js";
 const GLIMPSE_POINTS = 21;
 const GLIMPSE_PATIENCE = 700;
 const ADDRESS_PAUSE = 300;
+const FACE_PATIENCE = 400;
 
 const part = (id) => document.getElementById(id);
 const boot = JSON.parse(part("boot").textContent);
@@ -126,7 +127,7 @@ function compute() {
   if (!plot.figure && !part("stage").querySelector(".waiting")) {
     part("stage").append(Object.assign(document.createElement("p"), { className: "waiting", textContent: "Computing the first points…" }));
   }
-  watch.begin(address(state.query), state.query);
+  return watch.begin(address(state.query), state.query);
 }
 
 function showLink() {
@@ -190,10 +191,13 @@ async function go(answer, before, same = false) {
   state.query = answer.query;
   state.computation = answer.id;
   showLink();
-  // the numbers are asked for first, they take longest
   if (view) {
     if (!same) watch.redraw(answer.query);
-  } else compute();
+  } else {
+    // the first curve comes before the words around it
+    const pause = new Promise((resolve) => setTimeout(resolve, FACE_PATIENCE));
+    await Promise.race([compute(), pause]);
+  }
   try {
     await showFace(answer.query, before);
   } catch (problem) {

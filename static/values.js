@@ -56,11 +56,14 @@ export class Values {
   distance(curve, point, from, to) {
     const { energy, energy_lower } = curve.series;
     if (energy[point][to] === undefined) return { value: "–", bound: "" };
-    const width = Math.max(...[from, to].map((rank) => energy[point][rank] - energy_lower[point][rank]));
-    const apart = Math.max(0, energy[point][to] - energy[point][from]);
+    const [above, below] = [energy[point], energy_lower[point]];
+    const apart = Math.max(0, above[to] - above[from]);
+    const most = Math.max(above[to] - below[from], above[from] - below[to]);
+    const error = Math.max(most - apart, apart - Math.max(0, below[to] - above[from]));
+    const unit = unitOf(this.data.energy_unit);
     // what is not told from zero is given by its bound alone
-    if (apart <= width) return { value: `≤ ${bound(apart + width)}${unitOf(this.data.energy_unit)}`, bound: "" };
-    return { value: `${supported(apart, width)}${unitOf(this.data.energy_unit)}`, bound: `± ${bound(width)}` };
+    if (apart <= error) return { value: `≤ ${bound(most)}${unit}`, bound: "" };
+    return { value: `${supported(apart, error)}${unit}`, bound: `± ${bound(error)}` };
   }
 
   number(curve, point, field, digits, unit = field.unit) {

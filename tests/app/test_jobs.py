@@ -330,3 +330,16 @@ def test_the_first_points_come_before_the_last(server: RunningServer) -> None:
     seen = [facts["done"] for name, facts in events(server, job["id"]) if name == "progress"]
     assert seen
     assert 0 < seen[0] < 301
+
+
+def test_the_first_picture_comes_with_the_job(server: RunningServer) -> None:
+    asked = server.client.post("/api/jobs?first=5", json={"link": "/sweep?spins=7&points=41"})
+    assert asked.status_code == 202
+    facts = asked.json()
+    assert facts["done"] > 0
+    apart = server.client.get(f"/api/jobs/{facts['id']}/picture").json()
+    assert facts["picture"].keys() == apart.keys()
+    assert facts["picture"]["figure"]["data"]
+    refused = server.client.post("/api/jobs?first=soon", json={"link": "/sweep?spins=7&points=41"})
+    assert refused.status_code == 422
+    assert refused.json()["error"]["field"] == "first"

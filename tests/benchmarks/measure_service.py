@@ -1,0 +1,85 @@
+"""Measure a running service, nothing passes or fails: python -m tests.benchmarks.measure_service."""
+
+from __future__ import annotations
+
+import json
+import os
+import statistics
+import tempfile
+import time
+from pathlib import Path
+
+from playwright.sync_api import Page, sync_playwright
+
+from tests.browser.conftest import CHROMIUM, DRAWN, FLAGS
+from tests.running import RunningServer
+
+LARGE = "/sweep?spins=1000&to=1.5&points=201"
+WARM = "/sweep?spins=8&points=11"
+# the page sets aria-busy while it asks, and Plotly adds its svg with the first curve
+WATCH = """
+() => {
+  window.firstCurve = null;
+  const stage = document.querySelector("#stage");
+  const plot = stage.querySelector(".js-plotly-plot");
+  plot.on("plotly_afterplot", () => { window.firstCurve ??= performance.now(); });
+  const box = document.querySelector("#box-spins");
+  window.changed = null;
+  box.addEventListener("change", () => { window.changed = performance.now(); }, { capture: true });
+}
+"""
+
+
+def _first_curve(page: Page, spins: int) -> float:
+    """Milliseconds from the committed change of N to the first drawn curve of the new sweep."""
+    page.evaluate(WATCH)
+    box = page.locator("#box-spins")
+    box.fill(str(spins))
+    box.press("Enter")
+    page.wait_for_function("() => window.firstCurve !== null && window.changed !== null")
+    taken = page.evaluate("() => window.firstCurve - window.changed")
+    page.wait_for_selector(DRAWN, state="attached")
+    page.wait_for_timeout(1500)
+    return float(taken)
+
+
+def _complete(server: RunningServer, link: str) -> tuple[float, int]:
+    """Seconds until the whole sweep is there, and how many progress reports came on the way."""
+    began = time.perf_counter()
+    job = server.client.post("/api/jobs", json={"link": link}).json()
+    reports = 0
+    with server.client.stream("GET", f"/api/jobs/{job['id']}/events") as stream:
+        for line in stream.iter_lines():
+            reports += line.startswith("event: progress")
+            if line.startswith("event: end"):
+                break
+    return time.perf_counter() - began, reports
+
+
+def main() -> None:
+    """Print what a user would wait for, on this machine."""
+    with tempfile.TemporaryDirectory() as place:
+        server = RunningServer(Path(place) / "data", "--workers", "2")
+        try:
+            _complete(server, WARM)
+            sweeps = [_complete(server, f"/sweep?mode={1 + k / 1000}")[0] for k in range(5)]
+            print(f"default sweep, N = 20, 101 points, 6 levels: {statistics.median(sweeps):.2f} s")
+            with sync_playwright() as driver:
+                browser = driver.chromium.launch(executable_path=CHROMIUM, args=FLAGS)
+                page = browser.new_page()
+                page.goto(f"{server.address}/sweep")
+                page.wait_for_selector(DRAWN, state="attached")
+                taken = [_first_curve(page, spins) for spins in (21, 22, 19, 18, 23)]
+                browser.close()
+            print("first curve after a committed change of N, ms:", [round(t) for t in taken])
+            seconds, reports = _complete(server, LARGE)
+            print(
+                f"N = 1000, 201 points to three times critical: {seconds:.1f} s, {reports} progress reports"
+            )
+            print(json.dumps({"processors": os.cpu_count()}))
+        finally:
+            server.stop()
+
+
+if __name__ == "__main__":
+    main()
