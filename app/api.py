@@ -9,7 +9,6 @@ from typing import Any
 from fastapi import APIRouter, FastAPI, Request
 from starlette.exceptions import HTTPException
 from starlette.responses import JSONResponse, Response, StreamingResponse
-from starlette.types import ASGIApp, Receive, Scope, Send
 
 from app import __version__, assets, exports, identity, limits, links, pages, point_pages, streams
 from app.engine import Engine
@@ -22,7 +21,7 @@ from app.errors import (
     SheetError,
     SoftmodeError,
 )
-from app.faults import error_response, on_error
+from app.faults import on_error
 from app.figures import picture
 from app.jobs import Job
 from app.keys import Key
@@ -30,6 +29,7 @@ from app.points import PointDesk
 from app.security import Guard
 from app.settings import Settings
 from app.sheets import Sheet
+from app.short_links import StoredLinks
 
 FIRST = Key("first", "real", 0.0, "seconds to wait for the first picture", low=0.0, high=5.0)
 PARTIAL = Key("partial", "choice", "0", "whether an unfinished result will do", choices=("0", "1"))
@@ -68,37 +68,6 @@ def create_app(settings: Settings) -> FastAPI:
     app.add_middleware(StoredLinks, engine=engine)
     app.add_middleware(Guard, settings=settings)
     return app
-
-
-class StoredLinks:
-    """Puts the long query in the place of the short link that stands for it."""
-
-    def __init__(self, app: ASGIApp, engine: Engine) -> None:
-        self.app = app
-        self.engine = engine
-
-    async def __call__(self, scope: Scope, receive: Receive, send: Send) -> None:
-        """Handle one request."""
-        query = scope.get("query_string", b"").decode("latin-1")
-        if links.STORED_KEY in query:
-            try:
-                scope["query_string"] = (await self._expanded(query)).encode("latin-1")
-            except SoftmodeError as error:
-                await error_response(Request(scope), error)(scope, receive, send)
-                return
-        await self.app(scope, receive, send)
-
-    async def _expanded(self, query: str) -> str:
-        found = links.stored_name(query)
-        if found is None:
-            return query
-        name, rest = found
-        stored = await self.engine.store.link(name)
-        if stored is None:
-            raise NotFoundError(
-                "unknown-link", "this server has made no such short link", links.STORED_KEY, name, None
-            )
-        return f"{stored}&{rest}" if rest else stored
 
 
 # -- helpers ------------------------------------------------------------------------------------

@@ -3,7 +3,8 @@
 import functools
 from typing import Any
 
-from app.keys import GRAMMAR_VERSION, KEYS, SWEPT
+from app.keys import GRAMMAR_VERSION, KEYS, SWEPT, Key
+from app.places import MEMBER, STATE
 from app.plan import CHUNK_SECONDS
 from app.settings import Settings
 from solver import CollectiveModel, PointQuestion, predicted_bytes, predicted_seconds
@@ -51,16 +52,19 @@ def describe(settings: Settings) -> dict[str, Any]:
         "grammar": {
             "version": GRAMMAR_VERSION,
             "swept": list(SWEPT),
-            "keys": [
-                {
-                    "key": key.name,
-                    "kind": key.kind,
-                    "default": key.default,
-                    "allowed": key.allowed,
-                    "meaning": key.meaning,
-                    "shown_only": key.view,
-                }
-                for key in KEYS.values()
-            ],
+            "keys": [_described(key) for key in KEYS.values()],
+            "point_keys": [_described(key) for key in (MEMBER, STATE)],
         },
+    }
+
+
+def _described(key: Key) -> dict[str, Any]:
+    """Return one key of the grammar as data."""
+    return {
+        "key": key.name,
+        "kind": key.kind,
+        "default": key.default,
+        "allowed": key.allowed,
+        "meaning": key.meaning,
+        "shown_only": key.view,
     }

@@ -93,7 +93,8 @@ async def _result(request: Request) -> tuple[Place, dict[str, Any] | None]:
     wait = links.take(pairs, "wait", links.WAIT)
     place = links.place_from_pairs(pairs)
     desk: PointDesk = request.app.state.points
-    return place, await desk.ask(place, wait)
+    client = request.client.host if request.client else ""
+    return place, await desk.ask(place, client, wait)
 
 
 def _accepted() -> Response:

@@ -23,6 +23,8 @@ from app.workers import Outcome, Task
 from solver import PointQuestion, StateName, portrait_seconds, predicted_bytes, predicted_seconds
 
 MOST_REMEMBERED = 16
+# one client's points must not fill the queue that sweeps wait in, too
+MOST_PER_CLIENT = 4
 Asked = tuple[tuple[PointQuestion, ...], StateName]
 
 logger = logging.getLogger(__name__)
@@ -33,6 +35,7 @@ class _Entry:
     """A portrait under way or finished, and how many wait for it."""
 
     task: Task
+    client: str
     outcome: "asyncio.Future[Outcome]"
     waiting: int = 0
     finished_at: str = ""
@@ -79,7 +82,7 @@ class PointDesk:
         self.engine = engine
         self.entries: OrderedDict[Asked, _Entry] = OrderedDict()
 
-    async def ask(self, place: Place, wait: float) -> dict[str, Any] | None:
+    async def ask(self, place: Place, client: str, wait: float) -> dict[str, Any] | None:
         """Return the result of a point, or None when `wait` seconds are not enough.
 
         Raises PriceError, BusyError, or what went wrong with the computation.
@@ -87,7 +90,7 @@ class PointDesk:
         questions = await asyncio.to_thread(chain_of, place)
         check_price(questions, self.engine.settings)
         asked = (questions, place.state)
-        entry = self.entries.get(asked) or self._begin(asked)
+        entry = self.entries.get(asked) or self._begin(asked, client)
         self.entries.move_to_end(asked)
         entry.waiting += 1
         try:
@@ -101,20 +104,24 @@ class PointDesk:
             return None
         return await self._told(place, asked, entry)
 
-    def _begin(self, asked: Asked) -> _Entry:
+    def _begin(self, asked: Asked, client: str) -> _Entry:
         if self.engine.restarting:
             raise BusyError("restarting", "the server is restarting; ask again in a moment", retry_after=3)
-        limit = self.engine.settings.queue_limit
-        active = sum(not entry.outcome.done() for entry in self.entries.values())
-        if active >= limit:
-            raise BusyError(
-                "queue-full",
-                f"{active} points are being computed; ask again later",
-                "queue_limit",
-                active,
-                f"at most {limit} at a time",
-                retry_after=5,
-            )
+        active = [entry.client for entry in self.entries.values() if not entry.outcome.done()]
+        counted = (
+            ("points", len(active), self.engine.settings.queue_limit),
+            ("of your points", active.count(client), MOST_PER_CLIENT),
+        )
+        for whose, number, limit in counted:
+            if number >= limit:
+                raise BusyError(
+                    "queue-full",
+                    f"{number} {whose} are being computed; ask again later",
+                    "queue_limit",
+                    number,
+                    f"at most {limit} at a time",
+                    retry_after=1,
+                )
         loop = asyncio.get_running_loop()
         outcome: asyncio.Future[Outcome] = loop.create_future()
 
@@ -122,7 +129,7 @@ class PointDesk:
             if not loop.is_closed():
                 loop.call_soon_threadsafe(self._landed, entry, found)
 
-        entry = _Entry(Task(asked[0], report, asked[1]), outcome)
+        entry = _Entry(Task(asked[0], report, asked[1]), client, outcome)
         self.entries[asked] = entry
         self.engine.counts["portraits_started"] += 1
         self.engine.pool.submit(entry.task)

@@ -101,7 +101,7 @@ function showPortrait(portrait) {
   const tail = portrait.above_needed === null ? "" : `, weight above the needed cutoff ${tailWords(portrait.above_needed)}`;
   part("told-distribution").textContent = `mean ${plain(portrait.mean, 6)}${tail}`;
   const centre = Math.abs(portrait.parity_of_n) < ROUNDING ? "0" : plain((2 / Math.PI) * portrait.parity_of_n, 4);
-  const zero = `W(0) = ${centre}, 2/π of the mean parity of n`;
+  const zero = `spin traced out; W(0) = ${centre}, 2/π of the mean parity of n`;
   const coarse = "this grid does not resolve everything: a state of broken symmetry can be drawn finer";
   part("told-wigner").textContent = portrait.resolved ? zero : `${zero}; ⚠ ${coarse}`;
   part("states").hidden = !portrait.doublet_closed;
@@ -123,10 +123,15 @@ function failed(problem) {
   part("waiting").hidden = true;
 }
 
+// A point that takes long, or has to wait for others, is asked for again.
 async function fetchPoint() {
   for (;;) {
-    const answer = await ask(withQuery("api/point/picture", boot.query));
-    if (answer.status !== 202) return answer.json();
+    try {
+      const answer = await ask(withQuery("api/point/picture", boot.query));
+      if (answer.status !== 202) return await answer.json();
+    } catch (problem) {
+      if (problem.status !== 503) throw problem;
+    }
     await new Promise((resolve) => setTimeout(resolve, POLL));
   }
 }

@@ -155,6 +155,17 @@ def test_who_cannot_wait_asks_again(server: RunningServer) -> None:
     assert server.client.get(f"{address}&wait=0").status_code == 200
 
 
+def test_one_client_cannot_fill_the_queue(start_server: ServerFactory) -> None:
+    server = start_server("--workers", "1")
+    addresses = [f"/api/point?spins=1500&at=0.6{digit}1&wait=0" for digit in range(8)]
+    answers = [server.client.get(address) for address in addresses]
+    refused = [answer for answer in answers if answer.status_code == 503]
+    assert {answer.status_code for answer in answers} == {202, 503}
+    assert refused[0].json()["error"]["code"] == "queue-full"
+    assert refused[0].headers["Retry-After"] == "1"
+    assert server.client.get("/api/sweep?spins=2&points=3").status_code == 200
+
+
 def test_opening_the_page_computes_nothing(server: RunningServer) -> None:
     before = server.counts()
     page = server.client.get("/point?spins=7&at=0.3&title=%3Cb%3E&note=%3Ci%3E")
