@@ -52,10 +52,6 @@ class Block(Protocol):
         """H - shift on vectors of shape (q, dimension)."""
         ...
 
-    def leak_band(self) -> Array:
-        """Banded matrix W >= V V^dag, V = P H Q, in the storage of `band`."""
-        ...
-
     def layer_weights(self, vectors: Array) -> Array:
         """Weight of each vector in each layer n of the block's own ladder, shape (q, cutoff+1)."""
         ...

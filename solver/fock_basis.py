@@ -143,22 +143,6 @@ class FockBlock:
         out: Array = _EPS * (4.0 * moved + 2.0 * abs(self.shift))
         return out
 
-    def leak_band(self) -> Array:
-        """V V^dag exactly: it lives on the last layer, pentadiagonal in j."""
-        model, steps = self.model, self.steps
-        store = np.zeros((self.dimension, self.half_width + 1))
-        at = np.arange(self._layer_start()[self.cutoff], self.dimension)
-        j = self.raised[at]
-        scale = (self.cutoff + 1.0) / model.spins
-        before = np.concatenate(([0.0], steps))[j]
-        after = np.concatenate((steps, [0.0]))[j]
-        store[at, 0] = scale * ((model.rotating * before) ** 2 + (model.counter * after) ** 2)
-        apart = 2 if self.parity == 0 else 1
-        first = at[j + 2 <= model.spins]
-        low = self.raised[first]
-        store[first, apart] = scale * model.rotating * model.counter * steps[low] * steps[low + 1]
-        return store.T
-
     def layer_weights(self, vectors: Array) -> Array:
         """Weight in each layer n, shape (q, cutoff+1)."""
         out: Array = np.add.reduceat(vectors * vectors, self._layer_start()[:-1], axis=1)

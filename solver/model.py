@@ -69,11 +69,6 @@ class CollectiveModel:
         return self.rotating - self.counter
 
     @property
-    def is_isotropic(self) -> bool:
-        """Rotating and counter-rotating part equally strong (Dicke, Rabi)."""
-        return self.rotating == self.counter
-
-    @property
     def is_uncoupled(self) -> bool:
         """No coupling at all: spins and mode do not see each other."""
         return self.rotating == 0.0 and self.counter == 0.0

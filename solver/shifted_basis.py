@@ -217,20 +217,6 @@ class ShiftedBlock:
         out: Array = 2.0 * (to_lower[:, None, None] * down + to_upper[:, None, None] * up)
         return out
 
-    def leak_band(self) -> Array:
-        """The same W in the storage of `band`."""
-        levels, count, leaks = self.cutoff + 1, self.m.size, self.leaks()
-        store = np.zeros((count, levels, 2 * levels))
-        for n in range(levels):
-            store[:, n, : levels - n] = leaks[:, n, n:]
-        if self.has_centre:
-            kept = self.centre_kept
-            block = leaks[-1][np.ix_(kept, kept)]
-            store[-1] = 0.0
-            for n in range(kept.size):
-                store[-1, n, : kept.size - n] = block[n, n:]
-        return store.reshape(count * levels, -1)[: self.dimension].T
-
     def layer_weights(self, vectors: Array) -> Array:
         """Weight in each displaced layer n, shape (q, cutoff+1)."""
         psi = self.ladders(vectors)

@@ -63,7 +63,6 @@ def test_derived_quantities():
     assert not model.conserves_excitations
     assert CollectiveModel(1, 1.0, 1.0, 0.0, 0.4).conserves_excitations
     assert CollectiveModel(1, 1.0, 1.0, 0.0, 0.0).is_uncoupled
-    assert CollectiveModel(1, 1.0, 1.0, 0.2, 0.2).is_isotropic
 
 
 def test_critical_coupling_ignores_the_sign_of_the_splitting():
