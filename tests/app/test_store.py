@@ -12,6 +12,7 @@ import tempfile
 import time
 import zlib
 from collections.abc import Callable, Coroutine, Iterator
+from concurrent.futures import ThreadPoolExecutor
 from pathlib import Path
 from typing import Any, TypeVar
 
@@ -37,8 +38,9 @@ def opened() -> Iterator[Callable[[Path, int], Store]]:
 
 
 def run(work: Coroutine[Any, Any, T]) -> T:
-    with asyncio.Runner() as runner:
-        return runner.run(work)
+    # in a thread of its own: browser tests of the same process keep a loop in the main one
+    with ThreadPoolExecutor(1) as thread:
+        return thread.submit(asyncio.run, work).result()
 
 
 def chunk(first: int, size: int = 3, filling: str = "") -> StoredChunk:
