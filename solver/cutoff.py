@@ -19,14 +19,6 @@ from solver.layers import LayerProfile
 Array = NDArray[np.float64]
 
 
-def truncation_errors(profile: LayerProfile, energies: Array, cutoff: int) -> Array:
-    """Upper bounds on the error of each of q levels in a calculation with n <= cutoff.
-
-    energies (q,): the converged levels. Infinite where the cut leaves fewer than q states.
-    """
-    return _CutStates(profile, energies).errors(cutoff)
-
-
 class _CutStates:
     """The states of a profile, cut at any layer: weights kept, and the levels they span."""
 
@@ -37,6 +29,10 @@ class _CutStates:
         self.excess = energies - energies[0]
 
     def errors(self, cutoff: int) -> Array:
+        """Upper bounds on the error of each level in a calculation with n <= cutoff, shape (q,).
+
+        Infinite where the cut leaves fewer than q states.
+        """
         at = cutoff - self.profile.first
         if at + 1 >= len(self.kept):
             return np.zeros_like(self.excess)

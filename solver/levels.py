@@ -99,7 +99,7 @@ class _Search:
         self.guards = _GUARDS
         self.most = count + _EXTRA_LEVELS
         self.blockwise = False
-        # the count is refused for good where the leak of a large spin outweighs every cutoff
+        # a larger cutoff for the sake of the count alone pays for few spins only
         self.refused = 0
         self.patience = 4 if model.spins <= _PATIENT_UP_TO else 0
         # residual^2 / gap is the energy error: this aims well below the tolerance
@@ -217,13 +217,21 @@ class _Search:
         reach = self._reach(sets)
         lower, upper = usable[reach - 1 : -1], usable[reach:]
         at = int(np.argmax(upper - lower))
-        roundoff = max(float(found.roundoff.max()) for found in sets.values())
-        if upper[at] - lower[at] < _CLEAR * roundoff and max(self.counts.values()) < self.most:
+        line = float(lower[at] + 0.6 * (upper[at] - lower[at]))
+        if self._clearance(sets, line) < _CLEAR and max(self.counts.values()) < self.most:
             return None
-        return float(lower[at] + 0.6 * (upper[at] - lower[at]))
+        return line
+
+    def _clearance(self, sets: dict[int, RitzSet], line: float) -> float:
+        """Distance from the line to the nearest level, in roundings."""
+        roundoff = max(float(found.roundoff.max()) for found in sets.values())
+        return min(float(np.abs(found.energies - line).min()) for found in sets.values()) / roundoff
 
     def _certified(self, sets: dict[int, RitzSet], line: float) -> bool | None:
         """Whether the count below `line` is proven; None when the search must go on."""
+        if self._clearance(sets, line) < _CLEAR:
+            # no wider gap was found: a count so close to a level proves nothing
+            return False
         block = next(iter(sets.values())).block
         shared = block.coupling if isinstance(block, ShiftedBlock) else None
         expected = [int(np.sum(found.energies < line)) for found in sets.values()]
