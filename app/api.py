@@ -1,31 +1,43 @@
 """The JSON routes, and the factory that puts the application together."""
 
 import asyncio
-import json
 from collections.abc import AsyncIterator
 from contextlib import asynccontextmanager
 from typing import Any
 
 from fastapi import APIRouter, FastAPI, Request
 from starlette.exceptions import HTTPException
-from starlette.responses import JSONResponse, Response, StreamingResponse
+from starlette.responses import Response, StreamingResponse
 
-from app import __version__, assets, exports, identity, limits, links, pages, point_pages, streams
-from app.engine import Engine
-from app.errors import (
-    BusyError,
-    ConflictError,
-    JobFailedError,
-    NotFoundError,
-    RequestError,
-    SheetError,
-    SoftmodeError,
+from app import (
+    __version__,
+    assets,
+    cutoff_pages,
+    exports,
+    figure_cutoff,
+    identity,
+    limits,
+    links,
+    pages,
+    point_pages,
+    streams,
 )
+from app.cutoff_sheets import CutoffSheet, Question
+from app.engine import Engine
+from app.errors import ConflictError, JobFailedError, NotFoundError, SheetError, SoftmodeError
 from app.faults import on_error
 from app.figures import picture
 from app.jobs import Job
 from app.keys import Key
 from app.points import PointDesk
+from app.replies import accepted as _accepted
+from app.replies import body_of as _body
+from app.replies import client_of as _client
+from app.replies import engine_of as _engine
+from app.replies import finished, table_reply
+from app.replies import json_reply as _json
+from app.replies import pairs_of as _pairs
+from app.replies import raise_if_over as _raise_if_over
 from app.security import Guard
 from app.settings import Settings
 from app.sheets import Sheet
@@ -63,106 +75,12 @@ def create_app(settings: Settings) -> FastAPI:
     app.include_router(router)
     app.include_router(pages.router)
     app.include_router(point_pages.router)
+    app.include_router(cutoff_pages.router)
     app.add_exception_handler(SoftmodeError, on_error)
     app.add_exception_handler(HTTPException, on_error)
     app.add_middleware(StoredLinks, engine=engine)
     app.add_middleware(Guard, settings=settings)
     return app
-
-
-# -- helpers ------------------------------------------------------------------------------------
-
-
-def _engine(request: Request) -> Engine:
-    engine: Engine = request.app.state.engine
-    return engine
-
-
-def _client(request: Request) -> str:
-    return request.client.host if request.client else ""
-
-
-def _pairs(request: Request) -> dict[str, str]:
-    return links.split_query(request.scope["query_string"].decode("latin-1"))
-
-
-async def _body(request: Request) -> dict[str, Any]:
-    """Return the JSON object in a request's body; raise RequestError or SheetError."""
-    kind = request.headers.get("content-type", "").partition(";")[0].strip().lower()
-    if kind != "application/json":
-        raise RequestError(
-            "not-json",
-            "send the body as application/json",
-            "Content-Type",
-            kind,
-            "application/json",
-            status=415,
-        )
-    raw = await request.body()
-
-    def once(pairs: list[tuple[str, Any]]) -> dict[str, Any]:
-        data = dict(pairs)
-        if len(data) != len(pairs):
-            names = [name for name, _ in pairs]
-            name = next(one for one in names if names.count(one) > 1)
-            raise SheetError(
-                "repeated-key", f"'{name[:60]}' is given twice; keep one", name, None, "given once"
-            )
-        return data
-
-    def constant(name: str) -> None:
-        raise SheetError(
-            "not-finite", f"{name} is not a number that can be used", "body", name, "finite numbers"
-        )
-
-    try:
-        data = json.loads(raw, object_pairs_hook=once, parse_constant=constant)
-    except (ValueError, RecursionError) as error:
-        raise RequestError(
-            "bad-json", f"the body is not JSON: {error}", "body", None, "a JSON object"
-        ) from None
-    if not isinstance(data, dict):
-        raise RequestError(
-            "bad-json", "the body must be a JSON object", "body", data, "a JSON object", status=422
-        )
-    return data
-
-
-def _json(data: Any, status: int = 200) -> Response:
-    return Response(exports.encode(data), status, media_type="application/json")
-
-
-def _raise_if_over(job: Job) -> None:
-    """Raise the error of a job that ended without a result."""
-    if job.error is not None:
-        raise job.error
-    if job.state == "cancelled":
-        raise ConflictError(
-            "cancelled", "the job was stopped; ask for the sheet again to go on", "id", job.id, None
-        )
-    if job.state == "restarting":
-        raise BusyError("restarting", "the server is restarting; ask again in a moment", retry_after=3)
-
-
-async def _finished(request: Request, pairs: dict[str, str]) -> tuple[Sheet, dict[str, Any] | None, Job]:
-    """Return the sheet of a query and its result, or None in its place when `wait` seconds are not enough."""
-    wait = links.take(pairs, "wait", links.WAIT)
-    sheet = links.from_pairs(pairs)
-    engine = _engine(request)
-    job, _ = await engine.submit(sheet, _client(request), by_polling=True, extra_seconds=wait)
-    await job.wait_until(lambda one: not one.is_active, wait)
-    if job.is_active:
-        job.renew_scripts(engine.lease_length)
-        return sheet, None, job
-    _raise_if_over(job)
-    return sheet, await engine.result(job, sheet), job
-
-
-def _accepted(request: Request, job: Job) -> Response:
-    facts = job.snapshot(_engine(request).pool.size)
-    answer = JSONResponse({"job": f"api/jobs/{job.id}"} | facts, 202)
-    answer.headers["Retry-After"] = "1"
-    return answer
 
 
 # -- sweeps -------------------------------------------------------------------------------------
@@ -171,7 +89,7 @@ def _accepted(request: Request, job: Job) -> Response:
 @router.get("/api/sweep")
 async def sweep_json(request: Request) -> Response:
     """Return the result of a sweep, or 202 and the job's address when it takes longer than `wait`."""
-    _, result, job = await _finished(request, _pairs(request))
+    result, job = await _sweep(request)
     if result is None:
         return _accepted(request, job)
     return Response(await asyncio.to_thread(exports.encode, result), media_type="application/json")
@@ -180,12 +98,17 @@ async def sweep_json(request: Request) -> Response:
 @router.get("/api/sweep.csv")
 async def sweep_csv(request: Request) -> Response:
     """Return the result of a sweep as a table."""
-    _, result, job = await _finished(request, _pairs(request))
+    result, job = await _sweep(request)
     if result is None:
         return _accepted(request, job)
-    answer = Response(await asyncio.to_thread(exports.csv_of, result), media_type="text/csv")
-    answer.headers["Content-Disposition"] = f'attachment; filename="softmode-{job.id[:12]}.csv"'
-    return answer
+    return table_reply(await asyncio.to_thread(exports.csv_of, result), f"softmode-{job.id[:12]}.csv")
+
+
+async def _sweep(request: Request) -> tuple[dict[str, Any] | None, Job]:
+    """Return the result of the sweep that a query asks, None when it is not there in time, and its job."""
+    pairs = _pairs(request)
+    wait = links.take(pairs, "wait", links.WAIT)
+    return await finished(request, links.from_pairs(pairs), wait)
 
 
 @router.get("/api/sweep.py")
@@ -221,7 +144,7 @@ async def start_job(request: Request) -> Response:
     if set(body) == {"link"}:
         if not isinstance(body["link"], str):
             raise SheetError("wrong-type", "'link' must be text", "link", body["link"], "a link")
-        sheet = links.parse_link(await _whole_link(request, body["link"]))
+        sheet: Question = links.parse_link(await _whole_link(request, body["link"]))
     else:
         sheet = Sheet.model_validate(body)
     engine = _engine(request)
@@ -304,11 +227,12 @@ async def job_events(request: Request, name: str) -> Response:
     return answer
 
 
-def _sheet_for(job: Job, pairs: dict[str, str]) -> Sheet:
-    """Return the sheet of a query that must ask what the job computes; the job's own for an empty query."""
+def _sheet_for(job: Job, pairs: dict[str, str]) -> Question:
+    """Return the question of a query, which must be the job's; the job's own for an empty query."""
     if not pairs:
         return job.sheet
-    sheet = links.from_pairs(pairs)
+    read = links.cutoff_from_pairs if isinstance(job.sheet, CutoffSheet) else links.from_pairs
+    sheet: Question = read(pairs)
     if identity.sheet_id(sheet) != job.id:
         raise ConflictError(
             "another-question", "the link asks something else than this job computes", "id", job.id
@@ -345,11 +269,14 @@ async def job_picture(request: Request, name: str) -> Response:
     return Response(await asyncio.to_thread(exports.encode, drawn), media_type="application/json")
 
 
-async def _picture(engine: Engine, job: Job, sheet: Sheet) -> dict[str, Any]:
+async def _picture(engine: Engine, job: Job, sheet: Question) -> dict[str, Any]:
     """Return the figure of what a job has computed so far."""
     revision = job.revision
     result = await engine.result(job, sheet)
-    drawn = await asyncio.to_thread(picture, sheet, result)
+    if isinstance(sheet, CutoffSheet):
+        drawn = await asyncio.to_thread(figure_cutoff.picture, sheet, result)
+    else:
+        drawn = await asyncio.to_thread(picture, sheet, result)
     return {"revision": revision, "complete": result["complete"]} | drawn
 
 

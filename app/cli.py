@@ -6,10 +6,10 @@ import sys
 from collections.abc import Sequence
 from pathlib import Path
 
-from app import __version__, exports, limits, links
+from app import __version__, exports, kinds, limits, links
 from app.errors import SoftmodeError
 from app.offline import compute_sheet
-from app.plan import check_price, make
+from app.plan import check_price
 from app.settings import MEBIBYTE, Settings, processors
 
 FAILED = 1
@@ -136,15 +136,14 @@ def _compute(link: str, out: Path, workers: int) -> int:
         print(f"softmode: there is no directory {out.parent}", file=sys.stderr)
         return MISUSED
     sheet = links.parse_link(link)
-    check_price(make(sheet), float("inf"), Settings().memory_ceiling)
+    check_price(kinds.plan_of(sheet), float("inf"), Settings().memory_ceiling)
     result = compute_sheet(sheet, workers, _show_progress)
     sys.stderr.write("\n")
     if out.suffix == ".json":
         out.write_bytes(exports.encode(result))
     else:
-        out.write_text(exports.csv_of(result), encoding="utf-8", newline="")
-    points = len(result["axis"]["values"]) * len(exports.curves_of(result))
-    print(f"{out}: {points} points, {result['provenance']['seconds']:.2f} s of processor time")
+        out.write_text(kinds.csv_of(result), encoding="utf-8", newline="")
+    print(f"{out}: {sheet.total} points, {result['provenance']['seconds']:.2f} s of processor time")
     return 0
 
 

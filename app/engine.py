@@ -12,13 +12,12 @@ import time
 from collections import Counter, OrderedDict
 from typing import Any
 
-from app import identity, plan
+from app import identity, kinds, plan
+from app.cutoff_sheets import Question
 from app.errors import BusyError, JobFailedError, NotFoundError, PriceError, SheetError, SoftmodeError
-from app.exports import result_of
 from app.jobs import Job
 from app.plan import Chunk
 from app.settings import Settings
-from app.sheets import Sheet
 from app.store import Store, StoredChunk
 from app.workers import Outcome, ProcessPool, Task
 
@@ -77,7 +76,7 @@ class Engine:
         return self.settings.lease_seconds + self.settings.grace_seconds
 
     async def submit(
-        self, sheet: Sheet, client: str, *, by_polling: bool = False, extra_seconds: float = 0.0
+        self, sheet: Question, client: str, *, by_polling: bool = False, extra_seconds: float = 0.0
     ) -> tuple[Job, str]:
         """Return the job of a sheet, started if need be, and the name of a lease on it.
 
@@ -97,7 +96,7 @@ class Engine:
             raise job.error
         return job, lease
 
-    def _begin(self, name: str, sheet: Sheet, client: str, old: Job | None) -> Job:
+    def _begin(self, name: str, sheet: Question, client: str, old: Job | None) -> Job:
         """Enter a job, or take up a cancelled one again."""
         if self.restarting:
             raise BusyError(
@@ -159,7 +158,7 @@ class Engine:
         self._abandon(job)
         job.changed()
 
-    async def result(self, job: Job, sheet: Sheet) -> dict[str, Any]:
+    async def result(self, job: Job, sheet: Question) -> dict[str, Any]:
         """Return the result of a job as it is now, for a sheet with the same computation."""
         if job.plan is None:
             raise BusyError(
@@ -167,7 +166,7 @@ class Engine:
             )
         provenance = identity.versions() | {"computed_at": job.finished_at, "seconds": round(job.seconds, 4)}
         return await asyncio.to_thread(
-            result_of, sheet, job.plan, list(job.rows), name=job.id, provenance=provenance
+            kinds.result_of, sheet, job.plan, list(job.rows), name=job.id, provenance=provenance
         )
 
     def facts(self) -> dict[str, Any]:
@@ -194,7 +193,7 @@ class Engine:
         """Plan a job, take what the store has, queue the rest."""
         try:
             if job.plan is None:
-                made = await asyncio.to_thread(plan.make, job.sheet)
+                made = await asyncio.to_thread(kinds.plan_of, job.sheet)
                 plan.check_price(made, self.settings.price_ceiling, self.settings.memory_ceiling)
                 found = await self.store.load(job.id)
                 job.rows = [None] * len(made.questions)
@@ -253,7 +252,7 @@ class Engine:
             with contextlib.suppress(RuntimeError):  # the loop has ended: so has the server
                 loop.call_soon_threadsafe(self._landed, job, chunk, outcome)
 
-        task = Task(job.plan.chunk_questions(chunk), report)
+        task = Task(job.plan.chunk_questions(chunk), report, job.plan.work)
         job.active[chunk.number] = task
         job.state = "running"
         self._busy += 1

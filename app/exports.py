@@ -130,7 +130,7 @@ def csv_of(result: Mapping[str, Any]) -> str:
     sheet = result["sheet"]
     columns = _csv_columns(result)
     out = io.StringIO()
-    out.write(f"# {_one_line(sheet['title']) or 'softmode sweep'}\r\n")
+    out.write(f"# {one_line(sheet['title']) or 'softmode sweep'}\r\n")
     out.write(f"# link {result['link']}\r\n# id {result['id']}\r\n")
     made = result["provenance"]
     out.write("# " + ", ".join(f"{key} {value}" for key, value in made.items()) + "\r\n")
@@ -139,9 +139,9 @@ def csv_of(result: Mapping[str, Any]) -> str:
     for curve in curves_of(result):
         flat = _flat(curve)
         for point, x in enumerate(curve["axis"]["values"]):
-            first = [] if curve["name"] is None else [_cell(curve["value"])]
+            first = [] if curve["name"] is None else [cell_text(curve["value"])]
             start = len(first) + 1
-            writer.writerow([*first, _cell(x), *(_cell(flat[key][point]) for key in columns[start:])])
+            writer.writerow([*first, cell_text(x), *(cell_text(flat[key][point]) for key in columns[start:])])
     return out.getvalue()
 
 
@@ -174,7 +174,8 @@ def _flat(curve: Mapping[str, Any]) -> dict[str, list[Any]]:
     return flat
 
 
-def _cell(value: Any) -> str:
+def cell_text(value: Any) -> str:
+    """Return a value as it stands in a table; empty for None, numbers without loss."""
     if value is None:
         return ""
     if isinstance(value, bool):
@@ -182,7 +183,8 @@ def _cell(value: Any) -> str:
     return repr(value) if isinstance(value, float) else str(value)
 
 
-def _one_line(text: str) -> str:
+def one_line(text: str) -> str:
+    """Return a text with its line breaks turned into spaces."""
     return " ".join(text.split())
 
 
@@ -238,7 +240,7 @@ def python_of(sheet: Sheet, base: str) -> str:
     """Return a script that fetches this sweep from the server at `base`, or computes it on its own."""
     query = links.query_of(sheet)
     return _SNIPPET.format(
-        title=_one_line(sheet.title).replace("\\", "\\\\").replace('"', "'") or "A sweep of Softmode",
+        title=one_line(sheet.title).replace("\\", "\\\\").replace('"', "'") or "A sweep of Softmode",
         link=links.link_of(sheet),
         address=f"{base}/api/sweep?{query}" if query else f"{base}/api/sweep",
         models=_models_code(sheet),

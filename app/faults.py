@@ -15,7 +15,7 @@ from app.keys import nearest_name
 logger = logging.getLogger(__name__)
 
 STYLESHEET = "softmode.css"
-PAGES = ("sweep", "point")
+PAGES = ("sweep", "point", "cutoff")
 
 _PAGE = """<!doctype html>
 <html lang="en">
@@ -104,7 +104,11 @@ def _translated(request: Request, error: HTTPException) -> SoftmodeError:
     if error.status_code == 404:
         hint = nearest_name(path.strip("/"), PAGES)
         return NotFoundError(
-            "no-such-page", f"there is nothing at {path[:100]}{hint}", "path", path, "/sweep, /point, /api/…"
+            "no-such-page",
+            f"there is nothing at {path[:100]}{hint}",
+            "path",
+            path,
+            "/sweep, /point, /cutoff, /api/…",
         )
     if error.status_code == 405:
         allowed = (error.headers or {}).get("Allow")

@@ -45,14 +45,30 @@ def sweep_figure(sheet: Sheet, result: Mapping[str, Any]) -> dict[str, Any]:
         build(sheet, curves, "y" if number == 0 else f"y{number + 1}")
         for number, build in enumerate(BUILDERS)
     ]
+    family = [curve.stroke.key(curve.label) for curve in curves if curve.stroke is not None]
+    return stacked(sheet, panels, family, _critical(sheet, curves))
+
+
+def stacked(
+    sheet: Sheet,
+    panels: Sequence[Panel],
+    family: list[dict[str, Any]],
+    critical: list[dict[str, Any]],
+) -> dict[str, Any]:
+    """Return panels over the axis of a sheet as one figure, with the key of a family and critical places."""
     return {
         "data": [trace for panel in panels for trace in panel.traces],
-        "layout": _layout(sheet, panels, curves),
+        "layout": _layout(sheet, panels, family, critical),
         "config": dict(style.QUIET),
     }
 
 
-def _layout(sheet: Sheet, panels: Sequence[Panel], curves: Sequence[Curve]) -> dict[str, Any]:
+def _layout(
+    sheet: Sheet,
+    panels: Sequence[Panel],
+    family: list[dict[str, Any]],
+    critical: list[dict[str, Any]],
+) -> dict[str, Any]:
     height = sum(panel.height for panel in panels) + HEAD * (len(panels) - 1)
     domains = _domains(panels, height)
     limits = sheet.zoom if sheet.zoom is not None else (sheet.start, sheet.stop)
@@ -73,8 +89,8 @@ def _layout(sheet: Sheet, panels: Sequence[Panel], curves: Sequence[Curve]) -> d
                 {"name": panel.name, "title": panel.title, "domain": domain, "key": panel.key}
                 for panel, domain in zip(panels, domains, strict=True)
             ],
-            "family": [curve.stroke.key(curve.label) for curve in curves if curve.stroke is not None],
-            "critical": _critical(sheet, curves),
+            "family": family,
+            "critical": critical,
         },
     }
     shown = (sheet.energies, sheet.bosons, sheet.along, sheet.each.name if sheet.each else "")

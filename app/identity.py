@@ -7,8 +7,8 @@ import numpy as np
 import scipy
 
 from app import __version__
+from app.cutoff_sheets import Question
 from app.keys import canonical_json
-from app.sheets import Sheet
 from solver import SOLVER_DIGEST
 
 
@@ -23,7 +23,7 @@ def versions() -> dict[str, str]:
     }
 
 
-def sheet_id(sheet: Sheet) -> str:
+def sheet_id(sheet: Question) -> str:
     """Return the content hash of a computation: 64 hex digits, equal for equal numbers."""
     named = versions()
     parts = [sheet.computation_key(), named["solver"], named["numpy"], named["scipy"]]

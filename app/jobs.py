@@ -8,9 +8,9 @@ from collections.abc import Callable
 from dataclasses import dataclass, field
 from typing import Any
 
+from app.cutoff_sheets import Question
 from app.errors import SoftmodeError
 from app.plan import Chunk, Plan
-from app.sheets import Sheet
 from app.store import StoredChunk
 from app.workers import Task
 
@@ -37,7 +37,7 @@ class Job:
     """
 
     id: str
-    sheet: Sheet
+    sheet: Question
     client: str
     state: str = "queued"
     plan: Plan | None = None
@@ -70,7 +70,7 @@ class Job:
     @property
     def total(self) -> int:
         """Number of points of the sheet, known before the plan is."""
-        return self.sheet.points * (len(self.sheet.each.values) if self.sheet.each else 1)
+        return self.sheet.total
 
     def changed(self) -> None:
         """Wake up everybody who watches this job."""

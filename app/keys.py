@@ -26,9 +26,9 @@ _CONTROL = re.compile(r"[\x00-\x08\x0b-\x1f\x7f\ud800-\udfff]")
 class Key:
     """One key of the grammar.
 
-    `kind` is "integer", "real", "choice", "text", "family" or "interval"; `low` and `high` bound numbers
-    (inclusive) and, as `high`, the number of characters of a text. View keys change what is shown, never
-    what is computed.
+    `kind` is "integer", "real", "choice", "names" (one or more of the choices), "text", "family" or
+    "interval"; `low` and `high` bound numbers (inclusive) and, as `high`, the number of characters of a
+    text. View keys change what is shown, never what is computed.
     """
 
     name: str
@@ -45,6 +45,8 @@ class Key:
         """Say in words which values are allowed."""
         if self.kind == "choice":
             return ", ".join(self.choices)
+        if self.kind == "names":
+            return f"one or more of {', '.join(self.choices)}, with commas between"
         if self.kind == "text":
             return f"at most {int(self.high)} characters"
         if self.kind == "family":
@@ -68,6 +70,8 @@ class Key:
             return self.checked(self._number(text))
         if self.kind == "interval":
             return self.checked([self._number(part) for part in text.split(":")])
+        if self.kind == "names":
+            return self.checked(text.split(","))
         if self.kind == "family":
             name, colon, rest = text.partition(":")
             if not colon:
@@ -89,6 +93,8 @@ class Key:
             return ":".join(number_text(item) for item in value)
         if self.kind in {"integer", "real"}:
             return number_text(value)
+        if self.kind == "names":
+            return ",".join(value)
         return str(value)
 
     def checked(self, value: Any) -> Any:
@@ -99,6 +105,8 @@ class Key:
             return self._checked_family(value)
         if self.kind == "interval":
             return self._checked_interval(value)
+        if self.kind == "names":
+            return self._checked_names(value)
         if not isinstance(value, str):
             raise self.error("wrong-type", f"'{self.name}' must be text", value)
         if self.kind == "choice" and value not in self.choices:
@@ -107,6 +115,18 @@ class Key:
         if self.kind == "text":
             self._check_text(value)
         return value
+
+    def _checked_names(self, value: Any) -> list[str]:
+        """Return the names in the order of the choices: the same set is always written the same way."""
+        if not isinstance(value, list | tuple) or not all(isinstance(name, str) for name in value):
+            raise self.error("wrong-type", f"'{self.name}' is a list of names", value)
+        for name in value:
+            if name not in self.choices:
+                nearest = nearest_name(name, self.choices)
+                raise self.error("unknown-choice", f"'{self.name}' cannot name '{name[:60]}'{nearest}", name)
+        if len(set(value)) != len(value):
+            raise self.error("repeated-value", f"'{self.name}' names the same thing twice", value)
+        return [name for name in self.choices if name in value]
 
     def _check_text(self, value: str) -> None:
         if len(value) > self.high:

@@ -10,6 +10,7 @@ from collections.abc import Mapping
 from typing import Any
 from urllib.parse import quote, unquote_to_bytes, urlsplit
 
+from app.cutoff_sheets import CUTOFF_KEYS, CutoffSheet, Question
 from app.errors import RequestError, SheetError
 from app.keys import KEYS, MAP_KEYS, SWEPT, Key, nearest_name, number_text
 from app.places import MEMBER, STATE, Place, place_of
@@ -17,6 +18,7 @@ from app.sheets import Sheet, critical_coupling
 
 PAGE = "/sweep"
 POINT_PAGE = "/point"
+CUTOFF_PAGE = "/cutoff"
 LONGEST_LINK = 1800
 STORED_KEY = "stored"
 STORED_NAME = re.compile(r"[0-9a-f]{32}")
@@ -53,19 +55,27 @@ def parse(query: str) -> Sheet:
 
 def from_pairs(pairs: Mapping[str, str]) -> Sheet:
     """Return the sheet for decoded keys and values of a link; raise SheetError."""
+    return Sheet.model_validate(_read(pairs, KEYS))
+
+
+def cutoff_from_pairs(pairs: Mapping[str, str]) -> CutoffSheet:
+    """Return the question of the cutoff desk for decoded keys and values of a link; raise SheetError."""
+    return CutoffSheet.of(_read(pairs, KEYS | CUTOFF_KEYS))
+
+
+def _read(pairs: Mapping[str, str], known: Mapping[str, Key]) -> dict[str, Any]:
+    """Return the values of known keys; unknown ones keep their text, for the error that names them."""
     values: dict[str, Any] = {}
     for name, text in pairs.items():
         if name == "v":
             values[name] = int(text) if re.fullmatch(r"[0-9]{1,4}", text) else text
-        elif name in KEYS:
-            values[name] = KEYS[name].read(text)
         else:
-            values[name] = text
-    return Sheet.model_validate(values)
+            values[name] = known[name].read(text) if name in known else text
+    return values
 
 
-def parse_link(link: str) -> Sheet:
-    """Return the sheet of a whole link, with or without host and path; raise SheetError."""
+def parse_link(link: str) -> Question:
+    """Return what a whole link asks, with or without host; raise SheetError."""
     text = link.strip().partition("#")[0]
     address, mark, query = text.partition("?")
     if not mark and "=" in address:
@@ -74,8 +84,14 @@ def parse_link(link: str) -> Sheet:
         page = urlsplit(address).path.rpartition("/")[2]
     except ValueError:
         page = address
-    if page not in {"", "sweep"}:
-        raise SheetError("unknown-page", "this is not a link to a sweep", "link", link, "/sweep?…")
+    if page not in {"", "sweep", "cutoff"}:
+        raise SheetError(
+            "unknown-page",
+            "this is not a link to a sweep or to a cutoff question",
+            "link",
+            link,
+            "/sweep?…, /cutoff?…",
+        )
     if query.startswith(f"{STORED_KEY}="):
         raise SheetError(
             "stored-link",
@@ -85,19 +101,32 @@ def parse_link(link: str) -> Sheet:
             link,
             "the whole link",
         )
-    return parse(query)
+    return cutoff_from_pairs(split_query(query)) if page == "cutoff" else parse(query)
 
 
 def query_of(sheet: Sheet) -> str:
     """Return the canonical query string of a sheet; empty when everything is at its default."""
-    return "&".join(
-        f"{name}={quote(KEYS[name].write(value), safe=_SAFE)}" for name, value in sheet.explicit().items()
-    )
+    return _written(sheet.explicit(), KEYS)
+
+
+def cutoff_query(question: CutoffSheet) -> str:
+    """Return the canonical query string of a cutoff question: that of its sheet, then the desk's own keys."""
+    parts = (query_of(question.sheet), _written(question.explicit_own(), CUTOFF_KEYS))
+    return "&".join(part for part in parts if part)
+
+
+def _written(values: Mapping[str, Any], known: Mapping[str, Key]) -> str:
+    return "&".join(f"{name}={quote(known[name].write(value), safe=_SAFE)}" for name, value in values.items())
 
 
 def link_of(sheet: Sheet) -> str:
     """Return the canonical link of a sheet, however long."""
     return whole(query_of(sheet))
+
+
+def cutoff_link(question: CutoffSheet) -> str:
+    """Return the canonical link of a cutoff question, however long."""
+    return whole(cutoff_query(question), CUTOFF_PAGE)
 
 
 def whole(query: str, page: str = PAGE) -> str:
@@ -114,13 +143,8 @@ def place_from_pairs(pairs: Mapping[str, str]) -> Place:
 
 def place_query(place: Place) -> str:
     """Return the canonical query string of a point: that of its sheet with `at`, then its own options."""
-    options = place.options()
-    own = [
-        f"{key.name}={quote(key.write(options[key.name]), safe=_SAFE)}"
-        for key in (MEMBER, STATE)
-        if key.name in options
-    ]
-    return "&".join([query_of(place.sheet), *own])
+    own = _written(place.options(), {key.name: key for key in (MEMBER, STATE)})
+    return "&".join(part for part in (query_of(place.sheet), own) if part)
 
 
 def stored_query(query: str) -> str:
@@ -165,14 +189,24 @@ def from_form(fields: Mapping[str, Any]) -> Sheet:
     `coupling_as` says how the coupling box is meant: "lambda", "single" (lambda / sqrt(N)) or "critical"
     (multiples of the critical value). Raises SheetError.
     """
+    return from_pairs(_typed(fields, KEYS))
+
+
+def cutoff_from_form(fields: Mapping[str, Any]) -> CutoffSheet:
+    """Return the cutoff question for what was typed into its form, as `from_form` does; raise SheetError."""
+    return cutoff_from_pairs(_typed(fields, KEYS | CUTOFF_KEYS))
+
+
+def _typed(fields: Mapping[str, Any], known: Mapping[str, Key]) -> dict[str, str]:
+    """Return the keys and values of a link for the texts of a form; raise SheetError."""
     typed: dict[str, str] = {}
     for name, text in fields.items():
         if not isinstance(text, str):
             raise SheetError(
                 "wrong-type", f"'{str(name)[:60]}' must be the text as typed", str(name), text, "text"
             )
-        if text.strip() or (name in KEYS and KEYS[name].kind == "text" and text):
-            typed[name] = text if name in KEYS and KEYS[name].kind == "text" else text.strip()
+        if text.strip() or (name in known and known[name].kind == "text" and text):
+            typed[name] = text if name in known and known[name].kind == "text" else text.strip()
     form = typed.pop("coupling_as", "lambda")
     if form not in COUPLING_FORMS:
         raise SheetError(
@@ -182,30 +216,29 @@ def from_form(fields: Mapping[str, Any]) -> Sheet:
             form,
             ", ".join(COUPLING_FORMS),
         )
-    plain = {name: _with_point(name, text) for name, text in typed.items()}
+    plain = {name: _with_point(known[name], text) if name in known else text for name, text in typed.items()}
     if form == "lambda" or "coupling" not in plain:
-        return from_pairs(plain)
+        return plain
     typed_coupling = KEYS["coupling"].read(plain.pop("coupling"))
     fixed = from_pairs({k: v for k, v in plain.items() if k in _FIXED})
     scale = float(fixed.spins) ** 0.5
     if form == "critical":
         scale = critical_coupling(fixed.mode, fixed.working_splitting, fixed.ratio)
-    coupling = KEYS["coupling"].checked(typed_coupling * scale)
-    return from_pairs(plain | {"coupling": number_text(coupling)})
+    return plain | {"coupling": number_text(KEYS["coupling"].checked(typed_coupling * scale))}
 
 
 _FIXED = ("spins", "mode", "splitting", "detuning", "ratio", "bias")
 
 
-def _with_point(name: str, text: str) -> str:
+def _with_point(key: Key, text: str) -> str:
     """Return a typed number with a decimal point in place of a decimal comma."""
-    if name not in KEYS or KEYS[name].kind not in {"integer", "real"}:
+    if key.kind not in {"integer", "real"}:
         return text
     text = text.replace("\u2212", "-")
     if text.count(",") + text.count(".") > 1:
-        raise KEYS[name].error(
+        raise key.error(
             "ambiguous-number",
-            f"'{name}' has several commas or points: use one decimal sign, no grouping",
+            f"'{key.name}' has several commas or points: use one decimal sign, no grouping",
             text,
         )
     return text.replace(",", ".")
@@ -235,12 +268,17 @@ def check_length(query: str, most: int) -> None:
 
 
 __all__ = [
+    "CUTOFF_PAGE",
     "LONGEST_LINK",
     "MAP_KEYS",
     "POINT_PAGE",
     "SWEPT",
     "WAIT",
     "check_length",
+    "cutoff_from_form",
+    "cutoff_from_pairs",
+    "cutoff_link",
+    "cutoff_query",
     "from_form",
     "from_pairs",
     "link_of",

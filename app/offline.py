@@ -5,22 +5,21 @@ import queue
 from collections.abc import Callable
 from typing import Any
 
-from app import identity, plan
+from app import identity, kinds
+from app.cutoff_sheets import Question
 from app.errors import JobFailedError, SheetError
-from app.exports import result_of
 from app.plan import Chunk
-from app.sheets import Sheet
 from app.workers import Outcome, ProcessPool, Task
 
 Progress = Callable[[int, int], None]
 
 
-def compute_sheet(sheet: Sheet, workers: int, progress: Progress) -> dict[str, Any]:
+def compute_sheet(sheet: Question, workers: int, progress: Progress) -> dict[str, Any]:
     """Return the complete result of a sheet.
 
     Parameters
     ----------
-    sheet : Sheet
+    sheet : Sheet or CutoffSheet
         The question.
     workers : int
         Number of computing processes.
@@ -34,7 +33,7 @@ def compute_sheet(sheet: Sheet, workers: int, progress: Progress) -> dict[str, A
     JobFailedError
         When a chunk ends its process twice.
     """
-    made = plan.make(sheet)
+    made = kinds.plan_of(sheet)
     rows: list[dict[str, Any] | None] = [None] * len(made.questions)
     landed: queue.SimpleQueue[tuple[Chunk, Outcome]] = queue.SimpleQueue()
     pool = ProcessPool(workers)
@@ -43,7 +42,7 @@ def compute_sheet(sheet: Sheet, workers: int, progress: Progress) -> dict[str, A
     progress(0, len(rows))
     try:
         for chunk in made.chunks:
-            pool.submit(Task(made.chunk_questions(chunk), _reporter(landed, chunk)))
+            pool.submit(Task(made.chunk_questions(chunk), _reporter(landed, chunk), made.work))
         for _ in made.chunks:
             chunk, outcome = landed.get()
             if outcome.error is not None:
@@ -69,7 +68,7 @@ def compute_sheet(sheet: Sheet, workers: int, progress: Progress) -> dict[str, A
         "computed_at": dt.datetime.now(dt.UTC).isoformat(timespec="seconds"),
         "seconds": round(seconds, 4),
     }
-    return result_of(sheet, made, rows, name=identity.sheet_id(sheet), provenance=provenance)
+    return kinds.result_of(sheet, made, rows, name=identity.sheet_id(sheet), provenance=provenance)
 
 
 def _reporter(landed: "queue.SimpleQueue[tuple[Chunk, Outcome]]", chunk: Chunk) -> Callable[[Outcome], None]:

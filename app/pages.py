@@ -24,7 +24,7 @@ from app.sheets import Sheet
 
 router = APIRouter()
 
-FILES = ("softmode.css", "theme.js", "main.js", "point.js", "icon.svg", PLOTLY)
+FILES = ("softmode.css", "theme.js", "main.js", "point.js", "cutoff.js", "icon.svg", PLOTLY)
 COUPLING_AS = Key("coupling_as", "choice", "lambda", "meaning of the box", choices=links.COUPLING_FORMS)
 
 
@@ -103,8 +103,8 @@ def _sweep_page(
         face=shown,
         invented=invented,
         typed=typed,
-        choices=_choices(sheet.frame),
-        ranges={name: _range_words(key) for name, key in KEYS.items()},
+        choices=choices_of(sheet.frame),
+        ranges={name: range_words(key) for name, key in KEYS.items()},
         **shell(error, {"query": shown.query, "texts": shown.texts}),
     )
     return rendered("sweep.html", page, error)
@@ -131,7 +131,7 @@ def rendered(template: str, page: Shell, error: SoftmodeError | None) -> HTMLRes
     return HTMLResponse(html, error.status if error is not None else 200)
 
 
-def _choices(frame: str) -> dict[str, list[tuple[str, str]]]:
+def choices_of(frame: str) -> dict[str, list[tuple[str, str]]]:
     """Return value and label of every choice on the page."""
     coupling = {
         "cavity": ("λ, collective", "g = λ/√N, single spin", "λ/λc, over critical"),
@@ -156,7 +156,8 @@ def _choices(frame: str) -> dict[str, list[tuple[str, str]]]:
     }
 
 
-def _range_words(key: Key) -> str:
+def range_words(key: Key) -> str:
+    """Return the range of a key as the hint beside its box."""
     if key.kind in {"integer", "real"}:
         return f"{number_text(key.low)} to {number_text(key.high)}"
     return key.allowed

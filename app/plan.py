@@ -4,7 +4,9 @@ The plan depends on the sheet alone, never on the machine: a chunk starts cold a
 other in order, so the same plan gives the same numbers to the last bit wherever it runs.
 """
 
+from collections.abc import Sequence
 from dataclasses import dataclass
+from typing import Any
 
 from app.errors import PriceError
 from app.keys import number_text
@@ -42,16 +44,19 @@ class Plan:
 
     `questions` holds curve after curve, each in the order of the axis; `chunks` are in the order in which
     they should run, coarse ones first. `seconds` is the predicted processor time, `peak_bytes` the
-    predicted memory of the largest point.
+    predicted memory of the largest point, whose model is `largest`. `work` names what the workers do with
+    the questions (see `workers.WORK`).
     """
 
     curves: tuple[Curve, ...]
-    questions: tuple[PointQuestion, ...]
+    questions: tuple[Any, ...]
     chunks: tuple[Chunk, ...]
     seconds: float
     peak_bytes: int
+    largest: CollectiveModel
+    work: str = "points"
 
-    def chunk_questions(self, chunk: Chunk) -> tuple[PointQuestion, ...]:
+    def chunk_questions(self, chunk: Chunk) -> tuple[Any, ...]:
         """Return the questions of a chunk in the order in which they are solved."""
         return tuple(self.questions[point] for point in chunk.points)
 
@@ -68,13 +73,18 @@ def axis_values(sheet: Sheet) -> tuple[float, ...]:
 
 def model_at(sheet: Sheet, x: float, family_value: float | None = None) -> CollectiveModel:
     """Return the model at the value `x` of the axis and one value of the family."""
+    settings = [(sheet.along, x)]
+    if sheet.each is not None and family_value is not None:
+        settings.insert(0, (sheet.each.name, family_value))
+    return model_with(sheet, settings)
+
+
+def model_with(sheet: Sheet, settings: Sequence[tuple[str, float]]) -> CollectiveModel:
+    """Return the model of a sheet with some swept quantities set, in this order."""
     values: dict[str, float | None] = {
         name: getattr(sheet, name)
         for name in ("spins", "mode", "splitting", "detuning", "coupling", "ratio", "bias")
     }
-    settings = [(sheet.along, x)]
-    if sheet.each is not None and family_value is not None:
-        settings.insert(0, (sheet.each.name, family_value))
     for name, value in settings:
         if name == "splitting":
             values["detuning"] = None
@@ -119,23 +129,36 @@ def make(sheet: Sheet) -> Plan:
     """Return the plan of a sheet."""
     drawn = curves(sheet)
     questions = tuple(question_at(sheet, x, curve.value) for curve in drawn for x in curve.axis)
-    prices = [predicted_seconds(question) for question in questions]
+    largest = max(questions, key=predicted_bytes)
+    seconds = [predicted_seconds(question) for question in questions]
+    return assembled(drawn, questions, seconds, peak_bytes=predicted_bytes(largest), largest=largest.model)
+
+
+def assembled(
+    drawn: tuple[Curve, ...],
+    questions: tuple[Any, ...],
+    prices: list[float],
+    *,
+    peak_bytes: int,
+    largest: CollectiveModel,
+    work: str = "points",
+) -> Plan:
+    """Return a plan of points that lie curve after curve; `prices` are their predicted seconds."""
     coarse: list[list[int]] = []
     fine: list[list[int]] = []
-    for number in range(len(drawn)):
-        first = number * sheet.points
-        last = first + sheet.points - 1
+    first = 0
+    for one in drawn:
+        last = first + len(one.axis) - 1
         picked = sorted({*range(first, last + 1, COARSE_STEP), last})
         others = sorted(set(range(first, last + 1)) - set(picked))
         coarse += _combed(picked, prices)
         fine += _cut(others, prices)
+        first = last + 1
     chunks = tuple(
         Chunk(number, tuple(points), sum(prices[point] for point in points))
         for number, points in enumerate(coarse + fine)
     )
-    return Plan(
-        drawn, questions, chunks, sum(prices), max(predicted_bytes(question) for question in questions)
-    )
+    return Plan(drawn, questions, chunks, sum(prices), peak_bytes, largest, work)
 
 
 def _pieces(points: list[int], prices: list[float], most_seconds: float) -> int:
@@ -170,14 +193,13 @@ def _cut(points: list[int], prices: list[float]) -> list[list[int]]:
 def check_price(plan: Plan, price_ceiling: float, memory_ceiling: int) -> None:
     """Raise PriceError when a plan costs more processor time or memory than the ceilings allow."""
     if plan.peak_bytes > memory_ceiling:
-        largest = max(plan.questions, key=predicted_bytes)
         raise PriceError(
             "too-much-memory",
-            f"one point would take about {plan.peak_bytes / 1e9:.3g} GB of memory (at {largest.model.spins} "
-            f"spins, coupling {number_text(largest.model.rotating)}); ask for fewer spins, a smaller "
+            f"one point would take about {plan.peak_bytes / 1e9:.3g} GB of memory (at {plan.largest.spins} "
+            f"spins, coupling {number_text(plan.largest.rotating)}); ask for fewer spins, a smaller "
             "coupling or fewer levels",
             "spins",
-            largest.model.spins,
+            plan.largest.spins,
             f"at most {memory_ceiling / 1e9:.3g} GB for a point",
         )
     if plan.seconds > price_ceiling:

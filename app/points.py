@@ -1,4 +1,4 @@
-"""The desk for single points: portraits computed in the process pool, one computation however many ask.
+"""The desk for single points: computed in the process pool, one computation however many ask.
 
 Its state belongs to the event loop. A point that nobody waits for any more is stopped after a grace period;
 finished ones are remembered for a while.
@@ -14,28 +14,37 @@ from dataclasses import dataclass
 from typing import Any
 
 from app import identity, plan
+from app.cutoff_work import MarginsQuestion, margins_bytes, margins_seconds
 from app.engine import OVERSPENDING, Engine
 from app.errors import BusyError, JobFailedError, PriceError, SheetError, SoftmodeError
 from app.exports import point_of
 from app.places import Place
 from app.settings import Settings
 from app.workers import Outcome, Task
-from solver import PointQuestion, StateName, portrait_seconds, predicted_bytes, predicted_seconds
+from solver import (
+    CollectiveModel,
+    PointQuestion,
+    StateName,
+    portrait_seconds,
+    predicted_bytes,
+    predicted_seconds,
+)
 
 MOST_REMEMBERED = 16
 # one client's points must not fill the queue that sweeps wait in, too
 MOST_PER_CLIENT = 4
-Asked = tuple[tuple[PointQuestion, ...], StateName]
+Asked = tuple[tuple[Any, ...], str, StateName]
 
 logger = logging.getLogger(__name__)
 
 
 @dataclass
 class _Entry:
-    """A portrait under way or finished, and how many wait for it."""
+    """A computation under way or finished, the spins of its point, and how many wait for it."""
 
     task: Task
     client: str
+    spins: int
     outcome: "asyncio.Future[Outcome]"
     waiting: int = 0
     finished_at: str = ""
@@ -63,16 +72,26 @@ def check_price(questions: tuple[PointQuestion, ...], settings: Settings) -> Non
     """Raise PriceError when a portrait costs more processor time or memory than the server allows."""
     seconds = sum(predicted_seconds(question) for question in questions) + portrait_seconds(questions[-1])
     most_bytes = max(predicted_bytes(question) for question in questions)
-    plan.check_price(plan.Plan((), questions, (), seconds, most_bytes), math.inf, settings.memory_ceiling)
+    check_ceilings(questions[-1].model, seconds, most_bytes, settings)
+
+
+def check_ceilings(model: CollectiveModel, seconds: float, most_bytes: int, settings: Settings) -> None:
+    """Raise PriceError when a point costs more processor time or memory than the server allows."""
+    plan.check_price(plan.Plan((), (), (), seconds, most_bytes, model), math.inf, settings.memory_ceiling)
     if seconds > settings.price_ceiling:
         raise PriceError(
             "too-expensive",
             f"this point would take about {seconds:.3g} s of processor time; ask for fewer spins, fewer "
             "levels or a smaller coupling",
             "spins",
-            questions[-1].model.spins,
+            model.spins,
             f"at most {settings.price_ceiling:.3g} s of processor time",
         )
+
+
+def check_margins_price(model: CollectiveModel, asked: MarginsQuestion, settings: Settings) -> None:
+    """Raise PriceError when the margins of a point cost more than the server allows."""
+    check_ceilings(model, margins_seconds(asked), margins_bytes(model, asked), settings)
 
 
 class PointDesk:
@@ -89,8 +108,19 @@ class PointDesk:
         """
         questions = await asyncio.to_thread(chain_of, place)
         check_price(questions, self.engine.settings)
-        asked = (questions, place.state)
-        entry = self.entries.get(asked) or self._begin(asked, client)
+        asked = (questions, "portrait", place.state)
+        found = await self.compute(asked, questions[-1].model.spins, client, wait)
+        return None if found is None else await self._told(place, *found)
+
+    async def compute(
+        self, asked: Asked, spins: int, client: str, wait: float
+    ) -> tuple[Outcome, dict[str, Any]] | None:
+        """Return the outcome of a computation and its provenance, None when `wait` seconds are not enough.
+
+        `asked` holds the questions, their work (see `workers`) and the state drawn; `spins` is for the words
+        of an error. Raises BusyError, or what went wrong.
+        """
+        entry = self.entries.get(asked) or self._begin(asked, spins, client)
         self.entries.move_to_end(asked)
         entry.waiting += 1
         try:
@@ -102,9 +132,9 @@ class PointDesk:
                 loop.call_later(self.engine.lease_length, self._drop_if_left, entry)
         if not entry.outcome.done():
             return None
-        return await self._told(place, asked, entry)
+        return self._finished(asked, entry)
 
-    def _begin(self, asked: Asked, client: str) -> _Entry:
+    def _begin(self, asked: Asked, spins: int, client: str) -> _Entry:
         if self.engine.restarting:
             raise BusyError("restarting", "the server is restarting; ask again in a moment", retry_after=3)
         active = [entry.client for entry in self.entries.values() if not entry.outcome.done()]
@@ -129,7 +159,7 @@ class PointDesk:
             if not loop.is_closed():
                 loop.call_soon_threadsafe(self._landed, entry, found)
 
-        entry = _Entry(Task(asked[0], report, asked[1]), client, outcome)
+        entry = _Entry(Task(asked[0], report, asked[1], asked[2]), client, spins, outcome)
         self.entries[asked] = entry
         self.engine.counts["portraits_started"] += 1
         self.engine.pool.submit(entry.task)
@@ -157,23 +187,23 @@ class PointDesk:
             entry.overspent = True
             self.engine.pool.stop(entry.task)
 
-    async def _told(self, place: Place, asked: Asked, entry: _Entry) -> dict[str, Any]:
-        """Return the result in an outcome, or raise the error that it stands for."""
+    def _finished(self, asked: Asked, entry: _Entry) -> tuple[Outcome, dict[str, Any]]:
+        """Return an outcome and its provenance, or raise the error that it stands for."""
         outcome = entry.outcome.result()
         if outcome.kind == "done":
-            name = hashlib.sha256(f"{identity.sheet_id(place.sheet)} {place.at!r} {place.member!r}".encode())
             made = {"computed_at": entry.finished_at, "seconds": round(outcome.seconds, 4)}
-            return await asyncio.to_thread(
-                point_of,
-                place,
-                outcome.rows[0],
-                name=name.hexdigest(),
-                provenance=identity.versions() | made,
-            )
+            return outcome, identity.versions() | made
         if outcome.kind in {"stopped", "broken"}:
             # worth another try, unlike what the solver refuses
             self.entries.pop(asked, None)
         raise _error_of(outcome, entry, self.engine)
+
+    async def _told(self, place: Place, outcome: Outcome, provenance: dict[str, Any]) -> dict[str, Any]:
+        """Return the result of a point."""
+        name = hashlib.sha256(f"{identity.sheet_id(place.sheet)} {place.at!r} {place.member!r}".encode())
+        return await asyncio.to_thread(
+            point_of, place, outcome.rows[0], name=name.hexdigest(), provenance=provenance
+        )
 
 
 def _error_of(outcome: Outcome, entry: _Entry, engine: Engine) -> SoftmodeError:
@@ -186,7 +216,7 @@ def _error_of(outcome: Outcome, entry: _Entry, engine: Engine) -> SoftmodeError:
             "this took much longer than predicted and was stopped; ask for fewer spins, fewer levels or a "
             "smaller coupling",
             "spins",
-            entry.task.questions[-1].model.spins,
+            entry.spins,
             f"at most {most:.0f} s for a point",
         )
     if outcome.kind == "stopped":
@@ -197,6 +227,6 @@ def _error_of(outcome: Outcome, entry: _Entry, engine: Engine) -> SoftmodeError:
             "computing this point ended the computing process twice, most likely for want of memory; ask for "
             "fewer spins, fewer levels or a smaller coupling",
             "spins",
-            entry.task.questions[-1].model.spins,
+            entry.spins,
         )
     return JobFailedError("internal", "the solver failed at this point; the server's log says why")

@@ -87,6 +87,11 @@ class Sheet(BaseModel):
         """Names of the quantities that vary: `along`, and the name of `each`."""
         return frozenset({self.along} | ({self.each.name} if self.each else set()))
 
+    @property
+    def total(self) -> int:
+        """Number of points of all curves."""
+        return self.points * (len(self.each.values) if self.each else 1)
+
     def data(self) -> dict[str, Any]:
         """Return all keys in the order of the grammar, defaults filled, as JSON-able data."""
         dumped = self.model_dump(mode="json", by_alias=True)
@@ -114,13 +119,17 @@ class Sheet(BaseModel):
         return self.__class__.model_validate(kept)
 
     def computation_key(self) -> str:
-        """Return canonical JSON of what the numbers depend on: no view keys, no overridden values."""
-        hidden = set(self.swept)
+        """Return canonical JSON of what the numbers depend on."""
+        return canonical_json(self.numbers(self.swept))
+
+    def numbers(self, varied: frozenset[str]) -> dict[str, Any]:
+        """Return the keys that numbers depend on while `varied` vary: no view keys, no overridden values."""
+        hidden = set(varied)
         for group in SAME_QUANTITY:
-            hidden |= group if group & self.swept else set()
-        return canonical_json(
-            {k: v for k, v in self.data().items() if v is not None and not KEYS[k].view and k not in hidden}
-        )
+            hidden |= group if group & varied else set()
+        return {
+            k: v for k, v in self.data().items() if v is not None and not KEYS[k].view and k not in hidden
+        }
 
 
 def critical_coupling(mode: float, splitting: float, ratio: float) -> float:

@@ -6,6 +6,7 @@ chunk is tried once more; a chunk that kills two processes is given up.
 """
 
 import contextlib
+import functools
 import json
 import logging
 import multiprocessing
@@ -22,6 +23,7 @@ from multiprocessing.context import SpawnProcess
 from typing import Any
 
 from app.companions import companions
+from app.cutoff_work import answer_margins, answer_needs
 from app.series import SERIES_KEYS
 from solver import (
     SOLVER_DIGEST,
@@ -72,12 +74,14 @@ class Outcome:
 class Task:
     """A chunk under way: its questions, and what to call with its outcome (from a thread of the pool).
 
-    With `portrait`, only the last point is answered, with the pictures of that state.
+    `work` names what answers the questions: "portrait" (only the last point is answered, with the pictures
+    of `state`) or a key of WORK.
     """
 
-    questions: Sequence[PointQuestion]
+    questions: Sequence[Any]
     report: Callable[[Outcome], None]
-    portrait: StateName | None = None
+    work: str = "points"
+    state: StateName = "ground"
     deaths: int = 0
     stopped: bool = False
     handed_over: float = field(default_factory=time.monotonic)
@@ -107,6 +111,26 @@ def compute(questions: Sequence[PointQuestion], stopped: Callable[[], bool]) -> 
             answers = solve_chain(questions[number + 1 :])
         rows.append(_plain_row({"answer": answer} | companions(question)))
     return rows
+
+
+def compute_each(
+    answer: Callable[[Any], dict[str, Any]], questions: Sequence[Any], stopped: Callable[[], bool]
+) -> list[dict[str, Any]] | None:
+    """Return the rows of questions that do not help each other, or None when stopped between two of them."""
+    rows = []
+    for question in questions:
+        if stopped():
+            return None
+        rows.append(_plain_row(answer(question)))
+    return rows
+
+
+Computer = Callable[[Sequence[Any], Callable[[], bool]], list[dict[str, Any]] | None]
+WORK: dict[str, Computer] = {
+    "points": compute,
+    "needs": functools.partial(compute_each, answer_needs),
+    "margins": functools.partial(compute_each, answer_margins),
+}
 
 
 def compute_portrait(questions: Sequence[PointQuestion], state: StateName) -> list[dict[str, Any]]:
@@ -142,18 +166,17 @@ def _serve(pipe: Connection) -> None:
         while True:
             message = pipe.recv()
             if message != STOP:  # a stop that came too late
-                questions, portrait = message
-                pipe.send(_answer(questions, portrait, pipe))
+                pipe.send(_answer(*message, pipe))
 
 
-def _answer(questions: Sequence[PointQuestion], portrait: StateName | None, pipe: Connection) -> Outcome:
+def _answer(questions: Sequence[Any], work: str, state: StateName, pipe: Connection) -> Outcome:
     started = time.process_time()
     try:
-        if portrait is not None:
-            rows: list[dict[str, Any]] | None = compute_portrait(questions, portrait)
+        if work == "portrait":
+            rows: list[dict[str, Any]] | None = compute_portrait(questions, state)
         else:
             # nothing but a stop is sent while a chunk is under way
-            rows = compute(questions, lambda: pipe.poll() and pipe.recv() == STOP)
+            rows = WORK[work](questions, lambda: pipe.poll() and pipe.recv() == STOP)
     except SolverError as error:
         facts = {
             "message": error.message,
@@ -274,7 +297,7 @@ class Worker:
                 if task.stopped:
                     return Outcome("stopped")
                 self.current = task
-                pipe.send((tuple(task.questions), task.portrait))
+                pipe.send((tuple(task.questions), task.work, task.state))
             if pipe not in wait([pipe, process.sentinel]):
                 return None
             outcome = pipe.recv()

@@ -1,0 +1,207 @@
+"""What the points of a cutoff question say: the cutoff that covers all, where a stated one holds."""
+
+from collections.abc import Mapping, Sequence
+from dataclasses import asdict
+from typing import Any
+
+from app.cutoff_plan import model_at
+from app.cutoff_sheets import CutoffSheet
+from solver.sizes import calculation_size
+
+Row = Mapping[str, Any]
+START = "start"
+TREATMENTS = ("collective", "parity", "product")
+
+
+def quantities_of(question: CutoffSheet) -> tuple[str, ...]:
+    """Return what is judged: the quantities asked, and "start" where a start is followed."""
+    return question.asked + ((START,) if question["start"] != "none" else ())
+
+
+def columns_of(question: CutoffSheet, rows: Sequence[Row | None]) -> dict[str, Any]:
+    """Return the numbers of all points as columns, None where a point is missing or not settled.
+
+    `needed`, `status` and `error` are given for each quantity, `error` at its needed cutoff; `covering` is
+    the largest needed cutoff of a point and `deciding` its quantity. `stated` (None unless asked) has for the
+    stated cutoff the `error` and `good` of each quantity, and `enough`.
+    """
+    points = [_point(question, row) for row in rows]
+    quantities = quantities_of(question)
+
+    def column(*path: str) -> list[Any]:
+        return [_dig(point, path) for point in points]
+
+    columns: dict[str, Any] = {
+        key: {quantity: column(key, quantity) for quantity in quantities}
+        for key in ("needed", "status", "error")
+    }
+    columns |= {"covering": column("covering"), "deciding": column("deciding")}
+    columns["stated"] = None
+    if question["stated"] is not None:
+        columns["stated"] = {
+            "cutoff": question["stated"],
+            "error": {quantity: column("stated", "error", quantity) for quantity in quantities},
+            "good": {quantity: column("stated", "good", quantity) for quantity in quantities},
+            "enough": column("stated", "enough"),
+        }
+    columns["values"] = {name: column("values", name) for name in _value_names(question)}
+    columns["notes"] = [
+        {"point": number, "note": row["note"]}
+        for number, row in enumerate(rows)
+        if row is not None and row["note"]
+    ]
+    return columns
+
+
+def _value_names(question: CutoffSheet) -> tuple[str, ...]:
+    if question["ensemble"] == "lowest":
+        names: tuple[str, ...] = ("energy", "gap", "boson_number", "order_parameter")
+    else:
+        errors = ("boson_number", "boson_number_error", "order_parameter", "order_parameter_error")
+        names = (*errors, "inversion", "critical_temperature")
+    return names + (("at_start", "mean_bosons_most") if question["start"] != "none" else ())
+
+
+def _point(question: CutoffSheet, row: Row | None) -> dict[str, Any]:
+    """Return one point with the start as one more quantity; empty where something is not settled."""
+    if row is None or row["answer"] is None or (question["start"] != "none" and row["start"] is None):
+        return {}
+    answer, started = row["answer"], row["start"]
+    point: dict[str, Any] = {
+        "needed": dict(answer["needed"]),
+        "status": dict(answer["status"]),
+        "error": dict(answer["error"]),
+        "covering": answer["covering"],
+        "deciding": answer["deciding"],
+        "stated": answer["stated"] and {k: _copied(v) for k, v in answer["stated"].items()},
+        "values": {name: answer.get(name) for name in _value_names(question)},
+    }
+    if started is not None:
+        point["needed"][START], point["status"][START] = started["needed"], started["status"]
+        point["values"] |= {name: started[name] for name in ("at_start", "mean_bosons_most")}
+        if started["needed"] is not None and started["needed"] > (answer["covering"] or -1):
+            point |= {"covering": started["needed"], "deciding": START}
+        if point["stated"]:
+            told = started["stated"]
+            point["stated"]["error"][START] = told["weight_most"]
+            point["stated"]["good"][START] = told["enough"]
+            point["stated"]["enough"] = point["stated"]["enough"] and told["enough"]
+    return point
+
+
+def _copied(value: Any) -> Any:
+    return dict(value) if isinstance(value, Mapping) else value
+
+
+def _dig(found: Any, path: Sequence[str]) -> Any:
+    for name in path:
+        found = None if found is None else found.get(name)
+    return found
+
+
+def summary_of(
+    question: CutoffSheet, places: Sequence[tuple[float, float | None]], columns: Mapping[str, Any]
+) -> dict[str, Any]:
+    """Return what all points together say; `places` has their values on the axis and of the second quantity.
+
+    `covering` is None while no point is settled; `per_quantity` has the largest needed cutoff of each
+    quantity and where it is needed, `sizes` how large the calculation is there.
+    """
+    covering = _peak(columns["covering"], places)
+    summary: dict[str, Any] = {
+        "points": len(places),
+        "settled": sum(value is not None for value in columns["covering"]),
+        "covering": None if covering is None else covering["cutoff"],
+        "number_states": None if covering is None else covering["cutoff"] + 1,
+        "deciding": None,
+        "per_quantity": {},
+    }
+    if covering is not None:
+        quantity = columns["deciding"][covering["point"]]
+        status = columns["status"].get(quantity, [None] * len(places))[covering["point"]]
+        summary["deciding"] = {"quantity": quantity, "status": status} | covering
+    for quantity, needed in columns["needed"].items():
+        peak = _peak(needed, places)
+        if peak is not None:
+            peak["status"] = columns["status"][quantity][peak["point"]]
+        summary["per_quantity"][quantity] = peak
+    summary["stated"] = _stated(question, places, columns)
+    summary["sizes"] = _sizes(question, summary)
+    return summary
+
+
+def _peak(
+    needed: Sequence[int | None], places: Sequence[tuple[float, float | None]]
+) -> dict[str, Any] | None:
+    """Return the largest entry and the first point that has it."""
+    known = [(value, -point) for point, value in enumerate(needed) if value is not None]
+    if not known:
+        return None
+    value, negative = max(known)
+    x, second = places[-negative]
+    return {"cutoff": value, "point": -negative, "x": x, "second": second}
+
+
+def _stated(
+    question: CutoffSheet, places: Sequence[tuple[float, float | None]], columns: Mapping[str, Any]
+) -> dict[str, Any] | None:
+    """Return where the stated cutoff is good enough, as a whole and for each quantity."""
+    stated = columns["stated"]
+    if stated is None:
+        return None
+    judged = {quantity: _judged(question, places, good) for quantity, good in stated["good"].items()}
+    worst = {}
+    for quantity, errors in stated["error"].items():
+        known = [(value, -point) for point, value in enumerate(errors) if value is not None]
+        if known:
+            value, negative = max(known)
+            worst[quantity] = {"error": value, "point": -negative} | dict(
+                zip(("x", "second"), places[-negative], strict=True)
+            )
+    whole = _judged(question, places, stated["enough"])
+    return {"cutoff": stated["cutoff"], **whole, "per_quantity": judged, "worst": worst}
+
+
+def _judged(
+    question: CutoffSheet, places: Sequence[tuple[float, float | None]], good: Sequence[bool | None]
+) -> dict[str, Any]:
+    """Return how many points are good, and for each curve the stretches of the axis whose points are."""
+    length = question.sheet.points
+    stretches = []
+    for row, second in enumerate(question.curves):
+        part = range(row * length, (row + 1) * length)
+        for begin, end in _runs([good[point] is True for point in part]):
+            first, last = places[part[begin]][0], places[part[end]][0]
+            stretches.append({"second": second, "from": first, "to": last, "points": end - begin + 1})
+    known = [value for value in good if value is not None]
+    return {"good_points": sum(known), "judged_points": len(known), "good": stretches}
+
+
+def _runs(good: Sequence[bool]) -> list[tuple[int, int]]:
+    runs: list[tuple[int, int]] = []
+    for number, value in enumerate(good):
+        if value and runs and runs[-1][1] == number - 1:
+            runs[-1] = (runs[-1][0], number)
+        elif value:
+            runs.append((number, number))
+    return runs
+
+
+def _sizes(question: CutoffSheet, summary: Mapping[str, Any]) -> list[dict[str, Any]]:
+    """Return how large a calculation is at the covering and at the stated cutoff, for the largest N."""
+    sheet = question.sheet
+    x = sheet.stop
+    second = max(one for one in question.curves if one is not None) if question.second == "spins" else None
+    if question.second is not None and second is None:
+        second = question.curves[0]
+    spins = model_at(question, x, second).spins
+    cutoffs = {"covering": summary["covering"], "stated": question["stated"]}
+    keeps_parity = sheet.bias == 0.0 and "bias" not in {sheet.along, question.second}
+    return [
+        {"for": name, "cutoff": cutoff, "spins": spins, "treatment": treatment}
+        | asdict(calculation_size(spins, cutoff, treatment))
+        for name, cutoff in cutoffs.items()
+        if cutoff is not None
+        for treatment in TREATMENTS
+        if treatment != "parity" or keeps_parity
+    ]
