@@ -12,7 +12,17 @@ from solver.observables import REGISTRY, Observable
 from solver.point import PointAnswer, PointQuestion, answer_point
 from solver.portrait import STATE_NAMES, Portrait, StateName, draw_portrait, portrait_seconds
 from solver.sweep import SERIES, SeriesSpec, predicted_bytes, predicted_seconds, solve_chain
+from solver.thermal import (
+    THERMAL_QUANTITIES,
+    ThermalAnswer,
+    ThermalQuestion,
+    answer_thermal,
+    predicted_thermal_seconds,
+    temperature_of_quanta,
+)
+from solver.thermal_limit import critical_temperature, limit_thermal
 from solver.thermodynamic import LargeNLimit, large_n_limit
+from solver.wanted import Wanted
 
 
 def _digest_of_source() -> str:
@@ -32,6 +42,7 @@ __all__ = [
     "SERIES",
     "SOLVER_DIGEST",
     "STATE_NAMES",
+    "THERMAL_QUANTITIES",
     "CollectiveModel",
     "ConvergenceError",
     "LargeNLimit",
@@ -44,12 +55,20 @@ __all__ = [
     "SeriesSpec",
     "SolverError",
     "StateName",
+    "ThermalAnswer",
+    "ThermalQuestion",
+    "Wanted",
     "answer_point",
+    "answer_thermal",
+    "critical_temperature",
     "draw_portrait",
     "effective_spin_levels",
     "large_n_limit",
+    "limit_thermal",
     "portrait_seconds",
     "predicted_bytes",
     "predicted_seconds",
+    "predicted_thermal_seconds",
     "solve_chain",
+    "temperature_of_quanta",
 ]
