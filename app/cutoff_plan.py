@@ -1,5 +1,8 @@
 """The plan of a cutoff question: its points, and the margins at one of them."""
 
+import contextlib
+from collections.abc import Iterator
+
 from app import plan
 from app.cutoff_sheets import CutoffSheet
 from app.cutoff_work import (
@@ -13,7 +16,7 @@ from app.cutoff_work import (
 from app.errors import SheetError
 from app.keys import Key
 from app.plan import Curve, Plan
-from solver import CollectiveModel
+from solver import CollectiveModel, SolverError
 from solver.convergence import ConvergenceQuestion
 from solver.needs import CutoffQuestion, Wanted
 from solver.start import StartQuestion
@@ -32,11 +35,23 @@ def curves(question: CutoffSheet) -> tuple[Curve, ...]:
 def make(question: CutoffSheet) -> Plan:
     """Return the plan of a cutoff question."""
     drawn = curves(question)
-    points = tuple(point_at(question, x, curve.value) for curve in drawn for x in curve.axis)
+    with _told_as_sheet_errors():
+        points = tuple(point_at(question, x, curve.value) for curve in drawn for x in curve.axis)
     prices = [needs_seconds(point) for point in points]
     sizes = [needs_bytes(point) for point in points]
     largest = points[max(range(len(points)), key=sizes.__getitem__)]
     return plan.assembled(drawn, points, prices, peak_bytes=max(sizes), largest=largest.model, work="needs")
+
+
+@contextlib.contextmanager
+def _told_as_sheet_errors() -> Iterator[None]:
+    """Turn what the solver refuses to be asked into the error of the sheet's own key."""
+    try:
+        yield
+    except SolverError as error:
+        names = {"quanta": "start-quanta", "periods": "start-periods", "boson_number": "need-bosons"}
+        field = names.get(error.field, error.field)
+        raise SheetError("not-solvable", error.message, field, str(error.value), error.allowed) from None
 
 
 def model_at(question: CutoffSheet, x: float, second: float | None) -> CollectiveModel:
@@ -115,7 +130,8 @@ def margins_at(question: CutoffSheet, point: int, cutoff: int) -> tuple[Collecti
     """Return the model of a point and what is asked about the cutoffs around `cutoff`; raise SheetError."""
     place = place_of(question, point)
     cutoffs = margin_cutoffs(cutoff)
-    asked = [point_at(question, *place, stated) for stated in cutoffs]
+    with _told_as_sheet_errors():
+        asked = [point_at(question, *place, stated) for stated in cutoffs]
     first = asked[0].main
     levels = None
     if isinstance(first, CutoffQuestion):

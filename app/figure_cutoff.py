@@ -95,7 +95,7 @@ def _label(question: CutoffSheet, value: float, *, plain: bool = False) -> str:
     return label.replace(written.figure, written.plain) if plain else label
 
 
-def _lines(question: CutoffSheet, result: Mapping[str, Any]) -> list[tuple[str, str, Stroke, range]]:
+def _lines(question: CutoffSheet) -> list[tuple[str, str, Stroke, range]]:
     """Return quantity (or "covering"), label, look and points of each line that is drawn."""
     length = question.sheet.points
     if question.second is None:

@@ -120,6 +120,8 @@ class Key:
         """Return the names in the order of the choices: the same set is always written the same way."""
         if not isinstance(value, list | tuple) or not all(isinstance(name, str) for name in value):
             raise self.error("wrong-type", f"'{self.name}' is a list of names", value)
+        if not any(value):
+            raise self.error("nothing-named", f"'{self.name}' must name at least one of its choices", value)
         for name in value:
             if name not in self.choices:
                 nearest = nearest_name(name, self.choices)

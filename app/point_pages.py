@@ -42,11 +42,12 @@ class PointPage(Shell):
     """Everything the template `point.html` names.
 
     `face` is that of the sheet, with title, values and query of the point; after an error, of the default
-    sheet. `sweep` leads back, `below` and `above` to the neighbours.
+    sheet. `sweep` leads back, `cutoff` to the cutoff desk, `below` and `above` to the neighbours.
     """
 
     face: Face
     sweep: str
+    cutoff: str
     below: Way
     above: Way
     members: list[Way]
@@ -108,6 +109,7 @@ async def _json(data: Any) -> Response:
 async def _page(place: Place, store: Store) -> PointPage:
     sheet = place.sheet
     query = await store.shortened(links.place_query(place))
+    sweep = await store.shortened(links.query_of(sheet))
 
     async def to(other: Place) -> str:
         return links.whole(await store.shortened(links.place_query(other)), links.POINT_PAGE).lstrip("/")
@@ -127,7 +129,8 @@ async def _page(place: Place, store: Store) -> PointPage:
             values=values_in_force(sheet, place.values()),
             query=query,
         ),
-        sweep=links.whole(await store.shortened(links.query_of(sheet))).lstrip("/"),
+        sweep=links.whole(sweep).lstrip("/"),
+        cutoff=links.whole(sweep, links.CUTOFF_PAGE).lstrip("/"),
         below=Way(f"{along} = {_shown(below)}", None if below is None else await to(place.moved(below))),
         above=Way(f"{along} = {_shown(above)}", None if above is None else await to(place.moved(above))),
         members=members,
@@ -144,6 +147,7 @@ def _broken_page(error: SoftmodeError) -> PointPage:
     return PointPage(
         face=replace(face_of(links.parse("")), title="This point cannot be shown"),
         sweep=links.whole("").lstrip("/"),
+        cutoff=links.whole("", links.CUTOFF_PAGE).lstrip("/"),
         below=nowhere,
         above=nowhere,
         members=[],

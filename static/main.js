@@ -133,6 +133,7 @@ function compute() {
 function showLink() {
   part("link").value = absolute(state.query);
   part("print-link").textContent = absolute(state.query);
+  part("to-cutoff").href = withQuery("cutoff", state.query);
   const twin = part("twin");
   if (twin) twin.href = withQuery("api/sweep", state.query);
 }

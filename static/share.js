@@ -42,28 +42,35 @@ export function save(blob, name) {
 }
 
 export class Share {
-  // now() returns {query, link, id, title}
-  constructor(plot, now) {
+  // now() returns {query, href, id, title}; `twin` is the address of the page's JSON, its tables lie beside it
+  constructor(plot, now, twin = "api/sweep", name = "softmode") {
     this.plot = plot;
     this.now = now;
+    this.prefix = name;
     this.said = document.getElementById("said");
-    const on = (id, action) => document.getElementById(id).addEventListener("click", () => this.attempt(action));
+    // a page has the buttons that make sense on it
+    const on = (id, action) => document.getElementById(id)?.addEventListener("click", () => this.attempt(action));
     on("copy-link", () => this.copyLink());
-    on("save-csv", () => this.file("api/sweep.csv", "csv"));
-    on("save-json", () => this.file("api/sweep", "json"));
+    on("save-csv", () => this.file(`${twin}.csv`, "csv"));
+    on("save-sizes", () => this.file(`${twin}/sizes.csv`, "csv", "-sizes"));
+    on("save-json", () => this.file(twin, "json"));
     on("save-png", () => this.image("png"));
     on("save-svg", () => this.image("svg"));
     on("show-python", () => this.python());
     on("print", () => window.print());
     on("reset-zoom", () => this.plot.resetZoom());
     this.dialog = document.getElementById("python");
+    if (this.dialog) this.wirePython();
+    const link = document.getElementById("link");
+    link.addEventListener("focus", () => link.select());
+  }
+
+  wirePython() {
     document.getElementById("python-close").addEventListener("click", () => this.dialog.close());
     document.getElementById("python-copy").addEventListener("click", async () => {
       const copied = await copyText(document.getElementById("python-code").textContent);
       document.getElementById("python-said").textContent = copied ? "Copied." : "Select the text and copy it by hand.";
     });
-    const link = document.getElementById("link");
-    link.addEventListener("focus", () => link.select());
   }
 
   say(words) {
@@ -87,7 +94,7 @@ export class Share {
     this.say(copied ? "Link copied." : "Select the link and copy it by hand.");
   }
 
-  async file(address, kind) {
+  async file(address, kind, what = "") {
     this.say("Fetching the numbers…");
     const answer = await ask(withQuery(address, this.now().query));
     if (answer.status === 202) {
@@ -95,12 +102,12 @@ export class Share {
       this.say(`Still computing, ${facts.done} of ${facts.total} points; try again when the curve is complete.`);
       return;
     }
-    save(await answer.blob(), this.name(kind));
+    save(await answer.blob(), this.name(kind, what));
     this.say(`${kind.toUpperCase()} saved.`);
   }
 
-  name(kind) {
-    return `softmode-${(this.now().id ?? "sweep").slice(0, 12)}.${kind}`;
+  name(kind, what = "") {
+    return `${this.prefix}${what}-${(this.now().id ?? "sweep").slice(0, 12)}.${kind}`;
   }
 
   async image(kind) {
