@@ -11,6 +11,7 @@ from solver.model import LARGEST_SPINS, CollectiveModel
 from solver.observables import REGISTRY, Observable
 from solver.point import PointAnswer, PointQuestion, answer_point
 from solver.portrait import STATE_NAMES, Portrait, StateName, draw_portrait, portrait_seconds
+from solver.start import StartAnswer, StartQuestion, answer_start, predicted_start_seconds
 from solver.sweep import SERIES, SeriesSpec, predicted_bytes, predicted_seconds, solve_chain
 from solver.thermal import (
     THERMAL_QUANTITIES,
@@ -54,11 +55,14 @@ __all__ = [
     "QuestionError",
     "SeriesSpec",
     "SolverError",
+    "StartAnswer",
+    "StartQuestion",
     "StateName",
     "ThermalAnswer",
     "ThermalQuestion",
     "Wanted",
     "answer_point",
+    "answer_start",
     "answer_thermal",
     "critical_temperature",
     "draw_portrait",
@@ -68,6 +72,7 @@ __all__ = [
     "portrait_seconds",
     "predicted_bytes",
     "predicted_seconds",
+    "predicted_start_seconds",
     "predicted_thermal_seconds",
     "solve_chain",
     "temperature_of_quanta",
