@@ -49,7 +49,14 @@ def _told_as_sheet_errors() -> Iterator[None]:
     try:
         yield
     except SolverError as error:
-        names = {"quanta": "start-quanta", "periods": "start-periods", "boson_number": "need-bosons"}
+        names = {
+            "quanta": "start-quanta",
+            "periods": "start-periods",
+            "energies": "need",
+            "gap": "need-gap",
+            "boson_number": "need-bosons",
+            "order_parameter": "need-order",
+        }
         field = names.get(error.field, error.field)
         raise SheetError("not-solvable", error.message, field, str(error.value), error.allowed) from None
 
@@ -136,7 +143,7 @@ def margins_at(question: CutoffSheet, point: int, cutoff: int) -> tuple[Collecti
     levels = None
     if isinstance(first, CutoffQuestion):
         few, run = (
-            ConvergenceQuestion(model=first.model, levels=first.levels, cutoffs=chosen, basis="fock")
+            ConvergenceQuestion(model=first.model, levels=first.levels, cutoffs=chosen, wanted=first.wanted)
             for chosen in (cutoffs, None)
         )
         levels = (few, run)

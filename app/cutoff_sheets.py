@@ -22,9 +22,9 @@ _ORDERED = (
     Key("high", "real", None, "last value of the second swept quantity"),
     Key("rows", "integer", None, "number of values of the second swept quantity", low=2, high=2001),
     Key("asked", "names", None, "quantities that your calculation must give", choices=QUANTITIES),
-    Key("need-gap", "real", 1e-3, "error your gap may have, in units of mode", low=1e-12, high=1.0),
-    Key("need-bosons", "real", 1e-2, "error your boson number may have, in quanta", low=1e-12, high=1e3),
-    Key("need-order", "real", 1e-3, "error your order parameter may have", low=1e-12, high=1.0),
+    Key("need-gap", "real", 1e-3, "error your gap may have, in units of mode", low=1e-9, high=0.9),
+    Key("need-bosons", "real", 1e-2, "error your boson number may have, in quanta", low=1e-9, high=100.0),
+    Key("need-order", "real", 1e-3, "error your order parameter may have", low=1e-9, high=0.9),
     Key("stated", "integer", None, "a cutoff you have: largest n kept", low=0, high=100_000),
     Key(
         "ensemble",

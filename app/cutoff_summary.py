@@ -77,7 +77,7 @@ def _point(question: CutoffSheet, row: Row | None) -> dict[str, Any]:
         "values": {name: answer.get(name) for name in _value_names(question)},
     }
     if started is not None:
-        point["needed"][START], point["status"][START] = started["needed"], started["status"]
+        point["needed"][START], point["status"][START] = started["needed"], started["status"]["needed"]
         point["values"] |= {name: started[name] for name in ("at_start", "mean_bosons_most")}
         if started["needed"] is not None and started["needed"] > (answer["covering"] or -1):
             point |= {"covering": started["needed"], "deciding": START}

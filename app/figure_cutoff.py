@@ -121,7 +121,7 @@ def _needed_panel(question: CutoffSheet, result: Mapping[str, Any]) -> Panel:
     xs = result["x"]
     if question["stated"] is not None:
         _shade(panel, question, result)
-    for quantity, label, stroke, points in _lines(question, result):
+    for quantity, label, stroke, points in _lines(question):
         if quantity == "covering":
             kept = [point for point in points if result["covering"][point] is not None]
             panel.traces.append(
@@ -195,7 +195,7 @@ def _error_panel(question: CutoffSheet, result: Mapping[str, Any]) -> Panel:
     )
     allowed, errors = allowed_of(question), result["stated"]["error"]
     xs = result["x"]
-    for quantity, label, stroke, points in _lines(question, result):
+    for quantity, label, stroke, points in _lines(question):
         asked = quantities_of(question) if quantity == "covering" else (quantity,)
         x, y = [], []
         for point in points:
