@@ -124,7 +124,7 @@ class CutoffSheet:
 
     def data(self) -> dict[str, Any]:
         """Return all keys, those of the sheet first, defaults filled, as JSON-able data."""
-        own = {name: list(value) if isinstance(value, tuple) else value for name, value in self.own}
+        own: dict[str, Any] = {k: list(v) if isinstance(v, tuple) else v for k, v in self.own}
         if own["across"] == "spins":
             own |= {name: int(own[name]) for name in ("low", "high")}
         return self.sheet.data() | own

@@ -8,7 +8,7 @@ from app.cutoff_plan import model_at
 from app.cutoff_sheets import CutoffSheet
 from app.cutoff_summary import quantities_of
 from app.cutoff_words import NAMES, allowed_of, answer_words, size_words
-from app.figure_joins import crossings
+from app.figure_joins import Numbers, crossings
 from app.figure_panels import Panel
 from app.figure_point import SEQUENTIAL
 from app.figure_style import Stroke
@@ -195,6 +195,8 @@ def _error_panel(question: CutoffSheet, result: Mapping[str, Any]) -> Panel:
     )
     allowed, errors = allowed_of(question), result["stated"]["error"]
     xs = result["x"]
+    x: Numbers
+    y: Numbers
     for quantity, label, stroke, points in _lines(question):
         asked = quantities_of(question) if quantity == "covering" else (quantity,)
         x, y = [], []
@@ -206,7 +208,7 @@ def _error_panel(question: CutoffSheet, result: Mapping[str, Any]) -> Panel:
         if x:
             panel.traces.append(style.curve(x, y, stroke, "y2", label))
             panel.key.append(stroke.key(label if question.second is None else f"worst, {label}"))
-    ends = [question.sheet.start, question.sheet.stop]
+    ends: Numbers = [question.sheet.start, question.sheet.stop]
     panel.traces.append(style.curve(ends, [1.0, 1.0], STATED, "y2", "allowed"))
     panel.key.append(STATED.key("allowed"))
     return panel

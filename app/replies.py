@@ -59,7 +59,7 @@ async def body_of(request: Request) -> dict[str, Any]:
         )
 
     try:
-        data = json.loads(raw, objectpairs_of_hook=once, parse_constant=constant)
+        data = json.loads(raw, object_pairs_hook=once, parse_constant=constant)
     except (ValueError, RecursionError) as error:
         raise RequestError(
             "bad-json", f"the body is not JSON: {error}", "body", None, "a JSON object"

@@ -166,7 +166,8 @@ def _serve(pipe: Connection) -> None:
         while True:
             message = pipe.recv()
             if message != STOP:  # a stop that came too late
-                pipe.send(_answer(*message, pipe))
+                questions, work, state = message
+                pipe.send(_answer(questions, work, state, pipe))
 
 
 def _answer(questions: Sequence[Any], work: str, state: StateName, pipe: Connection) -> Outcome:
