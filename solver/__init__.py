@@ -5,12 +5,29 @@ from __future__ import annotations
 import hashlib
 from pathlib import Path
 
+from solver.convergence import (
+    Convergence,
+    ConvergenceQuestion,
+    Plateau,
+    convergence,
+    predicted_convergence_seconds,
+)
 from solver.effective_spin import effective_spin_levels
 from solver.errors import ConvergenceError, ModelError, QuestionError, SolverError
 from solver.model import LARGEST_SPINS, CollectiveModel
+from solver.needs import (
+    QUANTITIES,
+    CutoffAnswer,
+    CutoffQuestion,
+    Stated,
+    Wanted,
+    answer_cutoff,
+    predicted_cutoff_seconds,
+)
 from solver.observables import REGISTRY, Observable
 from solver.point import PointAnswer, PointQuestion, answer_point
 from solver.portrait import STATE_NAMES, Portrait, StateName, draw_portrait, portrait_seconds
+from solver.sizes import CalculationSize, calculation_size
 from solver.sweep import SERIES, SeriesSpec, predicted_bytes, predicted_seconds, solve_chain
 from solver.thermodynamic import LargeNLimit, large_n_limit
 
@@ -28,15 +45,22 @@ SOLVER_DIGEST = _digest_of_source()
 
 __all__ = [
     "LARGEST_SPINS",
+    "QUANTITIES",
     "REGISTRY",
     "SERIES",
     "SOLVER_DIGEST",
     "STATE_NAMES",
+    "CalculationSize",
     "CollectiveModel",
+    "Convergence",
     "ConvergenceError",
+    "ConvergenceQuestion",
+    "CutoffAnswer",
+    "CutoffQuestion",
     "LargeNLimit",
     "ModelError",
     "Observable",
+    "Plateau",
     "PointAnswer",
     "PointQuestion",
     "Portrait",
@@ -44,12 +68,19 @@ __all__ = [
     "SeriesSpec",
     "SolverError",
     "StateName",
+    "Stated",
+    "Wanted",
+    "answer_cutoff",
     "answer_point",
+    "calculation_size",
+    "convergence",
     "draw_portrait",
     "effective_spin_levels",
     "large_n_limit",
     "portrait_seconds",
     "predicted_bytes",
+    "predicted_convergence_seconds",
+    "predicted_cutoff_seconds",
     "predicted_seconds",
     "solve_chain",
 ]
