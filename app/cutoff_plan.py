@@ -18,9 +18,10 @@ from app.keys import Key
 from app.plan import Curve, Plan
 from solver import CollectiveModel, SolverError
 from solver.convergence import ConvergenceQuestion
-from solver.needs import CutoffQuestion, Wanted
+from solver.needs import CutoffQuestion
 from solver.start import StartQuestion
 from solver.thermal import ThermalQuestion, temperature_of_quanta
+from solver.wanted import Wanted
 
 POINT = Key("point", "integer", 0, "number of the point, from 0, row after row", low=0)
 CUTOFF = Key("cutoff", "integer", None, "cutoff whose surroundings are looked at", low=0, high=100_000)

@@ -5,12 +5,27 @@ from __future__ import annotations
 import hashlib
 from pathlib import Path
 
+from solver.convergence import (
+    Convergence,
+    ConvergenceQuestion,
+    Plateau,
+    convergence,
+    predicted_convergence_seconds,
+)
 from solver.effective_spin import effective_spin_levels
 from solver.errors import ConvergenceError, ModelError, QuestionError, SolverError
 from solver.model import LARGEST_SPINS, CollectiveModel
+from solver.needs import (
+    CutoffAnswer,
+    CutoffQuestion,
+    Stated,
+    answer_cutoff,
+    predicted_cutoff_seconds,
+)
 from solver.observables import REGISTRY, Observable
 from solver.point import PointAnswer, PointQuestion, answer_point
 from solver.portrait import STATE_NAMES, Portrait, StateName, draw_portrait, portrait_seconds
+from solver.sizes import CalculationSize, calculation_size
 from solver.start import StartAnswer, StartQuestion, answer_start, predicted_start_seconds
 from solver.sweep import SERIES, SeriesSpec, predicted_bytes, predicted_seconds, solve_chain
 from solver.thermal import (
@@ -23,7 +38,7 @@ from solver.thermal import (
 )
 from solver.thermal_limit import critical_temperature, limit_thermal
 from solver.thermodynamic import LargeNLimit, large_n_limit
-from solver.wanted import Wanted
+from solver.wanted import QUANTITIES, Wanted
 
 
 def _digest_of_source() -> str:
@@ -39,16 +54,23 @@ SOLVER_DIGEST = _digest_of_source()
 
 __all__ = [
     "LARGEST_SPINS",
+    "QUANTITIES",
     "REGISTRY",
     "SERIES",
     "SOLVER_DIGEST",
     "STATE_NAMES",
     "THERMAL_QUANTITIES",
+    "CalculationSize",
     "CollectiveModel",
+    "Convergence",
     "ConvergenceError",
+    "ConvergenceQuestion",
+    "CutoffAnswer",
+    "CutoffQuestion",
     "LargeNLimit",
     "ModelError",
     "Observable",
+    "Plateau",
     "PointAnswer",
     "PointQuestion",
     "Portrait",
@@ -58,12 +80,16 @@ __all__ = [
     "StartAnswer",
     "StartQuestion",
     "StateName",
+    "Stated",
     "ThermalAnswer",
     "ThermalQuestion",
     "Wanted",
+    "answer_cutoff",
     "answer_point",
     "answer_start",
     "answer_thermal",
+    "calculation_size",
+    "convergence",
     "critical_temperature",
     "draw_portrait",
     "effective_spin_levels",
@@ -71,6 +97,8 @@ __all__ = [
     "limit_thermal",
     "portrait_seconds",
     "predicted_bytes",
+    "predicted_convergence_seconds",
+    "predicted_cutoff_seconds",
     "predicted_seconds",
     "predicted_start_seconds",
     "predicted_thermal_seconds",

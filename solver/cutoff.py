@@ -19,7 +19,7 @@ from solver.layers import LayerProfile
 Array = NDArray[np.float64]
 
 
-class _CutStates:
+class CutStates:
     """The states of a profile, cut at any layer: weights kept, and the levels they span."""
 
     def __init__(self, profile: LayerProfile, energies: Array) -> None:
@@ -49,6 +49,7 @@ class _CutStates:
         return out
 
     def enough(self, cutoff: int, need: float) -> bool:
+        """Whether every level errs by at most `need`."""
         return bool(np.all(self.errors(cutoff) <= need))
 
 
@@ -63,7 +64,7 @@ def weight_above(profile: LayerProfile) -> Array:
 
 def needed_cutoff(profile: LayerProfile, energies: Array, need: float, tail: float) -> int:
     """Smallest M with every level within `need` and no state with more than `tail` above M."""
-    states = _CutStates(profile, energies)
+    states = CutStates(profile, energies)
     low = profile.first + int(np.argmax(weight_above(profile) <= tail))
     if states.enough(low, need):
         return low

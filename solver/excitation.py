@@ -84,7 +84,7 @@ def excitation_levels(model: CollectiveModel, count: int) -> ExcitationSpectrum:
         model = CollectiveModel(model.spins, model.mode, -model.splitting, model.counter, 0.0, 0.0)
     wanted = max(count, 2)
     while True:
-        search = _BlockSearch(model, wanted)
+        search = BlockSearch(model, wanted)
         rows = search.run()
         same = [row for row in rows if tilt[1] != 0.0 or (row[1] - rows[0][1]) % 2 == 0]
         if len(same) >= 2:
@@ -93,7 +93,7 @@ def excitation_levels(model: CollectiveModel, count: int) -> ExcitationSpectrum:
     return ExcitationSpectrum(model, turned, tuple(search.level(row[1], row[2]) for row in rows), tilt)
 
 
-class _BlockSearch:
+class BlockSearch:
     """Branch and bound over K for the lowest levels."""
 
     def __init__(self, model: CollectiveModel, wanted: int) -> None:
@@ -102,7 +102,7 @@ class _BlockSearch:
         self.floors = Floors(model)
         self.seen: dict[int, Array] = {}
 
-    def _tridiagonal(self, low: int, high: int) -> tuple[Array, Array]:
+    def tridiagonal(self, low: int, high: int) -> tuple[Array, Array]:
         """Diagonal of block `low` and couplings of block `high`, over j = 0..min(N, high)."""
         model = self.model
         size = min(model.spins, high)
@@ -120,7 +120,7 @@ class _BlockSearch:
                     self.model.rotating,
                     "less coupling or fewer spins: too many excitation numbers compete",
                 )
-            diagonal, beside = self._tridiagonal(excitations, excitations)
+            diagonal, beside = self.tridiagonal(excitations, excitations)
             if diagonal.size == 1:
                 self.seen[excitations] = diagonal
             else:
@@ -164,11 +164,7 @@ class _BlockSearch:
         """Lowest levels as (energy, K, place), ascending, complete by the bounds."""
         self._probe()
         target = self._target()
-        highest = self.model.spins + min(
-            int((target - self.floors.share_floor(share)) / (share * self.model.mode)) + 1
-            for share in (0.25, 0.5, 0.7, 0.85, 0.95)
-        )
-        heap = [(-math.inf, 0, max(highest, *self.seen))]
+        heap = [(-math.inf, 0, max(self.highest(target), *self.seen))]
         margin = 64.0 * _EPS * (abs(target) + self.model.mode)
         while heap:
             bound, low, high = heapq.heappop(heap)
@@ -180,7 +176,7 @@ class _BlockSearch:
                 continue
             middle = (low + high) // 2
             for first, last in ((low, middle), (middle + 1, high)):
-                edge = self._bound(first, last)
+                edge = self.bound(first, last)
                 if edge <= target + margin:
                     heapq.heappush(heap, (edge, first, last))
         rows = [
@@ -191,15 +187,23 @@ class _BlockSearch:
         rows.sort(key=lambda row: (row[0], row[1]))
         return rows[: self.wanted]
 
-    def _bound(self, low: int, high: int) -> float:
+    def highest(self, energy: float) -> int:
+        """Excitation number beyond which every block lies above `energy`."""
+        return self.model.spins + min(
+            int((energy - self.floors.share_floor(share)) / (share * self.model.mode)) + 1
+            for share in (0.25, 0.5, 0.7, 0.85, 0.95)
+        )
+
+    def bound(self, low: int, high: int) -> float:
+        """Lower bound on every level of the blocks low..high; the lowest level itself for one block."""
         if low == high and low in self.seen:
             return float(self.seen[low][0])
-        diagonal, beside = self._tridiagonal(low, high)
+        diagonal, beside = self.tridiagonal(low, high)
         return lowest_of_tridiagonal(diagonal, beside)
 
     def level(self, excitations: int, place: int) -> ExcitationLevel:
         """Energy and vector of one found level."""
-        diagonal, beside = self._tridiagonal(excitations, excitations)
+        diagonal, beside = self.tridiagonal(excitations, excitations)
         scale = float(np.abs(diagonal).max()) + 2.0 * float(np.abs(beside).max(initial=0.0))
         if diagonal.size == 1:
             return ExcitationLevel(excitations, 0, float(diagonal[0]), 2 * _EPS * scale, np.ones(1))

@@ -2,20 +2,28 @@
 
 from __future__ import annotations
 
-import math
 from dataclasses import dataclass
 
 from solver.errors import QuestionError
 
-SMALLEST, LARGEST = 1e-12, 1e6
+QUANTITIES = ("energies", "gap", "boson_number", "order_parameter", "tail")
+# tightest and widest error that can be asked for
+RANGES: dict[str, tuple[float, float]] = {
+    "energies": (1e-12, 1.0),
+    "gap": (1e-9, 1.0),
+    "boson_number": (1e-9, 1e3),
+    "order_parameter": (1e-9, 1.0),
+    "tail": (1e-12, 1.0),
+}
 
 
 @dataclass(frozen=True, slots=True)
 class Wanted:
-    """Errors allowed; None leaves a quantity unasked.
+    """Errors a truncated calculation may have; None: not asked.
 
-    energies, gap: in units of the mode frequency; boson_number: quanta; order_parameter: absolute;
-    tail: weight above the cutoff, below 1. Raises QuestionError naming the field out of range.
+    energies, gap in units of the mode; boson_number in quanta; order_parameter and tail are
+    plain numbers. Raises QuestionError outside RANGES (upper end excluded), or if nothing is
+    asked.
     """
 
     energies: float | None = None
@@ -25,9 +33,19 @@ class Wanted:
     tail: float | None = None
 
     def __post_init__(self) -> None:
-        for name in ("energies", "gap", "boson_number", "order_parameter"):
-            value = getattr(self, name)
-            if value is not None and not (math.isfinite(value) and SMALLEST <= value <= LARGEST):
-                raise QuestionError(name, value, f"{SMALLEST:g} to {LARGEST:g}")
-        if self.tail is not None and not (math.isfinite(self.tail) and SMALLEST <= self.tail < 1.0):
-            raise QuestionError("tail", self.tail, f"{SMALLEST:g} to below 1")
+        for name in QUANTITIES:
+            value, (low, high) = getattr(self, name), RANGES[name]
+            if value is not None and not low <= value < high:
+                raise QuestionError(name, value, f"{low:g} up to below {high:g}, or None")
+        if not self.asked:
+            raise QuestionError("wanted", None, f"an error for at least one of {', '.join(QUANTITIES)}")
+
+    @property
+    def asked(self) -> tuple[str, ...]:
+        """The quantities asked for, in the order of QUANTITIES."""
+        return tuple(name for name in QUANTITIES if getattr(self, name) is not None)
+
+    def of(self, quantity: str) -> float | None:
+        """Wanted error of one quantity."""
+        value: float | None = getattr(self, quantity)
+        return value
