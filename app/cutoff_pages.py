@@ -12,7 +12,7 @@ from app import cutoff_exports, exports, identity, links, scenario
 from app.cutoff_plan import CUTOFF, POINT, margins_at, place_of
 from app.cutoff_sheets import CUTOFF_KEYS, QUANTITIES, CutoffSheet, across_values
 from app.cutoff_summary import quantities_of
-from app.cutoff_words import NAMES, allowed_of, place_words
+from app.cutoff_words import NAMES, allowed_of, place_words, question_title, shown_sheet
 from app.errors import SheetError, SoftmodeError
 from app.face import Face, face_of, typed_texts
 from app.jobs import Job
@@ -21,6 +21,7 @@ from app.pages import COUPLING_AS, Shell, choices_of, query_of, range_words, ren
 from app.points import PointDesk, check_margins_price
 from app.replies import accepted, body_of, client_of, engine_of, finished, json_reply, pairs_of, table_reply
 from app.sheets import default_range
+from app.symbols import interval_in_force
 
 router = APIRouter()
 
@@ -165,7 +166,7 @@ async def _result(request: Request) -> tuple[dict[str, Any] | None, Job]:
 
 def face_with_desk(question: CutoffSheet, coupling_as: str = "lambda") -> Face:
     """Return the face of the sheet, with the query, the texts and the placeholders of the whole question."""
-    plain = face_of(question.sheet, coupling_as)
+    plain = _face_of_axes(question, coupling_as)
     query = links.cutoff_query(question)
     explicit, data = question.explicit_own(), question.data()
     texts = {}
@@ -178,6 +179,23 @@ def face_with_desk(question: CutoffSheet, coupling_as: str = "lambda") -> Face:
         link=links.whole(query, links.CUTOFF_PAGE).lstrip("/"),
         texts=plain.texts | texts,
         placeholders=plain.placeholders | _placeholders(question),
+    )
+
+
+def _face_of_axes(question: CutoffSheet, coupling_as: str) -> Face:
+    """Return the face of the sheet; both axes of a map count as swept."""
+    plain = face_of(question.sheet, coupling_as)
+    if question["across"] is None:
+        return plain
+    swept = face_of(shown_sheet(question), coupling_as)
+    range_shown = interval_in_force(question["across"], question["low"], question["high"], question.sheet)
+    return replace(
+        plain,
+        title=question_title(question),
+        member=swept.member,
+        hamiltonian=swept.hamiltonian,
+        values=[*swept.values[:-1], range_shown],
+        knobs=swept.knobs,
     )
 
 

@@ -187,7 +187,8 @@ def _judged(ensemble: str) -> tuple[str, ...]:
 def _check_company(own: Mapping[str, Any]) -> None:
     """Refuse keys that mean nothing without another one."""
     for name, needed in _NEEDS.items():
-        if name in own and own.get(needed) in {None, "none"}:
+        given = own.get(name, CUTOFF_KEYS[name].default) != CUTOFF_KEYS[name].default
+        if given and own.get(needed) in {None, "none"}:
             raise SheetError(
                 "needs-another",
                 f"'{name}' means nothing without '{needed}'",

@@ -6,7 +6,8 @@ from typing import Any
 from app.cutoff_sheets import CutoffSheet
 from app.cutoff_summary import START
 from app.keys import number_text
-from app.symbols import energy_unit, symbol
+from app.sheets import Sheet
+from app.symbols import energy_unit, sheet_title, symbol
 
 NAMES = {
     "energies": "levels",
@@ -14,7 +15,7 @@ NAMES = {
     "boson_number": "boson number",
     "order_parameter": "order parameter",
     "tail": "weight above the cutoff",
-    START: "start of the mode and what follows",
+    START: "time evolution from its start",
 }
 STATUS_WORDS = {
     "proven": "proven",
@@ -58,6 +59,25 @@ def _equals(question: CutoffSheet, name: str, value: float) -> str:
 def shown(value: float) -> str:
     """Return a number in six digits, with a real minus sign."""
     return number_text(float(f"{value:.6g}")).replace("-", "−")
+
+
+def shown_sheet(question: CutoffSheet) -> Sheet:
+    """Return the sheet with the second axis of a map as a family: for words that say what varies."""
+    across = question["across"]
+    if across is None:
+        return question.sheet
+    # a multiple of the critical coupling needs one: 0 is left out
+    ends = [value for value in (question["low"], question["high"]) if value != 0.0]
+    return question.sheet.changed(each={"name": across, "values": ends})
+
+
+def question_title(question: CutoffSheet) -> str:
+    """Return the title of a question: its own, or one that says what is swept."""
+    title = sheet_title(shown_sheet(question))
+    if question["across"] is None or question.sheet.title:
+        return title
+    written = symbol(question["across"], question.sheet.frame)
+    return f"{title}, {written.plain} from {shown(question['low'])} to {shown(question['high'])}"
 
 
 def levels_words(cutoff: int, boson: str) -> str:

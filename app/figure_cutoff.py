@@ -1,5 +1,6 @@
 """The pictures of a cutoff question: needed cutoffs along the axis, or the map of the covering one."""
 
+import math
 from collections.abc import Mapping, Sequence
 from typing import Any
 
@@ -7,19 +8,20 @@ from app import figure_style as style
 from app.cutoff_plan import model_at
 from app.cutoff_sheets import CutoffSheet
 from app.cutoff_summary import quantities_of
-from app.cutoff_words import NAMES, allowed_of, answer_words, size_words
+from app.cutoff_words import NAMES, allowed_of, answer_words, question_title, size_words
 from app.figure_joins import Numbers, crossings
 from app.figure_panels import Panel
 from app.figure_point import SEQUENTIAL
 from app.figure_style import Stroke
 from app.figures import stacked
 from app.plan import axis_values
-from app.symbols import curve_label, energy_unit, sheet_title, symbol, with_unit
+from app.symbols import curve_label, energy_unit, symbol, with_unit
 
 STATED = Stroke("critical", "dash", 1.8)
 COVERING = Stroke("ink", "solid", 1.2)
 STATUS_DASH = {"proven": "solid", "checked": "dash"}
 MAP_HEIGHT = 420
+LEAST_SHARE = -5.0
 
 
 def picture(question: CutoffSheet, result: Mapping[str, Any]) -> dict[str, Any]:
@@ -46,7 +48,7 @@ def picture(question: CutoffSheet, result: Mapping[str, Any]) -> dict[str, Any]:
     swept = symbol(question.sheet.along, question.sheet.frame)
     return {
         "figure": figure(question, result),
-        "title": sheet_title(question.sheet),
+        "title": question_title(question),
         "words": answer_words(question, result),
         "sizes": [size_words(size) for size in result["summary"]["sizes"]],
         "readout": kept
@@ -116,7 +118,7 @@ def _lines(question: CutoffSheet) -> list[tuple[str, str, Stroke, range]]:
 
 
 def _needed_panel(question: CutoffSheet, result: Mapping[str, Any]) -> Panel:
-    title = "Cutoff needed: largest n that must be kept"
+    title = "Largest n needed"
     panel = Panel("needed", title, "n", 330, from_zero=True)
     xs = result["x"]
     if question["stated"] is not None:
@@ -136,8 +138,6 @@ def _needed_panel(question: CutoffSheet, result: Mapping[str, Any]) -> Panel:
             if x:
                 panel.traces.append(style.curve(x, y, drawn, "y", f"{label}, {claim}"))
                 panel.key.append(drawn.key(f"{label}, {claim}"))
-    if question["stated"] is not None:
-        panel.key.append(STATED.key(f"stated, n = {question['stated']}"))
     return panel
 
 
@@ -166,6 +166,7 @@ def _where_claimed(
 def _shade(panel: Panel, question: CutoffSheet, result: Mapping[str, Any]) -> None:
     """Draw the stated cutoff, and fill what lies between it and what is needed."""
     sheet, stated = question.sheet, float(question["stated"])
+    panel.key.append(STATED.key(f"stated, n = {question['stated']}"))
     length = sheet.points
     outline_x: list[float | None] = []
     outline_y: list[float | None] = []
@@ -181,7 +182,7 @@ def _shade(panel: Panel, question: CutoffSheet, result: Mapping[str, Any]) -> No
                 run = []
     if outline_x:
         panel.traces.append(style.band(outline_x, outline_y, Stroke("warning"), "y", "not enough"))
-        panel.key.append(Stroke("warning", "solid", 6.0).key("stated cutoff not enough"))
+        panel.key.append(Stroke("warning", "solid", 6.0).key("not enough"))
     panel.traces.append(style.curve([sheet.start, sheet.stop], [stated, stated], STATED, "y", "stated"))
 
 
@@ -189,12 +190,13 @@ def _error_panel(question: CutoffSheet, result: Mapping[str, Any]) -> Panel:
     """Draw the error at the stated cutoff in units of what is allowed."""
     panel = Panel(
         "stated",
-        f"Error at the stated cutoff n = {question['stated']}, over what is allowed",
+        f"Error at n = 0..{question['stated']} over allowed error",
         "error / allowed",
         230,
     )
     allowed, errors = allowed_of(question), result["stated"]["error"]
     xs = result["x"]
+    largest = 10.0
     x: Numbers
     y: Numbers
     for quantity, label, stroke, points in _lines(question):
@@ -207,16 +209,18 @@ def _error_panel(question: CutoffSheet, result: Mapping[str, Any]) -> Panel:
                 y.append(max(shares))
         if x:
             panel.traces.append(style.curve(x, y, stroke, "y2", label))
-            panel.key.append(stroke.key(label if question.second is None else f"worst, {label}"))
+            largest = max(largest, *y)
     ends: Numbers = [question.sheet.start, question.sheet.stop]
     panel.traces.append(style.curve(ends, [1.0, 1.0], STATED, "y2", "allowed"))
     panel.key.append(STATED.key("allowed"))
+    # what is far below the allowed error needs no room; both ends are decimal logarithms
+    panel.limits = (LEAST_SHARE, math.log10(largest) + 0.5)
     return panel
 
 
 def _map_panel(question: CutoffSheet, result: Mapping[str, Any]) -> Panel:
     """Draw the covering cutoff over both axes, and the border of the stated one."""
-    panel = Panel("needed", "Cutoff needed: largest n that must be kept", "", MAP_HEIGHT)
+    panel = Panel("needed", "Largest n needed", "", MAP_HEIGHT)
     length = question.sheet.points
     rows = list(question.curves)
     values = result["covering"]

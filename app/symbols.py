@@ -286,12 +286,18 @@ def values_in_force(sheet: Sheet, places: Mapping[str, float] | None = None) -> 
         return shown + [
             _equation(name, f"<mn>{_signed(value)}</mn>", sheet, unit) for name, value in places.items()
         ]
-    interval = f"<mn>{_signed(sheet.start)}</mn><mo>…</mo><mn>{_signed(sheet.stop)}</mn>"
-    shown.append(_equation(sheet.along, interval, sheet, unit))
+    shown.append(interval_in_force(sheet.along, sheet.start, sheet.stop, sheet))
     if sheet.each is not None:
         numbers = "<mo>,</mo>".join(f"<mn>{_signed(value)}</mn>" for value in sheet.each.values)
         shown.append(_equation(sheet.each.name, numbers, sheet, unit))
     return shown
+
+
+def interval_in_force(name: str, low: float, high: float, sheet: Sheet) -> str:
+    """Return a swept quantity and its range as a MathML element."""
+    unit = "" if sheet.unit == "none" else f"<mspace width='.25em'/><mtext>{escape(sheet.unit)}</mtext>"
+    interval = f"<mn>{_signed(low)}</mn><mo>…</mo><mn>{_signed(high)}</mn>"
+    return _equation(name, interval, sheet, unit)
 
 
 def _overridden(name: str, sheet: Sheet) -> bool:

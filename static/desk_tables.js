@@ -24,8 +24,9 @@ function error(value) {
 
 function fill(table, head, rows) {
   const line = element("tr");
-  for (const text of head) {
-    const cell = element("th", "", text);
+  for (const [column, text] of head.entries()) {
+    const wordy = column === 0 || typeof rows[0]?.[column] === "object";
+    const cell = element("th", wordy ? "words" : "", text);
     cell.scope = "col";
     line.append(cell);
   }
