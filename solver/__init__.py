@@ -16,11 +16,9 @@ from solver.effective_spin import effective_spin_levels
 from solver.errors import ConvergenceError, ModelError, QuestionError, SolverError
 from solver.model import LARGEST_SPINS, CollectiveModel
 from solver.needs import (
-    QUANTITIES,
     CutoffAnswer,
     CutoffQuestion,
     Stated,
-    Wanted,
     answer_cutoff,
     predicted_cutoff_seconds,
 )
@@ -30,6 +28,7 @@ from solver.portrait import STATE_NAMES, Portrait, StateName, draw_portrait, por
 from solver.sizes import CalculationSize, calculation_size
 from solver.sweep import SERIES, SeriesSpec, predicted_bytes, predicted_seconds, solve_chain
 from solver.thermodynamic import LargeNLimit, large_n_limit
+from solver.wanted import QUANTITIES, Wanted
 
 
 def _digest_of_source() -> str:

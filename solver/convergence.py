@@ -19,20 +19,11 @@ from solver.converged import Converged, converge
 from solver.errors import QuestionError
 from solver.forecast import first_cutoff, forecast
 from solver.model import CollectiveModel
-from solver.needs import (
-    COMMON,
-    MOST_LEVELS,
-    CutoffQuestion,
-    Wanted,
-    answer_cutoff,
-    error_of,
-    levels_bound,
-    solving_accuracy,
-    tail_above,
-    truncations_of,
-)
+from solver.needs import MOST_LEVELS, CutoffQuestion, answer_cutoff, solving_accuracy, truncations_of
 from solver.shifted_truncation import ShiftedTruncations
-from solver.truncated import largest_affordable
+from solver.truncated import error_of, largest_affordable
+from solver.truncation_bounds import levels_bound, tail_above
+from solver.wanted import COMMON, Wanted
 
 Array = NDArray[np.float64]
 ConvergenceBasis = Literal["fock", "shifted"]
