@@ -146,7 +146,7 @@ def truncations_of(converged: Converged, wanted: Wanted, top: int) -> Truncation
     state = 1e-2 * (wanted.of("order_parameter") or 1e-2)
     if wanted.boson_number is not None:
         state = min(state, 1e-2 * wanted.boson_number / math.sqrt(converged.boson_number + 1.0))
-    others = 0.1 * math.sqrt(wanted.least("energies", "gap") or 1e-3)
+    others = 0.03 * math.sqrt(wanted.least("energies", "gap") or 1e-3)
     accuracy = Accuracy(max(1e-11, min(state, 1e-4)), max(1e-8, min(1e-3, others)))
     negligible = 1e-2 * (wanted.least("gap", "boson_number", "order_parameter") or 1e-3)
     return FockTruncations(converged, top, accuracy, negligible)

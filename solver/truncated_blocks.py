@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import heapq
 import math
+from collections.abc import Iterable
 
 import numpy as np
 from numpy.typing import NDArray
@@ -155,13 +156,35 @@ class BlockTruncations:
         return values_found
 
     def _levels(self, cutoff: int) -> float:
-        """Largest error of a shown level, each compared within its block."""
-        worst = 0.0
+        """Largest error of a shown level, each compared at its place among those of its parity."""
+        exact: dict[int, list[float]] = {}
         for block, sector in self.converged.sectors.items():
-            if not sector.shown:
-                continue
-            if block > cutoff + self.spectrum.model.spins or self._size(block, cutoff) < sector.shown:
+            if sector.shown:
+                levels = sector.energies[: sector.shown].tolist()
+                exact.setdefault(self._parity(block), []).extend(levels)
+        worst = 0.0
+        for parity, energies in exact.items():
+            found = self._lowest_of_parity(parity, cutoff, len(energies))
+            if len(found) < len(energies):
                 return math.inf
-            values = self._lowest(block, cutoff, sector.shown)
-            worst = max(worst, float(np.max(values - sector.energies[: sector.shown])))
+            errors = (high - low for high, low in zip(found, sorted(energies), strict=True))
+            worst = max([worst, *errors])
         return worst
+
+    def _lowest_of_parity(self, parity: int, cutoff: int, count: int) -> list[float]:
+        """The `count` lowest levels of one parity over all truncated blocks."""
+        most = cutoff + self.spectrum.model.spins
+        seeds = {block for block in self.converged.sectors if block <= most}
+        # an odd stride visits both parities
+        seeds.update(range(0, most + 1, max(1, most // 16 | 1)))
+        reached = self._merged(seeds, parity, cutoff, count)
+        if len(reached) < count:
+            return self._merged(range(most + 1), parity, cutoff, count)
+        return self._merged(self._competing(reached[-1], cutoff), parity, cutoff, count)
+
+    def _merged(self, blocks: Iterable[int], parity: int, cutoff: int, count: int) -> list[float]:
+        levels: list[float] = []
+        for block in blocks:
+            if self._parity(block) == parity:
+                levels.extend(self._lowest(block, cutoff, count).tolist())
+        return sorted(levels)[:count]
