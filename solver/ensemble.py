@@ -340,9 +340,9 @@ def _reach(squares: Array, chances: Array, quantum: float, small: float) -> int:
     room = 1.0 - thermal * grown
     usable = room > 0.0
     rates, grown, room = rates[usable], grown[usable], room[usable]
-    busy = chances > small
+    busy = chances >= min(small, float(chances.max()))
     logs = squares[busy, None] * grown / room - np.log(room) + np.log(chances[busy, None] / small)
-    return max(2, math.ceil(float(np.min(logs / rates, axis=1).max())) - 1)
+    return max(2, math.ceil(max(0.0, float(np.min(logs / rates, axis=1).max()))) - 1)
 
 
 def _ground_energy(model: CollectiveModel, cutoff: int) -> float:
