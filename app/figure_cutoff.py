@@ -207,9 +207,9 @@ def _error_panel(question: CutoffSheet, result: Mapping[str, Any]) -> Panel:
             if shares:
                 x.append(xs[point])
                 y.append(max(shares))
+                largest = max(largest, *shares)
         if x:
             panel.traces.append(style.curve(x, y, stroke, "y2", label))
-            largest = max(largest, *y)
     ends: Numbers = [question.sheet.start, question.sheet.stop]
     panel.traces.append(style.curve(ends, [1.0, 1.0], STATED, "y2", "allowed"))
     panel.key.append(STATED.key("allowed"))
