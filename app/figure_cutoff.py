@@ -121,24 +121,39 @@ def _needed_panel(question: CutoffSheet, result: Mapping[str, Any]) -> Panel:
     title = "Largest n needed"
     panel = Panel("needed", title, "n", 330, from_zero=True)
     xs = result["x"]
+    claims: set[str] = set()
     if question["stated"] is not None:
         _shade(panel, question, result)
     for quantity, label, stroke, points in _lines(question):
         if quantity == "covering":
-            kept = [point for point in points if result["covering"][point] is not None]
-            panel.traces.append(
-                style.curve([xs[p] for p in kept], [result["covering"][p] for p in kept], stroke, "y", label)
-            )
+            needed, status = _of_curve(result, points)
             panel.key.append(stroke.key(label))
-            continue
-        needed, status = result["needed"][quantity], result["status"][quantity]
+        else:
+            needed, status = result["needed"][quantity], result["status"][quantity]
         for claim, dash in STATUS_DASH.items():
             drawn = stroke.dashed(dash)
             x, y = _where_claimed(xs, needed, status, claim)
             if x:
                 panel.traces.append(style.curve(x, y, drawn, "y", f"{label}, {claim}"))
-                panel.key.append(drawn.key(f"{label}, {claim}"))
+                if quantity != "covering":
+                    panel.key.append(drawn.key(f"{label}, {claim}"))
+                claims.add(claim)
+    if question.second is not None:
+        panel.key += [
+            COVERING.dashed(dash).key(claim) for claim, dash in STATUS_DASH.items() if claim in claims
+        ]
     return panel
+
+
+def _of_curve(result: Mapping[str, Any], points: range) -> tuple[list[int | None], list[str | None]]:
+    """Return the covering cutoff of one curve's points, None elsewhere, and what is claimed of it."""
+    needed: list[int | None] = [None] * len(result["x"])
+    status: list[str | None] = [None] * len(result["x"])
+    for point in points:
+        needed[point] = result["covering"][point]
+        if result["deciding"][point] is not None:
+            status[point] = result["status"][result["deciding"][point]][point]
+    return needed, status
 
 
 def _where_claimed(

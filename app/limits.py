@@ -3,6 +3,7 @@
 import functools
 from typing import Any
 
+from app.cutoff_sheets import CUTOFF_KEYS
 from app.keys import GRAMMAR_VERSION, KEYS, SWEPT, Key
 from app.places import MEMBER, STATE
 from app.plan import CHUNK_SECONDS
@@ -54,6 +55,7 @@ def describe(settings: Settings) -> dict[str, Any]:
             "swept": list(SWEPT),
             "keys": [_described(key) for key in KEYS.values()],
             "point_keys": [_described(key) for key in (MEMBER, STATE)],
+            "cutoff_keys": [_described(key) for key in CUTOFF_KEYS.values()],
         },
     }
 
