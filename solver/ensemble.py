@@ -36,6 +36,7 @@ from solver.spin import projections, raising_elements
 Array = NDArray[np.float64]
 
 LARGEST_BLOCK = 12_000
+LARGEST_BAND = 30_000_000
 _MOST_GROWTH = 30
 _EPS = float(np.finfo(np.float64).eps)
 
@@ -196,12 +197,14 @@ class Ensemble:
     def _trace(self, plan: SectorPlan, cutoff: int, raised: float) -> SectorTrace:
         if plan.model is None:
             return bare_mode_trace(self.model.mode, self.beta, cutoff)
-        size = (cutoff + 1) * (plan.sector + 1) // (2 if plan.model.conserves_parity else 1)
-        if size > LARGEST_BLOCK and self.beta * self.model.mode < 1.0:
+        blocks = 2 if plan.model.conserves_parity else 1
+        size = (cutoff + 1) * (plan.sector + 1) // blocks
+        hot = self.beta * self.model.mode < 1.0
+        if (hot and size > LARGEST_BLOCK) or size * (plan.sector + 1) // blocks > LARGEST_BAND:
             raise QuestionError(
-                "temperature",
-                1.0 / self.beta,
-                f"one that needs at most {LARGEST_BLOCK} states per symmetry block (this one: {size})",
+                "temperature" if hot else "spins",
+                1.0 / self.beta if hot else self.model.spins,
+                f"fewer states per symmetry block than these {size}: fewer spins, less coupling or colder",
             )
         return sector_trace(plan.model, self.beta, cutoff, plan.ceiling + raised)
 

@@ -67,6 +67,8 @@ def bessel_table(arguments: Array, orders: int) -> Array:
     out /= total[:, None]
     out[flat] = 0.0
     out[flat, 0] = 1.0
+    if orders > 1:
+        out[flat, 1] = 0.5 * arguments[flat]
     return out
 
 

@@ -33,6 +33,8 @@ _POINTS = 10
 # squared distance allowed between cut and full evolution, and what may be counted as above, of `tail`
 _ESCAPED = 1e-3
 _DROPPED = 0.02
+# relative error of a peak read from the grid
+_BETWEEN_TIMES = 1e-3
 _GROUP = 16
 _MOST_GROWTH = 25
 
@@ -73,7 +75,8 @@ class StartQuestion:
 class StartAnswer:
     """Cutoffs at the start ("proven") and over the whole evolution ("checked").
 
-    mean_bosons_most: largest <n> met; weight_error: bound on what the propagation's own cutoff adds.
+    mean_bosons_most: largest <n> met; weight_error: error of the weight above `needed`, a bound on what
+    the propagation's own cutoff changes and an estimate for peaks between the times.
     """
 
     at_start: int
@@ -267,10 +270,13 @@ def answer_start(question: StartQuestion) -> StartAnswer:
     above = np.cumsum(layers[:, ::-1], axis=1)[:, ::-1]
     above = np.append(above[:, 1:], np.zeros((times.size, 1)), axis=1) + dropped
     most = _highest(above)
-    fine = most <= question.tail
-    moved = int(np.argmax(fine)) if fine.any() else most.size - 1
-    quanta = layers @ np.arange(layers.shape[1]) + dropped_quanta
     escaped = sum(part.escaped for part in parts)
+    weight_error = 2.0 * math.sqrt(question.tail * escaped) + escaped + _BETWEEN_TIMES * question.tail
+    fine = most + weight_error <= question.tail
+    moved = int(np.argmax(fine)) if fine.any() else most.size - 1
+    if question.periods == 0.0 or question.model.is_uncoupled:
+        moved, weight_error = at_start, 0.0
+    quanta = layers @ np.arange(layers.shape[1]) + dropped_quanta
     stated = None
     if question.stated is not None:
         weight = float(most[min(question.stated, most.size - 1)])
@@ -286,7 +292,7 @@ def answer_start(question: StartQuestion) -> StartAnswer:
         needed=max(at_start, moved),
         mean_bosons_most=float(_highest(quanta[:, None])[0]),
         stated=stated,
-        weight_error=2.0 * math.sqrt(question.tail * escaped) + escaped,
+        weight_error=weight_error,
         note=_note(question),
     )
 
