@@ -174,8 +174,8 @@ def _stated_words(
                 "key": quantity,
                 "name": NAMES[quantity].capitalize(),
                 "good": _where(question, part),
-                "worst": stated["worst"].get(quantity, {}).get("error"),
-                "at": _worst_place(question, stated["worst"].get(quantity)),
+                "worst": (stated["worst"][quantity] or {}).get("error"),
+                "at": _worst_place(question, stated["worst"][quantity]),
                 "allowed": allowed_of(question)[quantity],
             }
             for quantity, part in stated["per_quantity"].items()

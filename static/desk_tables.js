@@ -101,8 +101,10 @@ export class DeskTables {
   reverse() {
     if (this.words.stated === null) return;
     const rows = this.words.stated.quantities.map((line) => {
-      const short = line.worst !== null && line.worst > line.allowed;
-      return [line.name, { words: line.good, mark: short ? "short" : "" }, line.worst === null ? "–" : error(line.worst), { words: line.at }, error(line.allowed)];
+      const short = line.good !== "everywhere" && line.good !== "not judged";
+      // without an error there is a place only where the cutoff does not hold the levels asked for
+      const worst = line.worst === null && line.at ? "too few levels" : error(line.worst);
+      return [line.name, { words: line.good, mark: short ? "short" : "" }, worst, { words: line.at }, error(line.allowed)];
     });
     fill(part("reverse-table"), ["quantity", "good enough", "largest error", "at", "allowed"], rows);
   }

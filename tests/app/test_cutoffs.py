@@ -474,6 +474,17 @@ def test_the_summary_follows_from_the_points(server: RunningServer) -> None:
         assert worst["error"] == max(stated["error"][quantity])
 
 
+def test_a_cutoff_that_does_not_hold_the_levels(server: RunningServer) -> None:
+    """One spin and n = 0 make two states; six levels cannot be had from them."""
+    result = server.client.get("/api/cutoff?spins=1&points=3&stated=0").json()
+    assert result["stated"]["error"]["energies"] == [None] * 3
+    assert result["stated"]["good"]["energies"] == [False] * 3
+    assert result["summary"]["stated"]["worst"]["energies"]["error"] is None
+    assert result["summary"]["stated"]["good_points"] == 0
+    words = picture(question("spins=1&points=3&stated=0"), result)["words"]["stated"]
+    assert words["verdict"] == "Your 1 boson level (n = 0 alone) is enough nowhere on the whole sweep."
+
+
 def test_maps_lie_row_after_row(server: RunningServer) -> None:
     result = server.client.get("/api/cutoff?spins=3&points=5&across=bias&rows=3&high=0.4&stated=5").json()
     assert result["second"] == {"name": "bias", "values": [0.0, 0.2, 0.4]}
