@@ -85,6 +85,12 @@ export class DeskTables {
     });
     fill(part("quantities"), ["quantity", "error allowed", "largest n", "levels", "needed most at", "claim"], rows);
     this.valuesThere();
+    part("more-words").textContent = this.words.more.join(" ");
+    const { deciding_point: address, rows: mapped } = this.data;
+    part("open-point").hidden = !address;
+    if (address) part("open-point").href = address;
+    part("map-rows").hidden = !mapped;
+    if (mapped) fill(part("rows-table"), ["needed most at", "largest n", "levels"], mapped.map((row) => [row.place, plain(row.cutoff), plain(row.cutoff + 1)]));
   }
 
   // What the state is like at the point that decides.

@@ -148,6 +148,9 @@ def test_from_the_sweep_to_the_desk_and_back(visit: VisitFactory) -> None:
     page.get_by_role("link", name="How many phonon levels?").click()
     page.wait_for_selector(ANSWERED, state="attached")
     assert one.query == f"{QUERY}&at=0.6"
+    page.click("#open-point")
+    page.wait_for_url(f"**/point?{QUERY}&at=0.75")
+    page.wait_for_selector("html[data-drawn]", state="attached")
 
 
 def test_thermal_equilibrium_and_a_start(visit: VisitFactory) -> None:
@@ -166,6 +169,8 @@ def test_thermal_equilibrium_and_a_start(visit: VisitFactory) -> None:
     page.select_option("#box-start", "thermal")
     page.locator("#quantities", has_text="Time evolution from its start").wait_for()
     page.locator("#margins", has_text="Time evolution from its start").wait_for()
+    assert "the bare mode has the mean number 1" in page.inner_text("#more-words")
+    assert "The start alone needs" in page.inner_text("#more-words")
     page.select_option("#box-ensemble", "lowest")
     one.until("!location.search.includes('ensemble')")
     assert one.query == "spins=3&points=5&start=thermal"
@@ -183,6 +188,9 @@ def test_a_map(visit: VisitFactory) -> None:
     page.locator("#plot .heatmaplayer image").first.wait_for(state="attached")
     assert "ε from 0 to 1" in page.inner_text("h1")
     assert page.locator("#strip").is_hidden()
+    page.click("#map-rows summary")
+    assert page.locator("#rows-table tr").count() == 5
+    assert page.locator("#open-point").is_hidden()
 
 
 def test_a_long_computation_shows_progress_and_can_be_cancelled(visit: VisitFactory) -> None:
