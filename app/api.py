@@ -31,10 +31,10 @@ from app.jobs import Job
 from app.keys import Key
 from app.points import PointDesk
 from app.replies import accepted as _accepted
+from app.replies import address_of, finished, table_reply
 from app.replies import body_of as _body
 from app.replies import client_of as _client
 from app.replies import engine_of as _engine
-from app.replies import finished, table_reply
 from app.replies import json_reply as _json
 from app.replies import pairs_of as _pairs
 from app.replies import raise_if_over as _raise_if_over
@@ -123,10 +123,7 @@ async def sweep_python(request: Request) -> Response:
 async def link_of_form(request: Request) -> Response:
     """Return the canonical link for what was typed into a form; a long one is stored under a short name."""
     sheet = links.from_form(await _body(request))
-    query = await _engine(request).store.shortened(links.query_of(sheet))
-    return _json(
-        {"link": links.whole(query), "query": query, "sheet": sheet.data(), "id": identity.sheet_id(sheet)}
-    )
+    return _json(await address_of(request, sheet))
 
 
 # -- jobs ---------------------------------------------------------------------------------------
@@ -136,23 +133,24 @@ async def link_of_form(request: Request) -> Response:
 async def start_job(request: Request) -> Response:
     """Start the job of a sheet, or join it, and hand out a lease.
 
-    With `first` the answer waits that many seconds for the first points and brings their picture.
+    The body is a sheet, `{"link": ...}`, or `{"form": ...}` with what was typed; the answer to a form
+    brings the address of its sheet. A form may give up a lease on what was shown before, as
+    `"instead": {"id": ..., "lease": ...}`: once the new job is held. With `first` the answer waits that
+    many seconds for the first points and brings their picture.
     """
     pairs = _pairs(request)
     patience = links.take(pairs, "first", FIRST)
     body = await _body(request)
-    if set(body) == {"link"}:
-        if not isinstance(body["link"], str):
-            raise SheetError("wrong-type", "'link' must be text", "link", body["link"], "a link")
-        sheet: Question = links.parse_link(await _whole_link(request, body["link"]))
-    else:
-        sheet = Sheet.model_validate(body)
     engine = _engine(request)
+    sheet = await _sheet_asked(request, body)
     job, lease = await engine.submit(sheet, _client(request))
+    _leave_other(engine, body.get("instead") if "form" in body else None)
     if job.error is not None:
         raise job.error
     facts = job.snapshot(engine.pool.size)
     facts |= {"lease": lease, "lease_seconds": engine.settings.lease_seconds}
+    if "form" in body:
+        facts["address"] = await address_of(request, sheet)
     if patience:
         await job.wait_until(lambda one: one.done > 0 or not one.is_active, patience)
         facts |= job.snapshot(engine.pool.size)
@@ -162,6 +160,28 @@ async def start_job(request: Request) -> Response:
                 await asyncio.to_thread(exports.encode, facts), 202, media_type="application/json"
             )
     return _json(facts, 200 if job.state == "done" else 202)
+
+
+async def _sheet_asked(request: Request, body: dict[str, Any]) -> Question:
+    """Return what a body asks for: as a link, as a form, or key by key."""
+    if set(body) == {"link"}:
+        if not isinstance(body["link"], str):
+            raise SheetError("wrong-type", "'link' must be text", "link", body["link"], "a link")
+        return links.parse_link(await _whole_link(request, body["link"]))
+    if "form" in body and set(body) <= {"form", "instead"}:
+        if not isinstance(body["form"], dict):
+            raise SheetError("wrong-type", "'form' must be an object", "form", body["form"], "an object")
+        return links.from_form(body["form"])
+    return Sheet.model_validate(body)
+
+
+def _leave_other(engine: Engine, held: Any) -> None:
+    """Give up the lease that a form names; one that has lapsed, or names nothing, is given up already."""
+    if not isinstance(held, dict):
+        return
+    job = engine.jobs.get(str(held.get("id")))
+    if job is not None:
+        engine.leave(job, str(held.get("lease")))
 
 
 async def _whole_link(request: Request, link: str) -> str:
