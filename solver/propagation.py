@@ -232,7 +232,9 @@ def evolution_seconds(
     stages = math.ceil((times.size - 1) / together)
     columns = starts * (2.0 if stages > 1 else 1.0)
     terms = terms_needed(step * together, single=single)
-    per_term = dimension * columns * (9.0 * _STEP_COST + together * _SUM_COST * (1.0 if single else 2.0))
+    # single columns use the caches badly
+    product = 9.0 * _STEP_COST * (1.0 + 1.5 / columns)
+    per_term = dimension * columns * (product + together * _SUM_COST * (1.0 if single else 2.0))
     table = terms * (together * 2e-8 + 1.2e-5)
     measured = times.size * starts * dimension * 6e-9
     return blocks * 1e-3 + table + measured + stages * terms * (per_term + blocks * _CALL_COST)
