@@ -7,6 +7,7 @@ j = m + N/2 spin excitations; parity +1 keeps n + j even.
 from __future__ import annotations
 
 import math
+from collections.abc import Iterator
 from functools import cached_property
 
 import numpy as np
@@ -61,7 +62,8 @@ class FockBlock:
         kept = quanta <= cutoff
         return quanta[kept], spins[kept]
 
-    def _diagonal(self) -> Array:
+    def diagonal(self) -> Array:
+        """Diagonal of P (H - shift) P."""
         half = 0.5 * self.model.spins
         out: Array = self.model.mode * self.quanta + self.model.splitting * (self.raised - half) - self.shift
         return out
@@ -86,7 +88,13 @@ class FockBlock:
     def band(self) -> Array:
         """Lower banded storage of P (H - shift) P."""
         store = np.zeros((self.dimension, self.half_width + 1))
-        store[:, 0] = self._diagonal()
+        store[:, 0] = self.diagonal()
+        for at, to, element in self.couplings():
+            store[at, to - at] += element
+        return store.T
+
+    def couplings(self) -> Iterator[tuple[Index, Index, Array]]:
+        """Non-zero elements below the diagonal of P H P: columns, rows and values."""
         here = np.arange(self.dimension)
         n, j = self.quanta, self.raised
         root = np.sqrt(n + 1.0) / self._root
@@ -98,11 +106,10 @@ class FockBlock:
         ):
             at = here[mask]
             element = strength * root[at] * self.steps[np.minimum(j[at], j[at] + change)]
-            store[at, self._position(n[at] + 1, j[at] + change) - at] = element
+            yield at, self._position(n[at] + 1, j[at] + change), element
         if self.model.bias != 0.0:
             at = here[j < self.model.spins]
-            store[at, 1] += 0.5 * self.model.bias * self.steps[j[at]]
-        return store.T
+            yield at, at + 1, 0.5 * self.model.bias * self.steps[j[at]]
 
     def padded(self, vectors: Array) -> Array:
         """Amplitudes on the full grid, shape (q, cutoff+1, N+1), zeros where parity forbids."""

@@ -18,7 +18,7 @@ from typing import Literal
 import numpy as np
 from numpy.typing import NDArray
 from scipy.linalg.blas import daxpy
-from scipy.sparse import csr_array, dia_array, eye_array
+from scipy.sparse import coo_array, csr_array, eye_array
 from scipy.special import ive, logsumexp
 
 from solver.eigen import count_below_zero, dense_from_band, lowest_of_band
@@ -254,17 +254,14 @@ def _from_lowest(
 
 def sparse_block(block: FockBlock) -> csr_array:
     """H - shift of a number-basis block, compressed rows."""
-    band = block.band
-    used = [k for k in range(band.shape[0]) if k == 0 or np.any(band[k])]
-    size = block.dimension
-    data = np.zeros((2 * len(used) - 1, size))
-    offsets = np.zeros(2 * len(used) - 1, dtype=np.int64)
-    for at, k in enumerate(used):
-        data[at], offsets[at] = band[k], -k
-        if k:
-            mirrored = len(used) + at - 1
-            data[mirrored, k:], offsets[mirrored] = band[k, : size - k], k
-    matrix = csr_array(dia_array((data, offsets), shape=(size, size)))
+    size, here = block.dimension, np.arange(block.dimension)
+    parts = [part for part in block.couplings() if np.any(part[2])]
+    rows = np.concatenate([here, *(row for _, row, _ in parts), *(column for column, _, _ in parts)])
+    columns = np.concatenate([here, *(column for column, _, _ in parts), *(row for _, row, _ in parts)])
+    values = [value for _, _, value in parts]
+    matrix = csr_array(
+        coo_array((np.concatenate([block.diagonal(), *values, *values]), (rows, columns)), shape=(size, size))
+    )
     matrix.eliminate_zeros()
     return matrix
 

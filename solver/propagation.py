@@ -25,6 +25,9 @@ Array = NDArray[np.float64]
 _TERMS_AT_ONCE = 96
 _LARGEST_WORK = 12_000_000
 _FLUSH_ABOVE = 1e150
+# one run of the recurrence up to here; longer evolutions go in stages
+_LONGEST_ARGUMENT = 2500.0
+_STAGE_ARGUMENT = 400.0
 # weights below this need double precision
 SINGLE_DOWN_TO = 1e-7
 # seconds per elementary operation, as measured on the development machine
@@ -88,8 +91,8 @@ def evolve(
 ) -> Evolution:
     """Evolution of real starts, shape (starts, cutoff+1, N+1), with probabilities `chances`.
 
-    times: ascending from 0 (inverse unit of the model). single: single precision, weights to about
-    1e-7 of the larger ones.
+    times: equally spaced from 0 (inverse unit of the model). single: single precision, weights to about
+    1e-6 of the larger ones.
     """
     cutoff = starts.shape[1] - 1
     shift = Floors(model).ground
@@ -99,7 +102,9 @@ def evolve(
     blocks = [FockBlock(model, parity, cutoff, shift) for parity in parities]
     matrices = [sparse_block(block) for block in blocks]
     upper = max(float(abs(matrix).sum(axis=1).max()) for matrix in matrices) or 1.0
-    table = _terms(0.5 * upper * times, single=single)
+    step = float(times[-1]) / max(1, times.size - 1)
+    together = _times_together(0.5 * upper * step, times.size, max(block.dimension for block in blocks))
+    table = _terms(0.5 * upper * step * np.arange(1.0, together + 1.0), single=single)
     for block, matrix in zip(blocks, matrices, strict=True):
         columns = block.flatten(starts)
         busy = np.flatnonzero(np.any(columns != 0.0, axis=1))
@@ -107,10 +112,12 @@ def evolve(
             continue
         doubled = matrix * (4.0 / upper) - 2.0 * eye_array(block.dimension, format="csr")
         doubled = csr_array(doubled.astype(table.dtype))
-        at_once = max(1, _LARGEST_WORK // (2 * times.size * block.dimension))
+        at_once = max(1, _LARGEST_WORK // (2 * together * block.dimension))
         for first in range(0, busy.size, at_once):
             part = busy[first : first + at_once]
-            weights, lost = _evolve_block(block, doubled, columns[part].T.copy(), chances[part], table)
+            weights, lost = _evolve_block(
+                block, doubled, columns[part].T.copy(), chances[part], table, times.size
+            )
             layers += weights
             # both parities of one start leave through different states
             escaped[part] = np.hypot(escaped[part], lost)
@@ -118,26 +125,47 @@ def evolve(
     return Evolution(layers, float(chances @ distance**2))
 
 
+def _times_together(step: float, count: int, dimension: float) -> int:
+    """Times served by one run of the recurrence; step: argument of the Bessel functions per time."""
+    most = count - 1 if step * count <= _LONGEST_ARGUMENT else int(_STAGE_ARGUMENT / step)
+    return max(1, min(count - 1, most, int(_LARGEST_WORK / dimension)))
+
+
 def _evolve_block(
-    block: FockBlock, doubled: csr_array, columns: Array, chances: Array, table: Array
+    block: FockBlock, doubled: csr_array, columns: Array, chances: Array, table: Array, count: int
 ) -> tuple[Array, Array]:
-    """Layer weights (times, cutoff+1), and the norm leaving per column and time."""
-    size = max(1, _LARGEST_WORK // (2 * columns.size))
-    layers, lost = [], []
-    for first in range(0, table.shape[0], size):
-        part = table[first : first + size]
-        real, imaginary = _amplitudes(doubled, columns, part)
-        weights = np.zeros((part.shape[0], block.cutoff + 1))
-        leaving = np.zeros((columns.shape[1], part.shape[0]))
-        starts = np.searchsorted(block.quanta, np.arange(block.cutoff + 1))
-        edge = block.quanta == block.cutoff
-        for component in (real, imaginary):
-            squares = np.einsum("tdc,tdc,c->td", component, component, chances.astype(component.dtype))
-            weights += np.add.reduceat(squares.astype(np.float64), starts, axis=1)
-            leaving += _leaving(block, component[:, edge].astype(np.float64))
-        layers.append(weights)
-        lost.append(np.sqrt(leaving))
-    return np.concatenate(layers), np.concatenate(lost, axis=1)
+    """Layer weights (count, cutoff+1), and the norm leaving per column and time.
+
+    table serves the first times; where there are more, the last states reached start the next stage.
+    """
+    kind, starts = table.dtype, columns.shape[1]
+    state = columns.astype(kind)
+    layers, leaving = _measured(block, chances, state[None])
+    parts, lost, done = [layers], [leaving], 1
+    while done < count:
+        rows = table[: count - done]
+        even, odd = _amplitudes(doubled, state, rows)
+        if state.shape[1] == starts:
+            real, imaginary = even, -odd
+        else:
+            # (even - i odd) on (real + i imaginary)
+            real = even[..., :starts] + odd[..., starts:]
+            imaginary = even[..., starts:] - odd[..., :starts]
+        layers, leaving = _measured(block, chances, real)
+        more, further = _measured(block, chances, imaginary)
+        parts.append(layers + more)
+        lost.append(leaving + further)
+        state = np.concatenate((real[-1], imaginary[-1]), axis=1)
+        done += rows.shape[0]
+    return np.concatenate(parts), np.sqrt(np.concatenate(lost, axis=1))
+
+
+def _measured(block: FockBlock, chances: Array, component: Array) -> tuple[Array, Array]:
+    """Layer weights (times, cutoff+1) and squared norm leaving (columns, times) of one real component."""
+    starts = np.searchsorted(block.quanta, np.arange(block.cutoff + 1))
+    squares = np.einsum("tdc,tdc,c->td", component, component, chances.astype(component.dtype))
+    layers = np.add.reduceat(squares.astype(np.float64), starts, axis=1)
+    return layers, _leaving(block, component[:, block.quanta == block.cutoff].astype(np.float64))
 
 
 def _leaving(block: FockBlock, edge: Array) -> Array:
@@ -195,8 +223,18 @@ def evolution_seconds(
     model: CollectiveModel, cutoff: int, starts: int, times: Array, *, single: bool
 ) -> float:
     """Predicted time of `evolve` for starts in one symmetry block each."""
+    if times.size < 2:
+        return 1e-3
     blocks = 2 if model.conserves_parity else 1
     dimension = (cutoff + 1.0) * (model.spins + 1.0) / blocks
-    terms = terms_needed(0.5 * spectral_width(model, cutoff) * float(times.max(initial=0.0)), single=single)
-    per_term = dimension * starts * (9.0 * _STEP_COST + times.size * _SUM_COST * (1.0 if single else 2.0))
-    return blocks * 1e-3 + terms * (per_term + blocks * _CALL_COST)
+    step = 0.5 * spectral_width(model, cutoff) * float(times[1])
+    together = _times_together(step, times.size, dimension)
+    stages = math.ceil((times.size - 1) / together)
+    columns = starts * (2.0 if stages > 1 else 1.0)
+    terms = terms_needed(step * together, single=single)
+    # single columns use the caches badly
+    product = 9.0 * _STEP_COST * (1.0 + 1.5 / columns)
+    per_term = dimension * columns * (product + together * _SUM_COST * (1.0 if single else 2.0))
+    table = terms * (together * 2e-8 + 1.2e-5)
+    measured = times.size * starts * dimension * 6e-9
+    return blocks * 1e-3 + table + measured + stages * terms * (per_term + blocks * _CALL_COST)

@@ -208,7 +208,7 @@ def _groups(question: StartQuestion) -> tuple[list[_Group], float, float]:
         n = np.arange(last + 1.0)
         row = np.exp(0.5 * (n * math.log(quanta) - quanta - gammaln(n + 1.0)))
         typical = start_cutoff(kind, quanta, question.tail)
-        cutoff = max(last, _reach(question, typical, question.tail, escaped))
+        cutoff = max(last, _reach(question, typical, 1.0, escaped))
         return [_Group(row[None], np.ones(1), cutoff, escaped)], 0.0, 0.0
     last = start_cutoff(kind, quanta, _DROPPED * question.tail)
     n = np.arange(last + 1)

@@ -95,7 +95,7 @@ def test_bessel_functions(top):
 @pytest.mark.parametrize("single", [True, False])
 def test_propagation_against_expm(model, single):
     """scipy.linalg.expm of the same cut H; in single precision to its rounding."""
-    cutoff, times = 14, np.array([0.0, 0.3, 1.7, 6.1])
+    cutoff, times = 14, np.linspace(0.0, 6.1, 5)
     rng = np.random.default_rng(2)
     starts = rng.standard_normal((3, cutoff + 1, model.spins + 1))
     starts /= np.linalg.norm(starts, axis=(1, 2))[:, None, None]
@@ -105,6 +105,19 @@ def test_propagation_against_expm(model, single):
         moved = expm(-1j * time * hamiltonian(model, cutoff)) @ starts.reshape(3, -1).T
         weights = (np.abs(moved) ** 2 @ chances).reshape(cutoff + 1, -1).sum(axis=1)
         assert np.abs(layers - weights).max() < (1e-5 if single else 1e-12)
+
+
+def test_long_evolution_in_stages():
+    """200 periods in stages against one dense exponential at the end."""
+    model, cutoff = CollectiveModel(2, 1.0, 0.9, 0.3, 0.2, 0.1), 16
+    starts = np.zeros((2, cutoff + 1, 3))
+    starts[0, 1, 0] = starts[1, 3, 2] = 1.0
+    chances = np.array([0.7, 0.3])
+    times = np.linspace(0.0, 1256.0, 2001)
+    moved = expm(-1256j * hamiltonian(model, cutoff)) @ starts.reshape(2, -1).T
+    weights = (np.abs(moved) ** 2 @ chances).reshape(cutoff + 1, -1).sum(axis=1)
+    assert np.abs(evolve(model, starts, chances, times).layers[-1] - weights).max() < 1e-10
+    assert np.abs(evolve(model, starts, chances, times, single=True).layers[-1] - weights).max() < 1e-4
 
 
 def test_escaped_bounds_the_distance():
