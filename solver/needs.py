@@ -11,12 +11,13 @@ of the error.
 from __future__ import annotations
 
 import math
+from contextlib import suppress
 from dataclasses import dataclass
 from typing import Any, Literal
 
 from solver.converged import Converged, converge
 from solver.cutoff_walk import Walk
-from solver.errors import QuestionError
+from solver.errors import ConvergenceError, QuestionError
 from solver.forecast import first_cutoff, forecast
 from solver.model import CollectiveModel
 from solver.truncated import (
@@ -161,9 +162,7 @@ class _Desk:
         self.exact = converge(self.model, question.levels, tolerance, angle)
         self.last = max(sector.end for sector in self.exact.sectors.values()) - 1
         self.curve = ground_curve(self.exact)
-        self.limit = self.last
-        if self.exact.blocks is None:
-            self.limit = min(self.last, largest_affordable(self.model))
+        self.limit = min(self.last, largest_affordable(self.exact))
         self.notes: list[str] = []
         self._truncations: Truncations | None = None
 
@@ -204,7 +203,9 @@ class _Desk:
         walk = Walk(
             lambda cutoff: self._error(name, cutoff), known, wanted, self.curve, self.last, self.limit
         )
-        found = walk.run(self._guess(name, wanted))
+        found: int | None = None
+        with suppress(ConvergenceError):
+            found = walk.run(self._guess(name, wanted))
         if found is None:
             cutoff = self._bounded(name, wanted)
             self.notes.append(f"{name}: a bound; the truncated solve that would check it is too large")
@@ -217,7 +218,7 @@ class _Desk:
         if guess is None:
             allowed = wanted * self.model.mode * (1.0 if name == "order_parameter" else 0.25)
             guess = next((at for at, size in enumerate(self.curve.tolist()) if size <= allowed), self.last)
-        return min(guess, self.limit)
+        return guess
 
     def _values(self, cutoff: int, *, gap: bool, levels: bool = False) -> TruncatedValues:
         """What a calculation with this cutoff finds."""
@@ -247,7 +248,10 @@ class _Desk:
         cutoff, asked = min(stated, self.last), self.wanted.asked
         values: TruncatedValues | None = None
         if cutoff < self.last and cutoff <= self.limit and set(asked) != {"tail"}:
-            values = self._values(cutoff, gap="gap" in asked, levels="energies" in asked)
+            try:
+                values = self._values(cutoff, gap="gap" in asked, levels="energies" in asked)
+            except ConvergenceError:
+                self.notes.append("stated: bounds; a truncated solve at that cutoff is too large")
         error: dict[str, float | None] = {}
         good: dict[str, bool] = {}
         for name in asked:
