@@ -17,9 +17,17 @@ from numpy.typing import NDArray
 
 from solver.converged import Converged, converge
 from solver.errors import ConvergenceError, QuestionError
-from solver.forecast import first_cutoff, forecast
+from solver.forecast import classical_quanta, first_cutoff
 from solver.model import CollectiveModel
-from solver.needs import MOST_LEVELS, CutoffQuestion, answer_cutoff, solving_accuracy, truncations_of
+from solver.needs import (
+    MOST_LEVELS,
+    CutoffQuestion,
+    answer_cutoff,
+    predicted_cutoff_seconds,
+    solving_accuracy,
+    truncated_seconds,
+    truncations_of,
+)
 from solver.shifted_truncation import ShiftedTruncations
 from solver.truncated import FockTruncations, TruncatedValues, Truncations, error_of
 from solver.truncation_bounds import levels_bound, tail_above
@@ -260,11 +268,16 @@ def _stretches(
 def predicted_convergence_seconds(question: ConvergenceQuestion) -> float:
     """Expected time of `convergence` on one core."""
     model = question.model
-    solve = forecast(model, question.levels).seconds
-    sectors = 2 if model.conserves_parity else 1
+    asked = predicted_cutoff_seconds(CutoffQuestion(model, question.levels, question.wanted))
     cutoff = first_cutoff(model, question.basis, question.levels)
-    dimension = (cutoff + 1.0) * (model.spins + 1.0) / sectors
     count = MOST_CUTOFFS if question.cutoffs is None else len(question.cutoffs)
     count = min(count, round(_REACH * cutoff) + 4)
-    width = (model.spins + 1.0) / sectors if question.basis == "fock" else 2.0 * cutoff
-    return solve + 0.01 + sectors * count * (1e-3 + dimension * width * 40e-9)
+    if question.basis == "fock" and model.conserves_excitations:
+        return asked + (1e-3 + 3e-6 * model.spins * classical_quanta(model)) * count
+    sectors = 2 if model.conserves_parity else 1
+    if question.basis == "fock":
+        # half of the cutoffs lie where the state fills more of the spin than the converged one
+        each = truncated_seconds(model, "fock", cutoff, 5.0)
+    else:
+        each = (cutoff + 1.0) ** 2 * (model.spins + 1.0) / sectors * 1e-7
+    return asked + sectors * count * (1e-3 + each)

@@ -15,10 +15,11 @@ from contextlib import suppress
 from dataclasses import dataclass
 from typing import Any, Literal
 
+from solver.blocks import BasisName
 from solver.converged import Converged, converge
 from solver.cutoff_walk import Walk
 from solver.errors import ConvergenceError, QuestionError
-from solver.forecast import first_cutoff, forecast
+from solver.forecast import classical_quanta, first_cutoff, forecast
 from solver.model import CollectiveModel
 from solver.truncated import (
     Accuracy,
@@ -164,6 +165,8 @@ class _Desk:
         self.curve = ground_curve(self.exact)
         self.limit = min(self.last, largest_affordable(self.exact))
         self.notes: list[str] = []
+        if self.model.is_uncoupled and self.model.splitting == self.model.bias == 0.0:
+            self.notes.append("no field and no coupling: the ground state is one of many")
         self._truncations: Truncations | None = None
 
     def answer(self) -> CutoffAnswer:
@@ -275,11 +278,23 @@ class _Desk:
 def predicted_cutoff_seconds(question: CutoffQuestion) -> float:
     """Expected time of `answer_cutoff` on one core."""
     model = question.model
+    quanta = classical_quanta(model)
     if model.conserves_excitations:
-        return 5e-3 + 4e-5 * model.spins * question.levels
-    solve = forecast(model, question.levels).seconds
+        return 5e-3 + 1e-5 * model.spins + 7e-6 * model.spins * quanta
+    found = forecast(model, question.levels)
+    # a dozen truncated solves of some Krylov steps each, and one factorisation
+    overhead = 8e-3 + 1e-2 * min(1.0, quanta / 4.0)
     cutoff = first_cutoff(model, "fock", question.levels)
+    return found.seconds + overhead + truncated_seconds(model, found.basis, cutoff, 60.0)
+
+
+def truncated_seconds(model: CollectiveModel, basis: BasisName, cutoff: int, solves: float) -> float:
+    """Expected time of one factorisation up to `cutoff` and of some solves with it."""
     sectors = 2 if model.conserves_parity else 1
-    width = (model.spins + 1.0) / sectors + 1.0
-    dimension = (cutoff + 1.0) * (model.spins + 1.0) / sectors
-    return solve + 5e-3 + dimension * width * (5e-10 * width + 100.0 * 1e-9)
+    width = (model.spins + 1.0) / sectors
+    if basis == "shifted":
+        # states found on ladders live on a window of projections
+        pull = max(model.total_coupling**2 / model.mode, 1e-300)
+        lean = min(1.0, (abs(model.splitting) + 1e-3 * pull) / pull)
+        width = min(width, 14.0 + 8.0 * lean * math.sqrt(model.spins))
+    return (cutoff + 1.0) * width * width * (5e-10 * width + 2e-9 * solves)

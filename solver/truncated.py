@@ -72,8 +72,9 @@ class TruncatedValues:
 
 
 def directions_free(model: CollectiveModel, cutoff: int) -> bool:
-    """Whether a calculation leaves the direction of the spin open: no quanta and no field on it."""
-    return cutoff == 0 and model.spins > 1 and model.splitting == 0.0 and model.bias == 0.0
+    """Whether a calculation leaves the direction of the spin open: no field, and no quanta to turn it."""
+    fieldless = model.spins > 1 and model.splitting == 0.0 and model.bias == 0.0
+    return fieldless and cutoff == 0 and not model.is_uncoupled
 
 
 def error_of(exact: Converged, values: TruncatedValues, name: str) -> float:
