@@ -7,19 +7,18 @@ sector: with them the truncated calculation of an asker is told in advance, or r
 from __future__ import annotations
 
 import math
-from collections.abc import Callable
 from dataclasses import dataclass, field
-from functools import cached_property, lru_cache
+from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.linalg import eigh_tridiagonal
 
 from solver.bounds import RitzSet
 from solver.cutoff import CutStates
 from solver.excitation import ExcitationSpectrum, excitation_levels
 from solver.fock_basis import FockBlock
 from solver.forecast import cheaper_basis
+from solver.layer_blocks import LadderLayers, LayerBlock, WholeLayers
 from solver.layers import (
     LayerProfile,
     NumberAmplitudes,
@@ -33,7 +32,6 @@ from solver.model import CollectiveModel
 from solver.moments import Moments, excitation_moments, fock_moments, shifted_moments
 from solver.shifted_basis import ShiftedBlock
 from solver.spectrum import Spectrum
-from solver.spin import projections, raising_elements
 
 Array = NDArray[np.float64]
 
@@ -86,11 +84,11 @@ class Converged:
     proven: bool
     spectrum: Spectrum | None = None
     blocks: ExcitationSpectrum | None = None
-    _grids: dict[int, Callable[[], Array]] = field(default_factory=dict)
+    _states: dict[int, _States] = field(default_factory=dict)
 
-    def grid(self, parity: int) -> Array:
-        """Number amplitudes of the levels found in a parity sector, shape (q, layers, N+1)."""
-        return self._grids[parity]()
+    def layers(self, parity: int, top: int, shift: float, widened: int = 0) -> LayerBlock:
+        """Number basis of a parity sector up to `top`, with the levels found in it."""
+        return self._states[parity].layers(top, shift, widened)
 
 
 def converge(model: CollectiveModel, levels: int, tolerance: float, state_accuracy: float) -> Converged:
@@ -114,7 +112,7 @@ def order_parameter_of(moments: Moments) -> float:
 def _from_spectrum(model: CollectiveModel, levels: int, spectrum: Spectrum) -> Converged:
     ground = spectrum.levels[0]
     sectors: dict[int, ConvergedSector] = {}
-    grids: dict[int, Callable[[], Array]] = {}
+    held: dict[int, _States] = {}
     moments: Moments | None = None
     for parity, found in spectrum.sectors.items():
         shown = sum(level.parity == parity for level in spectrum.levels[:levels])
@@ -123,7 +121,7 @@ def _from_spectrum(model: CollectiveModel, levels: int, spectrum: Spectrum) -> C
         states = _States(ritz)
         profile = states.profile(known)
         sectors[parity] = ConvergedSector(ritz.energies[:known], profile, shown)
-        grids[parity] = states.grid
+        held[parity] = states
         if parity == ground.parity:
             moments = states.moments()
     if moments is None:
@@ -140,7 +138,7 @@ def _from_spectrum(model: CollectiveModel, levels: int, spectrum: Spectrum) -> C
         order_parameter=order_parameter_of(moments),
         proven=all(level.status == "bracketed" for level in spectrum.levels[:levels]),
         spectrum=spectrum,
-        _grids=grids,
+        _states=held,
     )
 
 
@@ -176,47 +174,12 @@ class _States:
             raise TypeError("unknown basis")
         return shifted_moments(block, self.ritz.vectors[0], self._amplitudes)
 
-    def grid(self) -> Array:
-        """Number amplitudes along z, shape (q, layers, N+1)."""
+    def layers(self, top: int, shift: float, widened: int) -> LayerBlock:
+        """The block n <= top that holds these states; widened: how often its window was too small."""
         block = self.ritz.block
-        if isinstance(block, FockBlock):
-            return block.padded(self.ritz.vectors)
-        if not isinstance(block, ShiftedBlock):
-            raise TypeError("unknown basis")
-        return _along_z(block, self._amplitudes)
-
-
-def _along_z(block: ShiftedBlock, amplitudes: NumberAmplitudes) -> Array:
-    """Number amplitudes of displaced-ladder states in the spin basis |m>_z."""
-    values, kept, first = amplitudes.values, amplitudes.ladders, amplitudes.first
-    size = block.model.spins
-    turn = _turn_to_x(size)
-    at = size - np.arange(kept.start, kept.stop)
-    if block.folded:
-        n = first + np.arange(values.shape[2])
-        sign = block.mirror * (1.0 - 2.0 * (n % 2))
-        centre = block.m[kept] == 0.0
-        half = np.where(centre, 1.0, math.sqrt(0.5))[:, None] * values
-        part = np.einsum("jm,qmn->qnj", turn[:, at], half, optimize=True)
-        mirrored = np.where(centre[:, None], 0.0, sign * half)
-        part += np.einsum("jm,qmn->qnj", turn[:, size - at], mirrored, optimize=True)
-    else:
-        part = np.einsum("jm,qmn->qnj", turn[:, at], values, optimize=True)
-    out = np.zeros((values.shape[0], first + values.shape[2], size + 1))
-    out[:, first:] = part
-    return out
-
-
-@lru_cache(maxsize=16)
-def _turn_to_x(size: int) -> Array:
-    """Columns: eigenvectors of Jx, m ascending, in the basis |m>_z; signs make Jz positive in them."""
-    m = projections(size)
-    found = eigh_tridiagonal(np.zeros(size + 1), 0.5 * raising_elements(size))[1]
-    vectors: Array = np.array(found, dtype=np.float64)
-    steps = np.einsum("jm,j,jm->m", vectors[:, 1:], m, vectors[:, :-1])
-    signs = np.concatenate(([1.0], np.cumprod(np.sign(steps))))
-    out: Array = vectors * signs
-    return out
+        if isinstance(block, ShiftedBlock):
+            return LadderLayers(block, self._amplitudes, top, shift, widened)
+        return WholeLayers(self.ritz, top, shift)
 
 
 def _from_blocks(model: CollectiveModel, levels: int) -> Converged:

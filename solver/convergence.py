@@ -16,12 +16,20 @@ import numpy as np
 from numpy.typing import NDArray
 
 from solver.converged import Converged, converge
-from solver.errors import QuestionError
-from solver.forecast import first_cutoff, forecast
+from solver.errors import ConvergenceError, QuestionError
+from solver.forecast import classical_quanta, first_cutoff
 from solver.model import CollectiveModel
-from solver.needs import MOST_LEVELS, CutoffQuestion, answer_cutoff, solving_accuracy, truncations_of
+from solver.needs import (
+    MOST_LEVELS,
+    CutoffQuestion,
+    answer_cutoff,
+    predicted_cutoff_seconds,
+    solving_accuracy,
+    truncated_seconds,
+    truncations_of,
+)
 from solver.shifted_truncation import ShiftedTruncations
-from solver.truncated import FockTruncations, Truncations, error_of, largest_affordable
+from solver.truncated import FockTruncations, TruncatedValues, Truncations, error_of
 from solver.truncation_bounds import levels_bound, tail_above
 from solver.wanted import COMMON, Wanted
 
@@ -127,15 +135,13 @@ def convergence(question: ConvergenceQuestion) -> Convergence:
     exact = converge(model, question.levels, tolerance, angle)
     shifted = ShiftedTruncations(exact, tolerance, angle) if question.basis == "shifted" else None
     cutoffs = question.cutoffs or _sensible(question, shifted)
-    note = None
-    if shifted is None and exact.blocks is None and cutoffs[-1] > largest_affordable(model):
-        most = largest_affordable(model)
-        cutoffs = tuple(cutoff for cutoff in cutoffs if cutoff <= most)
-        note = f"cutoffs above {most} left out: a truncated solve would be too large"
-        if not cutoffs:
-            raise QuestionError("cutoffs", question.cutoffs, f"at least one up to {most}")
     truncations: Truncations = shifted or truncations_of(exact, wanted, cutoffs[-1])
-    found = [truncations.at(cutoff, gap=True, levels=True) for cutoff in cutoffs]
+    found = _solved(truncations, cutoffs)
+    note = None
+    if len(found) < len(cutoffs):
+        missing = [cutoff for cutoff in cutoffs if cutoff not in found]
+        note = f"cutoffs {missing[0]} to {missing[-1]} left out: their truncated solves are too large"
+        cutoffs = tuple(found)
     tails = [
         shifted.tail_above(cutoff) if shifted is not None else tail_above(exact, cutoff) for cutoff in cutoffs
     ]
@@ -145,8 +151,8 @@ def convergence(question: ConvergenceQuestion) -> Convergence:
         "boson_number": exact.boson_number,
         "order_parameter": exact.order_parameter,
     }
-    value = {key: [_plain(getattr(values, key)) for values in found] for key in VALUES}
-    error = {key: [_plain(abs(error_of(exact, values, key))) for values in found] for key in ERRORS}
+    value = {key: [_plain(getattr(values, key)) for values in found.values()] for key in VALUES}
+    error = {key: [_plain(abs(error_of(exact, values, key))) for values in found.values()] for key in ERRORS}
     return Convergence(
         basis=question.basis,
         cutoffs=tuple(cutoffs),
@@ -158,6 +164,21 @@ def convergence(question: ConvergenceQuestion) -> Convergence:
         plateaus=tuple(_plateaus(cutoffs, value, truth, wanted, model.mode)),
         note=note,
     )
+
+
+def _solved(truncations: Truncations, cutoffs: Sequence[int]) -> dict[int, TruncatedValues]:
+    """What each cutoff finds, ascending; those too large for a truncated solve are left out."""
+    found: dict[int, TruncatedValues] = {}
+    refused: ConvergenceError | None = None
+    # from above: what serves a cutoff serves the smaller ones as well
+    for cutoff in reversed(cutoffs):
+        try:
+            found[cutoff] = truncations.at(cutoff, gap=True, levels=True)
+        except ConvergenceError as error:
+            refused = error
+    if refused is not None and not found:
+        raise refused
+    return dict(sorted(found.items()))
 
 
 def _plain(value: float | None) -> float | None:
@@ -247,11 +268,16 @@ def _stretches(
 def predicted_convergence_seconds(question: ConvergenceQuestion) -> float:
     """Expected time of `convergence` on one core."""
     model = question.model
-    solve = forecast(model, question.levels).seconds
-    sectors = 2 if model.conserves_parity else 1
+    asked = predicted_cutoff_seconds(CutoffQuestion(model, question.levels, question.wanted))
     cutoff = first_cutoff(model, question.basis, question.levels)
-    dimension = (cutoff + 1.0) * (model.spins + 1.0) / sectors
     count = MOST_CUTOFFS if question.cutoffs is None else len(question.cutoffs)
     count = min(count, round(_REACH * cutoff) + 4)
-    width = (model.spins + 1.0) / sectors if question.basis == "fock" else 2.0 * cutoff
-    return solve + 0.01 + sectors * count * (1e-3 + dimension * width * 40e-9)
+    if question.basis == "fock" and model.conserves_excitations:
+        return asked + (1e-3 + 3e-6 * model.spins * classical_quanta(model)) * count
+    sectors = 2 if model.conserves_parity else 1
+    if question.basis == "fock":
+        # half of the cutoffs lie where the state fills more of the spin than the converged one
+        each = truncated_seconds(model, "fock", cutoff, 5.0)
+    else:
+        each = (cutoff + 1.0) ** 2 * (model.spins + 1.0) / sectors * 1e-7
+    return asked + sectors * count * (1e-3 + each)

@@ -76,9 +76,7 @@ class Walk:
         while good - bad > 1:
             at = min(max(at, bad + 1), good - 1)
             if at > self.limit:
-                if self.limit <= bad:
-                    return None
-                at = self.limit
+                return None
             held = self.holds(at)
             if held:
                 good = at

@@ -11,13 +11,15 @@ of the error.
 from __future__ import annotations
 
 import math
+from contextlib import suppress
 from dataclasses import dataclass
 from typing import Any, Literal
 
+from solver.blocks import BasisName
 from solver.converged import Converged, converge
 from solver.cutoff_walk import Walk
-from solver.errors import QuestionError
-from solver.forecast import first_cutoff, forecast
+from solver.errors import ConvergenceError, QuestionError
+from solver.forecast import classical_quanta, first_cutoff, forecast
 from solver.model import CollectiveModel
 from solver.truncated import (
     Accuracy,
@@ -161,10 +163,10 @@ class _Desk:
         self.exact = converge(self.model, question.levels, tolerance, angle)
         self.last = max(sector.end for sector in self.exact.sectors.values()) - 1
         self.curve = ground_curve(self.exact)
-        self.limit = self.last
-        if self.exact.blocks is None:
-            self.limit = min(self.last, largest_affordable(self.model))
+        self.limit = min(self.last, largest_affordable(self.exact))
         self.notes: list[str] = []
+        if self.model.is_uncoupled and self.model.splitting == self.model.bias == 0.0:
+            self.notes.append("no field and no coupling: the ground state is one of many")
         self._truncations: Truncations | None = None
 
     def answer(self) -> CutoffAnswer:
@@ -204,7 +206,9 @@ class _Desk:
         walk = Walk(
             lambda cutoff: self._error(name, cutoff), known, wanted, self.curve, self.last, self.limit
         )
-        found = walk.run(self._guess(name, wanted))
+        found: int | None = None
+        with suppress(ConvergenceError):
+            found = walk.run(self._guess(name, wanted))
         if found is None:
             cutoff = self._bounded(name, wanted)
             self.notes.append(f"{name}: a bound; the truncated solve that would check it is too large")
@@ -217,7 +221,7 @@ class _Desk:
         if guess is None:
             allowed = wanted * self.model.mode * (1.0 if name == "order_parameter" else 0.25)
             guess = next((at for at, size in enumerate(self.curve.tolist()) if size <= allowed), self.last)
-        return min(guess, self.limit)
+        return guess
 
     def _values(self, cutoff: int, *, gap: bool, levels: bool = False) -> TruncatedValues:
         """What a calculation with this cutoff finds."""
@@ -247,7 +251,10 @@ class _Desk:
         cutoff, asked = min(stated, self.last), self.wanted.asked
         values: TruncatedValues | None = None
         if cutoff < self.last and cutoff <= self.limit and set(asked) != {"tail"}:
-            values = self._values(cutoff, gap="gap" in asked, levels="energies" in asked)
+            try:
+                values = self._values(cutoff, gap="gap" in asked, levels="energies" in asked)
+            except ConvergenceError:
+                self.notes.append("stated: bounds; a truncated solve at that cutoff is too large")
         error: dict[str, float | None] = {}
         good: dict[str, bool] = {}
         for name in asked:
@@ -271,11 +278,23 @@ class _Desk:
 def predicted_cutoff_seconds(question: CutoffQuestion) -> float:
     """Expected time of `answer_cutoff` on one core."""
     model = question.model
+    quanta = classical_quanta(model)
     if model.conserves_excitations:
-        return 5e-3 + 4e-5 * model.spins * question.levels
-    solve = forecast(model, question.levels).seconds
+        return 5e-3 + 1e-5 * model.spins + 7e-6 * model.spins * quanta
+    found = forecast(model, question.levels)
+    # a dozen truncated solves of some Krylov steps each, and one factorisation
+    overhead = 8e-3 + 1e-2 * min(1.0, quanta / 4.0)
     cutoff = first_cutoff(model, "fock", question.levels)
+    return found.seconds + overhead + truncated_seconds(model, found.basis, cutoff, 60.0)
+
+
+def truncated_seconds(model: CollectiveModel, basis: BasisName, cutoff: int, solves: float) -> float:
+    """Expected time of one factorisation up to `cutoff` and of some solves with it."""
     sectors = 2 if model.conserves_parity else 1
-    width = (model.spins + 1.0) / sectors + 1.0
-    dimension = (cutoff + 1.0) * (model.spins + 1.0) / sectors
-    return solve + 5e-3 + dimension * width * (5e-10 * width + 100.0 * 1e-9)
+    width = (model.spins + 1.0) / sectors
+    if basis == "shifted":
+        # states found on ladders live on a window of projections
+        pull = max(model.total_coupling**2 / model.mode, 1e-300)
+        lean = min(1.0, (abs(model.splitting) + 1e-3 * pull) / pull)
+        width = min(width, 14.0 + 8.0 * lean * math.sqrt(model.spins))
+    return (cutoff + 1.0) * width * width * (5e-10 * width + 2e-9 * solves)

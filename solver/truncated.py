@@ -11,7 +11,7 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass
 from functools import lru_cache
-from typing import Protocol
+from typing import NamedTuple, Protocol
 
 import numpy as np
 from numpy.typing import NDArray
@@ -20,31 +20,40 @@ from scipy.linalg.lapack import dpbtrf, dpbtrs
 from solver.converged import DOUBLET, Converged
 from solver.eigen import dense_from_band
 from solver.errors import ConvergenceError
-from solver.fock_basis import FockBlock
-from solver.layers import fock_layers
+from solver.layer_blocks import LayerBlock
 from solver.model import CollectiveModel
-from solver.parity_chain import number_block
-from solver.spin import lowered, raised
 
 Array = NDArray[np.float64]
 
 # numbers in one band; beyond, a truncated solve is not worth its memory
-LARGEST_BAND = 40_000_000
+LARGEST_BAND = 25_000_000
+_NO_LIMIT = 10**9
 _SHIFT = 1e-3
 _DENSE_BELOW = 60
 _DENSE_SHOWN = 160
 _MOST_STEPS = 24
+# weight on the edge of the window of spin projections beyond which the window is widened
+_EDGE = 1e-15
+_EDGE_SHOWN = 1e-10
 # relative residual of levels that are shown as numbers: its square is their error
 _SHOWN = 1e-6
 _WIDEST = 48
 
 
-def largest_affordable(model: CollectiveModel) -> int:
-    """Largest cutoff whose truncated block still fits the memory given to it."""
-    states = model.spins + 1
-    width = states + 2 if not model.conserves_parity else states // 2 + 2
-    per_layer = states if not model.conserves_parity else (states + 1) // 2
-    return LARGEST_BAND // (width * per_layer) - 1
+class _Lowest(NamedTuple):
+    """Lowest levels (k,), their vectors, and the block these belong to."""
+
+    energies: Array
+    vectors: Array
+    block: LayerBlock
+
+
+def largest_affordable(converged: Converged) -> int:
+    """Largest cutoff whose truncated block fits the memory given to it."""
+    if converged.blocks is not None:
+        return _NO_LIMIT
+    per_layer = converged.layers(converged.ground, 0, 0.0).numbers
+    return max(0, LARGEST_BAND // per_layer - 1)
 
 
 @dataclass(frozen=True, slots=True)
@@ -60,6 +69,12 @@ class TruncatedValues:
     boson_number: float
     order_parameter: float
     levels: float | None = None
+
+
+def directions_free(model: CollectiveModel, cutoff: int) -> bool:
+    """Whether a calculation leaves the direction of the spin open: no field, and no quanta to turn it."""
+    fieldless = model.spins > 1 and model.splitting == 0.0 and model.bias == 0.0
+    return fieldless and cutoff == 0 and not model.is_uncoupled
 
 
 def error_of(exact: Converged, values: TruncatedValues, name: str) -> float:
@@ -99,41 +114,56 @@ class Accuracy:
 
 
 class _Sector:
-    """One parity: its Cholesky factor up to the largest cutoff used, and the states to start from."""
+    """One parity: its Cholesky factor up to the largest cutoff used, and the states to start from.
 
-    def __init__(self, converged: Converged, parity: int, top: int) -> None:
-        self.energies = converged.sectors[parity].energies
-        model = converged.model
-        self.top = top
-        self.block: FockBlock = number_block(
-            model, parity, top, float(self.energies[0]) - _SHIFT * model.mode
-        )
-        self.layer_start = np.searchsorted(self.block.quanta, np.arange(top + 2))
-        grid = converged.grid(parity)[:, : top + 1]
-        padded = np.zeros((grid.shape[0], top + 1, model.spins + 1))
-        padded[:, : grid.shape[1]] = grid
-        self.states = self.block.flatten(padded)
+    widened: how often a window of spin projections was too small. Low cutoffs push the state out
+    of the window of the converged one; they are left to a wider sector that reaches no farther.
+    """
+
+    def __init__(self, converged: Converged, parity: int, top: int, widened: int = 0) -> None:
+        self.converged, self.parity, self.top, self.widened = converged, parity, top, widened
+        shift = float(converged.sectors[parity].energies[0]) - _SHIFT * converged.model.mode
+        self.block = converged.layers(parity, top, shift, widened)
+        if self.block.numbers > LARGEST_BAND:
+            raise ConvergenceError(
+                "cutoff", top, f"a truncated block of at most {LARGEST_BAND} stored numbers"
+            )
         self.band = self.block.band
         self.factor, info = dpbtrf(self.band, lower=1)
         if info != 0:
             raise ConvergenceError("shift", int(info), "a ground level known to better than 1e-3 of the mode")
+        self._wider: _Sector | None = None
+        self._outside = -1
 
-    def lowest(self, cutoff: int, count: int, accuracy: Accuracy, *, noisy: bool) -> tuple[Array, Array]:
-        """The `count` lowest levels with n <= cutoff (fewer where there are fewer), and vectors."""
-        size = int(self.layer_start[cutoff + 1])
-        guards = 1 if count > 1 else 0
-        width = min(max(count + guards, 1), len(self.states), size)
+    def lowest(self, cutoff: int, count: int, accuracy: Accuracy, *, noisy: bool) -> _Lowest:
+        """The `count` lowest levels with n <= cutoff (fewer where there are fewer)."""
+        if cutoff > self._outside:
+            values, vectors = self._lowest(cutoff, count, accuracy, noisy=noisy)
+            edge = 0.0 if self.block.complete else self.block.edge_weight(vectors)
+            if edge <= (_EDGE_SHOWN if noisy else _EDGE):
+                return _Lowest(values + self.block.shift, vectors, self.block)
+            self._outside = cutoff
+        if self._wider is None or self._wider.top < cutoff:
+            self._wider = _Sector(self.converged, self.parity, cutoff, self.widened + 1)
+        return self._wider.lowest(cutoff, count, accuracy, noisy=noisy)
+
+    def _lowest(self, cutoff: int, count: int, accuracy: Accuracy, *, noisy: bool) -> tuple[Array, Array]:
+        size = int(self.block.layer_start[cutoff + 1])
+        present = self.block.present[:size]
         if size <= max(_DENSE_BELOW, 12 * count, _DENSE_SHOWN if noisy else 0):
-            values, columns = np.linalg.eigh(dense_from_band(self.band[:, :size]))
-            some = min(count, size)
-            return values[:some] + self.block.shift, np.ascontiguousarray(columns[:, :some].T)
-        start = self.states[:width, :size]
+            matrix = dense_from_band(self.band[:, :size])[np.ix_(present, present)]
+            values, columns = np.linalg.eigh(matrix)
+            vectors = np.zeros((min(count, values.size), size))
+            vectors[:, present] = columns[:, :count].T
+            return values[:count], vectors
+        guards = 1 if count > 1 else 0
+        width = min(count + guards, len(self.block.states))
+        start = self.block.states[:width, :size]
         if noisy or width < count:
-            start = _with_noise(start, max(width, count))
+            start = _with_noise(start, max(width, count)) * present
         goal = np.full(count, min(accuracy.others, _SHOWN) if noisy else accuracy.others)
         goal[0] = accuracy.ground
-        values, vectors = _inverse_krylov(self.factor[:, :size], start, goal)
-        return values + self.block.shift, vectors
+        return _inverse_krylov(self.factor[:, :size], start, goal)
 
 
 @lru_cache(maxsize=8)
@@ -231,13 +261,8 @@ class FockTruncations:
         """
         exact = self.converged
         sector = self._sector(exact.ground, top)
-        block, psi = sector.block, sector.states[0]
-        grid = block.padded(psi[None])[0]
-        along = _jx(grid, block.steps)
-        fields = {
-            "boson_number": block.quanta * psi,
-            "order_parameter": block.flatten(_jx(along, block.steps)[None])[0],
-        }
+        block, psi = sector.block, sector.block.states[0]
+        fields = {"boson_number": block.quanta * psi, "order_parameter": block.jx_squared(psi)}
         scale = {
             "boson_number": 1.0,
             "order_parameter": 2.0 / (exact.model.spins**2 * max(exact.order_parameter, 1e-300)),
@@ -247,7 +272,7 @@ class FockTruncations:
             pushed = pulled - (pulled @ psi) * psi
             response, _ = dpbtrs(sector.factor, pushed, lower=1)
             response -= (response @ psi) * psi
-            profile = fock_layers(block, np.array([psi, response]))
+            profile = block.profile(np.array([psi, response]))
             kept = np.cumsum(profile.overlaps, axis=0)[:top]
             link = profile.links[:top]
             least = np.maximum(kept[:, 0, 0], 1e-13)
@@ -260,23 +285,23 @@ class FockTruncations:
         exact = self.converged
         ground = exact.ground
         least = 2 if gap else 1
-        solved: dict[int, tuple[Array, Array]] = {}
+        solved: dict[int, _Lowest] = {}
         for parity, sector in exact.sectors.items():
             count = max(least, sector.shown) if levels else self._count(parity, least)
             if parity == ground or levels or self._may_be_lower(parity, cutoff):
                 solved[parity] = self._sector(parity, cutoff).lowest(
                     cutoff, count, self.accuracy, noisy=levels
                 )
-        lowest = min(solved, key=lambda parity: float(solved[parity][0][0]))
-        if solved[ground][0][0] - solved[lowest][0][0] < DOUBLET * exact.model.mode:
+        lowest = min(solved, key=lambda parity: float(solved[parity].energies[0]))
+        if solved[ground].energies[0] - solved[lowest].energies[0] < DOUBLET * exact.model.mode:
             lowest = ground
-        energies, vectors = solved[lowest]
-        quanta, order = self._observables(lowest, cutoff, vectors[0])
+        energies = solved[lowest].energies
+        quanta, order = self._observables(solved[lowest])
         worst: float | None = None
         if levels:
             worst = 0.0
             for parity, sector in exact.sectors.items():
-                values = solved[parity][0][: sector.shown]
+                values = solved[parity].energies[: sector.shown]
                 if values.size < sector.shown:
                     worst = math.inf
                 elif sector.shown:
@@ -322,17 +347,11 @@ class FockTruncations:
             quanta.append(float(weights @ (sector.profile.first + np.arange(len(weights)))))
         return abs(quanta[0] - quanta[1]) < self.negligible
 
-    def _observables(self, parity: int, cutoff: int, vector: Array) -> tuple[float, float]:
-        """<a^dag a> and sqrt(<Jx^2>)/(N/2) of a truncated state."""
-        block = self._made[parity].block
-        size = vector.size
-        quanta = float((vector * vector) @ block.quanta[:size])
-        grid = np.zeros((cutoff + 1, block.model.spins + 1))
-        grid[block.quanta[:size], block.raised[:size]] = vector
-        along = _jx(grid, block.steps)
-        return quanta, 2.0 * math.sqrt(float(np.sum(along * along))) / block.model.spins
-
-
-def _jx(grid: Array, steps: Array) -> Array:
-    """Jx on amplitudes (..., N+1)."""
-    return 0.5 * (raised(grid, steps) + lowered(grid, steps))
+    def _observables(self, found: _Lowest) -> tuple[float, float]:
+        """<a^dag a> and sqrt(<Jx^2>)/(N/2) of a truncated ground state."""
+        block, vector = found.block, found.vectors[0]
+        quanta = float((vector * vector) @ block.quanta[: vector.size])
+        if directions_free(self.converged.model, int(block.quanta[vector.size - 1])):
+            return quanta, math.nan
+        square = float(vector @ block.jx_squared(vector))
+        return quanta, 2.0 * math.sqrt(max(0.0, square)) / self.converged.model.spins

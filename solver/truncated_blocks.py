@@ -18,7 +18,7 @@ from scipy.linalg.lapack import dstebz
 from solver.converged import Converged, order_parameter_of
 from solver.excitation import BlockSearch, ExcitationLevel, ExcitationSpectrum
 from solver.moments import excitation_moments
-from solver.truncated import TruncatedValues, error_of
+from solver.truncated import TruncatedValues, directions_free, error_of
 
 Array = NDArray[np.float64]
 _EPS = float(np.finfo(np.float64).eps)
@@ -149,7 +149,9 @@ class BlockTruncations:
             energy=energy,
             gap=self._gap(ground, cutoff) if gap else None,
             boson_number=moments.quanta,
-            order_parameter=order_parameter_of(moments),
+            order_parameter=math.nan
+            if directions_free(self.converged.model, cutoff)
+            else order_parameter_of(moments),
             levels=self._levels(cutoff) if levels else None,
         )
         self._found[cutoff] = (gap, values_found)

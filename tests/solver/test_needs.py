@@ -170,6 +170,23 @@ def test_without_coupling(spins):
     assert tilted.energy == pytest.approx(-2.5 * spins)
 
 
+def test_nothing_at_all_says_that_the_ground_state_is_one_of_many():
+    answer = answer_cutoff(CutoffQuestion(CollectiveModel(4, 1.0, 0.0, 0.0, 0.0)))
+    assert answer.note is not None
+    assert "one of many" in answer.note
+    assert answer.needed["order_parameter"] == answer.needed["boson_number"] == 0
+
+
+def test_many_spins_are_checked_as_well():
+    """N = 600 at twice critical: a window of spin projections keeps the truncated solves small."""
+    answer = answer_cutoff(CutoffQuestion(CollectiveModel(600, 1.0, 1.0, 1.0, 1.0)))
+    assert answer.note is None
+    assert answer.status["boson_number"] == "checked"
+    # in a single displaced well the quanta are all but Poissonian around l^2 N (1 - 1/16)
+    assert answer.boson_number == pytest.approx(562.5, rel=2e-3)
+    assert answer.needed["boson_number"] == pytest.approx(562.5 + 4.6 * math.sqrt(562.5), rel=0.03)
+
+
 def test_all_levels_and_a_single_quantity():
     model = CollectiveModel(6, 1.0, 1.0, 0.7, 0.4)
     whole = answer_cutoff(CutoffQuestion(model, levels=40))
