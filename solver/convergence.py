@@ -19,20 +19,11 @@ from solver.converged import Converged, converge
 from solver.errors import QuestionError
 from solver.forecast import first_cutoff, forecast
 from solver.model import CollectiveModel
-from solver.needs import (
-    COMMON,
-    MOST_LEVELS,
-    CutoffQuestion,
-    answer_cutoff,
-    error_of,
-    levels_bound,
-    solving_accuracy,
-    tail_above,
-    truncations_of,
-)
+from solver.needs import MOST_LEVELS, CutoffQuestion, answer_cutoff, solving_accuracy, truncations_of
 from solver.shifted_truncation import ShiftedTruncations
-from solver.truncated import largest_affordable
-from solver.wanted import Wanted
+from solver.truncated import error_of, largest_affordable
+from solver.truncation_bounds import levels_bound, tail_above
+from solver.wanted import COMMON, RANGES, Wanted
 
 Array = NDArray[np.float64]
 ConvergenceBasis = Literal["fock", "shifted"]
@@ -44,6 +35,7 @@ LARGEST_CUTOFF = 100_000
 _REACH = 1.5
 _LONG = 4
 _FAR_OFF = 3.0
+_SHARPER = 1e-6
 
 
 @dataclass(frozen=True, slots=True)
@@ -132,7 +124,9 @@ class Convergence:
 def convergence(question: ConvergenceQuestion) -> Convergence:
     """Truncated calculations at every cutoff asked for. Raises ConvergenceError."""
     model, wanted = question.model, question.wanted
-    tolerance, angle = solving_accuracy(model, wanted)
+    # far better than wanted: the errors themselves are shown, down to small ones
+    sharp = _sharpened(wanted)
+    tolerance, angle = solving_accuracy(model, sharp)
     exact = converge(model, question.levels, tolerance, angle)
     shifted = ShiftedTruncations(exact, tolerance, angle) if question.basis == "shifted" else None
     cutoffs = question.cutoffs or _sensible(question, shifted)
@@ -143,7 +137,7 @@ def convergence(question: ConvergenceQuestion) -> Convergence:
         note = f"cutoffs above {most} left out: a truncated solve would be too large"
         if not cutoffs:
             raise QuestionError("cutoffs", question.cutoffs, f"at least one up to {most}")
-    truncations = shifted or truncations_of(exact, wanted, cutoffs[-1])
+    truncations = shifted or truncations_of(exact, sharp, cutoffs[-1])
     found = [truncations.at(cutoff, gap=True, levels=True) for cutoff in cutoffs]
     tails = [
         shifted.tail_above(cutoff) if shifted is not None else tail_above(exact, cutoff) for cutoff in cutoffs
@@ -167,6 +161,12 @@ def convergence(question: ConvergenceQuestion) -> Convergence:
         plateaus=tuple(_plateaus(cutoffs, value, truth, wanted, model.mode)),
         note=note,
     )
+
+
+def _sharpened(wanted: Wanted) -> Wanted:
+    """The errors wanted, a millionth of them."""
+    least = {name: RANGES[name][0] for name in wanted.asked}
+    return Wanted(**{name: max(low, _SHARPER * (wanted.of(name) or 0.0)) for name, low in least.items()})
 
 
 def _plain(value: float | None) -> float | None:

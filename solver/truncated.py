@@ -58,11 +58,31 @@ class TruncatedValues:
     levels: float | None = None
 
 
+def error_of(exact: Converged, values: TruncatedValues, name: str) -> float:
+    """Signed error of one quantity of a truncated calculation; levels and gap in units of the mode.
+
+    Infinite where the calculation does not hold enough levels.
+    """
+    if name == "energies":
+        return math.inf if values.levels is None else values.levels / exact.model.mode
+    if name == "gap":
+        if values.gap is None or exact.gap is None:
+            return math.inf
+        return (values.gap - exact.gap) / exact.model.mode
+    if name == "boson_number":
+        return values.boson_number - exact.boson_number
+    return values.order_parameter - exact.order_parameter
+
+
 class Truncations(Protocol):
     """Truncated calculations of one model at any cutoff."""
 
     def at(self, cutoff: int, *, gap: bool, levels: bool = False) -> TruncatedValues:
         """What the calculation with n <= cutoff finds."""
+        ...
+
+    def errors(self, name: str) -> dict[int, float]:
+        """Signed errors of one quantity at the cutoffs solved so far."""
         ...
 
 
@@ -163,30 +183,40 @@ def _inverse_krylov(factor: Array, start: Array, goal: Array) -> tuple[Array, Ar
 
 
 class FockTruncations:
-    """Truncated calculations of a model solved by parity sectors."""
+    """Truncated calculations of a model solved by parity sectors.
+
+    top: largest cutoff expected; negligible: difference of no consequence between the parities
+    of a closed doublet.
+    """
 
     def __init__(self, converged: Converged, top: int, accuracy: Accuracy, negligible: float) -> None:
         self.converged, self.accuracy, self.top = converged, accuracy, top
-        self.end = max(sector.end for sector in converged.sectors.values())
         self.negligible = negligible
         self._made: dict[int, _Sector] = {}
-        self._known: dict[tuple[int, bool, bool], TruncatedValues] = {}
+        self._known: dict[int, tuple[bool, bool, TruncatedValues]] = {}
 
     def _sector(self, parity: int, cutoff: int) -> _Sector:
         known = self._made.get(parity)
         if known is None or known.top < cutoff:
-            top = max(self.top, cutoff if known is None else cutoff + 4)
-            self._made[parity] = _Sector(self.converged, parity, top)
+            self.top = max(self.top, cutoff if known is None else cutoff + 4)
+            self._made[parity] = _Sector(self.converged, parity, self.top)
         return self._made[parity]
 
     def at(self, cutoff: int, *, gap: bool, levels: bool = False) -> TruncatedValues:
         """What the calculation with n <= cutoff finds."""
-        for key in ((cutoff, gap, levels), (cutoff, True, levels), (cutoff, True, True)):
-            if key in self._known:
-                return self._known[key]
-        found = self._solve(cutoff, gap=gap, levels=levels)
-        self._known[cutoff, gap, levels] = found
+        has_gap, has_levels, found = self._known.get(cutoff, (False, False, None))
+        if found is None or (gap and not has_gap) or (levels and not has_levels):
+            found = self._solve(cutoff, gap=gap, levels=levels)
+            self._known[cutoff] = (gap, levels, found)
         return found
+
+    def errors(self, name: str) -> dict[int, float]:
+        """Signed errors of one quantity at the cutoffs solved so far."""
+        return {
+            cutoff: error_of(self.converged, values, name)
+            for cutoff, (has_gap, _, values) in self._known.items()
+            if has_gap or name != "gap"
+        }
 
     def _solve(self, cutoff: int, *, gap: bool, levels: bool) -> TruncatedValues:
         exact = self.converged

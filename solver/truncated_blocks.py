@@ -17,7 +17,7 @@ from scipy.linalg.lapack import dstebz
 from solver.converged import Converged, order_parameter_of
 from solver.excitation import BlockSearch, ExcitationLevel, ExcitationSpectrum
 from solver.moments import excitation_moments
-from solver.truncated import TruncatedValues
+from solver.truncated import TruncatedValues, error_of
 
 Array = NDArray[np.float64]
 _EPS = float(np.finfo(np.float64).eps)
@@ -34,6 +34,15 @@ class BlockTruncations:
         self.search = BlockSearch(self.spectrum.model, 2)
         self._below: tuple[float, list[int]] = (-math.inf, [])
         self._known: dict[tuple[int, int], Array] = {}
+        self._found: dict[int, tuple[bool, TruncatedValues]] = {}
+
+    def errors(self, name: str) -> dict[int, float]:
+        """Signed errors of one quantity at the cutoffs solved so far."""
+        return {
+            cutoff: error_of(self.converged, values, name)
+            for cutoff, (has_gap, values) in self._found.items()
+            if has_gap or name != "gap"
+        }
 
     def _parity(self, block: int) -> int:
         return self.spectrum.parity(ExcitationLevel(block, 0, 0.0, 0.0, np.ones(1)))
@@ -135,13 +144,15 @@ class BlockTruncations:
         amplitudes = np.zeros(min(self.spectrum.model.spins, ground) + 1)
         amplitudes[max(0, ground - cutoff) :] = vector
         moments = excitation_moments(self.spectrum, ExcitationLevel(ground, 0, energy, 0.0, amplitudes))
-        return TruncatedValues(
+        values_found = TruncatedValues(
             energy=energy,
             gap=self._gap(ground, cutoff) if gap else None,
             boson_number=moments.quanta,
             order_parameter=order_parameter_of(moments),
             levels=self._levels(cutoff) if levels else None,
         )
+        self._found[cutoff] = (gap, values_found)
+        return values_found
 
     def _levels(self, cutoff: int) -> float:
         """Largest error of a shown level, each compared within its block."""

@@ -1,4 +1,4 @@
-"""How accurate an asker's own calculation has to be, quantity by quantity."""
+"""What a truncated calculation is judged by, and how far off it may be."""
 
 from __future__ import annotations
 
@@ -7,7 +7,7 @@ from dataclasses import dataclass
 from solver.errors import QuestionError
 
 QUANTITIES = ("energies", "gap", "boson_number", "order_parameter", "tail")
-# tightest and widest error that can be asked for
+# tightest and widest error that can be asked for; below them rounding would decide
 RANGES: dict[str, tuple[float, float]] = {
     "energies": (1e-12, 1.0),
     "gap": (1e-9, 1.0),
@@ -49,3 +49,10 @@ class Wanted:
         """Wanted error of one quantity."""
         value: float | None = getattr(self, quantity)
         return value
+
+    def least(self, *quantities: str) -> float | None:
+        """The smallest error wanted of these quantities; None where none of them is asked."""
+        return min((w for name in quantities if (w := self.of(name)) is not None), default=None)
+
+
+COMMON = Wanted(energies=1e-3, gap=1e-3, boson_number=1e-2, order_parameter=1e-3, tail=1e-4)

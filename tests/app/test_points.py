@@ -229,7 +229,7 @@ def test_truncated_calculations_converge_to_the_point(server: RunningServer) -> 
 
 
 def test_an_unaffordable_comparison_is_refused(start_server: ServerFactory) -> None:
-    server = start_server("--price-ceiling", "1")
+    server = start_server("--ceiling", "1")
     answer = server.client.get("/api/point/convergence?spins=2000&at=0.7")
     assert answer.status_code == 422
     assert answer.json()["error"]["code"] == "too-expensive"
