@@ -1,4 +1,4 @@
-"""The pictures of one point as plain figure data: number distribution and the two phase-space maps."""
+"""The pictures of one point as plain figure data: numbers, phase-space maps, spin noise."""
 
 import math
 from collections.abc import Mapping, Sequence
@@ -12,14 +12,16 @@ SEQUENTIAL = ((0.0, "paper"), (0.5, "map-above"), (0.8, "map-high"), (1.0, "map-
 HEIGHT = 430
 BAR_HEIGHT = 300
 FEWEST_BARS = 6
+ELLIPSE_POINTS = 180
 
 
 def point_figures(sheet: Sheet, result: Mapping[str, Any]) -> dict[str, dict[str, Any]]:
-    """Return the figures `distribution`, `wigner` and `husimi` of a point's result."""
+    """Return the figures `distribution`, `wigner`, `husimi` and `noise` of a point's result."""
     return {
         "distribution": distribution_figure(result),
         "wigner": wigner_figure(result["portrait"]["wigner"]),
         "husimi": husimi_figure(result["portrait"]["husimi"], sheet.frame),
+        "noise": noise_figure(result["portrait"]["noise"], sheet.frame),
     }
 
 
@@ -122,6 +124,37 @@ def husimi_figure(found: Mapping[str, Any], frame: str) -> dict[str, Any]:
     layout["xaxis"] = _axis(f"φ/π, from {zero}", [-0.5, 1.5]) | {"tickvals": [-0.5, 0, 0.5, 1, 1.5]}
     layout["yaxis"] = _axis(f"cos θ, from {polar}", [rows[0] - half, rows[-1] + half])
     return _figure([trace], layout)
+
+
+def noise_figure(found: Mapping[str, float], frame: str) -> dict[str, Any]:
+    """Return the noise of the spin orthogonal to its mean, beside the circle of a coherent spin state."""
+    angles = [2.0 * math.pi * step / ELLIPSE_POINTS for step in range(ELLIPSE_POINTS + 1)]
+    wide, high = found["in_plane"], found["along_y"]
+    across = "Jy" if frame == "cavity" else "Sy"
+    traces = []
+    for name, stroke, a, b in (
+        ("coherent spin state", style.SECOND, 1.0, 1.0),
+        ("this state", style.FIRST, wide, high),
+    ):
+        x, y = [a * math.cos(angle) for angle in angles], [b * math.sin(angle) for angle in angles]
+        traces.append(
+            {
+                "type": "scatter",
+                "mode": "lines",
+                "x": x,
+                "y": y,
+                "line": stroke.line(),
+                "hovertemplate": f"{name}: semi-axes {a:.4g} and {b:.4g}<extra></extra>",
+            }
+        )
+    traces[1] |= {"fill": "toself", "fillcolor": "token:even/0.12"}
+    reach = 1.12 * max(1.0, wide, high)
+    layout = _layout(HEIGHT)
+    layout["xaxis"] = _axis("in the plane of the mean spin, units of √N/2", [-reach, reach])
+    layout["yaxis"] = _axis(f"along {across}, units of √N/2", [-reach, reach])
+    layout["yaxis"] |= {"scaleanchor": "x", "constrain": "domain"}
+    layout["xaxis"] |= {"constrain": "domain"}
+    return _figure(traces, layout)
 
 
 def _map(

@@ -1,7 +1,7 @@
 """The page of one point, its JSON, and its pictures."""
 
 import asyncio
-from dataclasses import dataclass, replace
+from dataclasses import asdict, dataclass, replace
 from typing import Any
 
 from fastapi import APIRouter, Request
@@ -10,12 +10,15 @@ from starlette.responses import JSONResponse, Response
 from app import exports, links
 from app.errors import SoftmodeError
 from app.face import Face, face_of
+from app.figure_convergence import convergence_figure, convergence_key
 from app.figure_point import point_figures
 from app.figure_readout import readout
 from app.keys import number_text
 from app.pages import Shell, query_of, rendered, shell
 from app.places import STATE, Place
-from app.points import PointDesk
+from app.point_work import WORK as CONVERGENCE
+from app.point_work import convergence_at
+from app.points import PointDesk, check_ceilings
 from app.store import Store
 from app.symbols import place_title, symbol, values_in_force
 
@@ -83,7 +86,41 @@ async def point_picture(request: Request) -> Response:
         {
             "figures": await asyncio.to_thread(point_figures, place.sheet, result),
             "readout": readout(place.sheet, result),
-            "portrait": {key: portrait[key] for key in told} | {"resolved": portrait["wigner"]["resolved"]},
+            "portrait": {key: portrait[key] for key in told}
+            | {"resolved": portrait["wigner"]["resolved"], "noise": portrait["noise"]},
+        }
+    )
+
+
+@router.get("/api/point/convergence")
+async def point_convergence(request: Request) -> Response:
+    """Return what truncated calculations of a point get wrong, cutoff by cutoff, with a figure of it.
+
+    202 when it takes longer than `wait`: then ask again.
+    """
+    pairs = links.split_query(query_of(request))
+    wait = links.take(pairs, "wait", links.WAIT)
+    place = links.place_from_pairs(pairs)
+    asked = await asyncio.to_thread(convergence_at, place)
+    desk: PointDesk = request.app.state.points
+    check_ceilings(asked.model, asked.seconds, asked.most_bytes, desk.engine.settings)
+    client = request.client.host if request.client else ""
+    found = await desk.compute(((asked,), CONVERGENCE, "ground"), asked.model.spins, client, wait)
+    if found is None:
+        return _accepted()
+    outcome, provenance = found
+    row = outcome.rows[0]
+    bases: dict[str, Any] = {name: row[name] for name in ("fock", "shifted") if name in row}
+    wanted = asdict(asked.fock.wanted)
+    return await _json(
+        {
+            "link": links.whole(links.place_query(place), links.POINT_PAGE),
+            "provenance": provenance,
+            "wanted": wanted,
+            "bases": bases,
+            "notes": row["notes"] + [one["note"] for one in bases.values() if one["note"]],
+            "figure": convergence_figure(bases, wanted, place.sheet.frame),
+            "key": convergence_key(),
         }
     )
 

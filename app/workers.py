@@ -25,6 +25,7 @@ from typing import Any
 
 from app.companions import companions
 from app.cutoff_work import answer_margins, answer_needs
+from app.point_work import answer_convergence
 from app.series import SERIES_KEYS
 from solver import (
     SOLVER_DIGEST,
@@ -131,6 +132,7 @@ WORK: dict[str, Computer] = {
     "points": compute,
     "needs": functools.partial(compute_each, answer_needs),
     "margins": functools.partial(compute_each, answer_margins),
+    "convergence": functools.partial(compute_each, answer_convergence),
 }
 
 

@@ -31,7 +31,7 @@ from solver.needs import (
 from solver.shifted_truncation import ShiftedTruncations
 from solver.truncated import FockTruncations, TruncatedValues, Truncations, error_of
 from solver.truncation_bounds import levels_bound, tail_above
-from solver.wanted import COMMON, Wanted
+from solver.wanted import COMMON, RANGES, Wanted
 
 Array = NDArray[np.float64]
 ConvergenceBasis = Literal["fock", "shifted"]
@@ -43,6 +43,7 @@ LARGEST_CUTOFF = 100_000
 _REACH = 1.5
 _LONG = 4
 _FAR_OFF = 3.0
+_SHARPER = 1e-6
 
 
 @dataclass(frozen=True, slots=True)
@@ -131,11 +132,13 @@ class Convergence:
 def convergence(question: ConvergenceQuestion) -> Convergence:
     """Truncated calculations at every cutoff asked for. Raises ConvergenceError."""
     model, wanted = question.model, question.wanted
-    tolerance, angle = solving_accuracy(model, wanted)
+    # far better than wanted: the errors themselves are shown, down to small ones
+    sharp = _sharpened(wanted)
+    tolerance, angle = solving_accuracy(model, sharp)
     exact = converge(model, question.levels, tolerance, angle)
     shifted = ShiftedTruncations(exact, tolerance, angle) if question.basis == "shifted" else None
     cutoffs = question.cutoffs or _sensible(question, shifted)
-    truncations: Truncations = shifted or truncations_of(exact, wanted, cutoffs[-1])
+    truncations: Truncations = shifted or truncations_of(exact, sharp, cutoffs[-1])
     found = _solved(truncations, cutoffs)
     note = None
     if len(found) < len(cutoffs):
@@ -179,6 +182,12 @@ def _solved(truncations: Truncations, cutoffs: Sequence[int]) -> dict[int, Trunc
     if refused is not None and not found:
         raise refused
     return dict(sorted(found.items()))
+
+
+def _sharpened(wanted: Wanted) -> Wanted:
+    """The errors wanted, a millionth of them."""
+    least = {name: RANGES[name][0] for name in wanted.asked}
+    return Wanted(**{name: max(low, _SHARPER * (wanted.of(name) or 0.0)) for name, low in least.items()})
 
 
 def _plain(value: float | None) -> float | None:

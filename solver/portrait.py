@@ -9,7 +9,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import asdict, dataclass
 from typing import Any, Literal
 
 import numpy as np
@@ -34,6 +34,7 @@ from solver.phase_space import (
 from solver.point import PointAnswer, PointQuestion
 from solver.shifted_basis import ShiftedBlock
 from solver.spectrum import Start
+from solver.spin_noise import NoiseEllipse, noise_ellipse
 from solver.sweep import solve_chain_with_states
 
 Array = NDArray[np.float64]
@@ -51,7 +52,8 @@ class Portrait:
 
     state: "ground" (of definite parity without bias), or "plus" / "minus", the symmetry-broken
     combination with positive or negative <a>. closed: whether the ground doublet is closed, so
-    that those two exist. distribution: P(n) from n = 0. parity_of_n: <(-1)^n>.
+    that those two exist. distribution: P(n) from n = 0. parity_of_n: <(-1)^n>. noise: of the spin,
+    orthogonal to its mean.
     """
 
     answer: PointAnswer
@@ -61,6 +63,7 @@ class Portrait:
     parity_of_n: float
     wigner: WignerMap
     husimi: HusimiMap
+    noise: NoiseEllipse
 
     @property
     def above_needed(self) -> float | None:
@@ -90,6 +93,7 @@ class Portrait:
                 "phi": self.husimi.phi.tolist(),
                 "values": _rounded(self.husimi.values),
             },
+            "noise": asdict(self.noise),
         }
 
 
@@ -126,6 +130,7 @@ def draw_portrait(questions: Sequence[PointQuestion], state: StateName = "ground
         float(distribution @ signs),
         wigner_map(found),
         husimi_map(found),
+        noise_ellipse(found),
     )
 
 

@@ -45,7 +45,7 @@ export function marked(text) {
   return out;
 }
 
-function key(entries) {
+export function key(entries) {
   const list = document.createElement("span");
   list.className = "key";
   for (const entry of entries) {

@@ -3,6 +3,7 @@
 import { bound, plain } from "./format.js";
 import { looks, paper } from "./looks.js";
 import { ask, Problem, withQuery } from "./net.js";
+import { key as keyOf } from "./overlay.js";
 import { copyText, save } from "./share.js";
 import { resolver, size } from "./tokens.js";
 import { cellOf, element, Values } from "./values.js";
@@ -11,9 +12,12 @@ const NARROW = 480;
 const SCALE_WIDTH = 62;
 const ROUNDING = 1e-12;
 const POLL = 1000;
-const NAMES = ["distribution", "wigner", "husimi"];
+const NAMES = ["distribution", "wigner", "husimi", "noise"];
+const WIDE = ["distribution", "convergence"];
 // shown first, then whatever else there is
 const ORDER = ["entropy", "squeezing", "squeezing_ramsey", "bunching", "boson_number", "boson_variance"];
+
+const PLATEAU_WORDS = { energy: "ground energy", gap: "gap", boson_number: "boson number", order_parameter: "order parameter" };
 
 const part = (id) => document.getElementById(id);
 const boot = JSON.parse(part("boot").textContent);
@@ -30,12 +34,12 @@ class Pictures {
   async draw() {
     if (!this.figures) return;
     const resolve = resolver();
-    await Promise.all(NAMES.map((name) => this.one(name, resolve)));
+    await Promise.all(Object.keys(this.figures).map((name) => this.one(name, resolve)));
   }
 
   one(name, resolve) {
     const { data, layout, config } = this.figures[name];
-    const half = this.fixedWidth === null || name === "distribution" ? 1 : 0.49;
+    const half = this.fixedWidth === null || WIDE.includes(name) ? 1 : 0.49;
     const width = this.fixedWidth === null ? part(name).clientWidth : Math.round(this.fixedWidth * half);
     const margin = { ...layout.margin };
     if (width < NARROW) margin.l = 54;
@@ -44,7 +48,7 @@ class Pictures {
     margin.b = Math.round(margin.b * grow);
     // maps are square inside, beside their scale
     const square = Math.min(520, width - margin.l - margin.r - SCALE_WIDTH) + margin.t + margin.b;
-    const height = name === "distribution" ? layout.height * this.shrink * grow : square;
+    const height = WIDE.includes(name) ? layout.height * this.shrink * grow : square;
     return window.Plotly.react(part(name), resolve(data), resolve({ ...layout, width, height, margin }), config);
   }
 }
@@ -107,6 +111,11 @@ function showPortrait(portrait) {
   part("states").hidden = !portrait.doublet_closed;
 }
 
+function showNoise(noise) {
+  const length = noise.mean_spin > 0 ? `mean spin ${plain(noise.mean_spin, 4)} of N/2` : "no mean spin; drawn across z";
+  part("told-noise").textContent = `${length}; dashed: coherent spin state`;
+}
+
 function tailWords(weight) {
   return weight > 0 ? bound(weight) : "0";
 }
@@ -124,10 +133,10 @@ function failed(problem) {
 }
 
 // A point that takes long, or has to wait for others, is asked for again.
-async function fetchPoint() {
+async function fetchPoint(path) {
   for (;;) {
     try {
-      const answer = await ask(withQuery("api/point/picture", boot.query));
+      const answer = await ask(withQuery(path, boot.query));
       if (answer.status !== 202) return await answer.json();
     } catch (problem) {
       if (problem.status !== 503) throw problem;
@@ -137,18 +146,43 @@ async function fetchPoint() {
 }
 
 async function show() {
-  const found = await fetchPoint();
+  const found = await fetchPoint("api/point/picture");
   values.data = found.readout;
   const [curve] = found.readout.curves;
   showLevels(curve);
   showNumbers(curve);
   showPortrait(found.portrait);
+  showNoise(found.portrait.noise);
   showProvenance(found.readout.provenance, found.readout.id);
   part("waiting").hidden = true;
   part("content").hidden = false;
   pictures.figures = found.figures;
   await pictures.draw();
   document.documentElement.dataset.drawn = "";
+  // many calculations: only for somebody who looks
+  new IntersectionObserver((entries, observer) => {
+    if (!entries.some((entry) => entry.isIntersecting)) return;
+    observer.disconnect();
+    showConvergence().catch((problem) => {
+      part("told-convergence").textContent = `No comparison: ${problem.message}`;
+    });
+  }).observe(part("convergence-part"));
+}
+
+async function showConvergence() {
+  const found = await fetchPoint("api/point/convergence");
+  const { shifted, fock } = found.bases;
+  const told = ["Errors of truncated calculations against the certified answer; what one solve tells is a bound for the levels, an estimate for the others."];
+  if (fock) told.push(`Number states: ${fock.cutoffs.length} cutoffs up to ${fock.cutoffs.at(-1)}.`);
+  if (shifted) told.push(`Displaced ladders: up to ${shifted.cutoffs.at(-1)} on each ladder.`);
+  part("told-convergence").textContent = [...told, ...found.notes].join(" ");
+  part("key-convergence").replaceChildren(keyOf(found.key));
+  const lines = (fock?.plateaus ?? []).map((one) => `⚠ False plateau: from cutoff ${one.from} to ${one.to} the ${PLATEAU_WORDS[one.quantity]} looks settled at ${plain(one.value, 6)}; it is ${plain(one.truth, 6)}.`);
+  part("plateaus").replaceChildren(...lines.map((line) => element("p", "", line)));
+  part("plateaus").hidden = lines.length === 0;
+  pictures.figures = { ...pictures.figures, convergence: found.figure };
+  await pictures.draw();
+  document.documentElement.dataset.compared = "";
 }
 
 function say(words) {

@@ -204,3 +204,32 @@ def test_figures_of_a_point_are_its_numbers(server: RunningServer, query: str) -
     assert wigner["zmin"] == -wigner["zmax"]
     middle = found["portrait"]["wigner"]["values"][100][100]
     assert middle == pytest.approx(2.0 / math.pi * found["portrait"]["parity_of_n"], abs=1e-6)
+
+
+def test_truncated_calculations_converge_to_the_point(server: RunningServer) -> None:
+    answer = server.client.get("/api/point/convergence?spins=6&at=0.7&need=1e-4")
+    assert answer.status_code == 200, answer.text
+    found = answer.json()
+    assert found["wanted"]["energies"] == 1e-4
+    needed = point(server, "spins=6&at=0.7&need=1e-4")["series"]["cutoff_needed"][0]
+    for basis in ("fock", "shifted"):
+        row = found["bases"][basis]
+        errors = row["error"]["energies"]
+        assert row["cutoffs"][0] == 0
+        assert row["cutoffs"][-1] >= (needed if basis == "fock" else 4)
+        assert errors[-1] < 1e-4 < errors[0]
+        assert row["error"]["boson_number"][-1] < 1e-2
+        assert row["error"]["order_parameter"][-1] < 1e-3
+    fock = found["bases"]["fock"]
+    # the bound from one solve holds wherever it says something, up to the rounding of truncated solves
+    pairs = zip(fock["error"]["energies"], fock["bound"]["energies"], strict=True)
+    assert all(error <= bound + 1e-8 for error, bound in pairs if None not in (error, bound))
+    names = {trace["name"] for trace in found["figure"]["data"]}
+    assert names == {entry["label"] for entry in found["key"]} - {"error wanted"}
+
+
+def test_an_unaffordable_comparison_is_refused(start_server: ServerFactory) -> None:
+    server = start_server("--ceiling", "1")
+    answer = server.client.get("/api/point/convergence?spins=2000&at=0.7")
+    assert answer.status_code == 422
+    assert answer.json()["error"]["code"] == "too-expensive"

@@ -104,6 +104,19 @@ def test_pictures_and_files(visit: VisitFactory, server: RunningServer) -> None:
     assert page.get_attribute("#twin", "href") == "api/point?spins=4&to=1&points=11&at=0.5"
 
 
+def test_convergence_is_compared_once_somebody_looks(visit: VisitFactory, server: RunningServer) -> None:
+    one = visit()
+    page = open_point(one, "spins=10&at=0.7")
+    assert "mean spin" in page.inner_text("#told-noise")
+    page.locator("#convergence-part").scroll_into_view_if_needed()
+    page.wait_for_selector("html[data-compared]", state="attached")
+    assert page.locator("#convergence .cartesianlayer .subplot").count() == 4
+    key = page.inner_text("#key-convergence")
+    assert all(words in key for words in ("number states", "displaced ladders", "told from one solve"))
+    told = server.client.get("/api/point/convergence?spins=10&at=0.7").json()
+    assert f"up to {told['bases']['fock']['cutoffs'][-1]}." in page.inner_text("#told-convergence")
+
+
 def test_broken_states_are_offered_where_the_doublet_is_closed(visit: VisitFactory) -> None:
     one = visit()
     page = open_point(one, "spins=30&to=1&at=1&points=5")
