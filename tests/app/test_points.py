@@ -157,7 +157,7 @@ def test_who_cannot_wait_asks_again(server: RunningServer) -> None:
 
 def test_one_client_cannot_fill_the_queue(start_server: ServerFactory) -> None:
     server = start_server("--workers", "1")
-    addresses = [f"/api/point?spins=1500&at=0.6{digit}1&wait=0" for digit in range(8)]
+    addresses = [f"/api/point?spins=700&at=0.6{digit}1&wait=0" for digit in range(8)]
     answers = [server.client.get(address) for address in addresses]
     refused = [answer for answer in answers if answer.status_code == 503]
     assert {answer.status_code for answer in answers} == {202, 503}
