@@ -85,25 +85,9 @@ def _trace(
 
 
 def _layout(height: int, last: int) -> dict[str, Any]:
-    return {
-        "height": height,
-        "margin": {"l": 80, "r": 16, "t": HEAD, "b": FOOT, "pad": 0},
-        "paper_bgcolor": "token:paper",
-        "plot_bgcolor": "token:paper",
-        "font": {"family": "token:font-figure", "size": "token:size-tick", "color": "token:ink"},
-        "showlegend": False,
-        "hovermode": "closest",
-        "hoverlabel": {
-            "bgcolor": "token:card",
-            "bordercolor": "token:rule",
-            "font": {"color": "token:ink", "size": "token:size-key"},
-        },
-        "dragmode": False,
-        "xaxis": style.horizontal_axis("cutoff", (-0.5, last + 0.5), "y", revision="cutoff")
-        | {"fixedrange": True},
-        "shapes": [],
-        "annotations": [],
-    }
+    across = style.horizontal_axis("cutoff", (-0.5, last + 0.5), "y", revision="cutoff")
+    layout = style.still_layout(height, {"l": 80, "r": 16, "t": HEAD, "b": FOOT})
+    return layout | {"xaxis": across | {"fixedrange": True}, "shapes": [], "annotations": []}
 
 
 def _head(text: str, top: float) -> dict[str, Any]:

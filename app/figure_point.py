@@ -11,6 +11,7 @@ DIVERGING = ((0.0, "map-low"), (0.25, "map-below"), (0.5, "paper"), (0.75, "map-
 SEQUENTIAL = ((0.0, "paper"), (0.5, "map-above"), (0.8, "map-high"), (1.0, "map-deep"))
 HEIGHT = 430
 BAR_HEIGHT = 300
+MARGIN = {"l": 62, "r": 16, "t": 26, "b": 54}
 FEWEST_BARS = 6
 ELLIPSE_POINTS = 180
 
@@ -192,21 +193,7 @@ def _axis(title: str, limits: list[float] | None) -> dict[str, Any]:
 
 
 def _layout(height: int) -> dict[str, Any]:
-    return {
-        "height": height,
-        "margin": {"l": 62, "r": 16, "t": 26, "b": 54, "pad": 0},
-        "paper_bgcolor": "token:paper",
-        "plot_bgcolor": "token:paper",
-        "font": {"family": "token:font-figure", "size": "token:size-tick", "color": "token:ink"},
-        "showlegend": False,
-        "hovermode": "closest",
-        "hoverlabel": {
-            "bgcolor": "token:card",
-            "bordercolor": "token:rule",
-            "font": {"color": "token:ink", "size": "token:size-key"},
-        },
-        "dragmode": False,
-    }
+    return style.still_layout(height, MARGIN)
 
 
 def _figure(data: list[dict[str, Any]], layout: dict[str, Any]) -> dict[str, Any]:

@@ -4,6 +4,7 @@ A colour is written "token:NAME" or, translucent, "token:NAME/0.2"; NAME is a cu
 stylesheet. A font size is written "token:size-NAME".
 """
 
+from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Any
 
@@ -154,6 +155,25 @@ def marks(x: list[float], y: list[float], axis: str) -> dict[str, Any]:
         },
         "name": "not yet within tol",
         "hoverinfo": "skip",
+    }
+
+
+def still_layout(height: int, margin: Mapping[str, int]) -> dict[str, Any]:
+    """Return the layout of a picture that is looked at, not moved: numbers appear under the pointer."""
+    return {
+        "height": height,
+        "margin": {**margin, "pad": 0},
+        "paper_bgcolor": "token:paper",
+        "plot_bgcolor": "token:paper",
+        "font": {"family": "token:font-figure", "size": "token:size-tick", "color": "token:ink"},
+        "showlegend": False,
+        "hovermode": "closest",
+        "hoverlabel": {
+            "bgcolor": "token:card",
+            "bordercolor": "token:rule",
+            "font": {"color": "token:ink", "size": "token:size-key"},
+        },
+        "dragmode": False,
     }
 
 

@@ -2,20 +2,19 @@
 
 import { Cursor } from "./cursor.js";
 import { Form } from "./form.js";
-import { duration } from "./format.js";
 import { glimpse, Watch } from "./jobs.js";
 import { looks, paper } from "./looks.js";
 import { askJson, post, withQuery } from "./net.js";
 import { Plot } from "./plot.js";
 import { Readout } from "./readout.js";
 import { Share } from "./share.js";
+import { part, Progress, showFace as applyFace, showLink as applyLink, showProvenance, stopWaiting, wait, ZoomKeeper } from "./sheet_page.js";
 
 const GLIMPSE_POINTS = 21;
 const GLIMPSE_PATIENCE = 700;
 const ADDRESS_PAUSE = 300;
 const FACE_PATIENCE = 400;
 
-const part = (id) => document.getElementById(id);
 const boot = JSON.parse(part("boot").textContent);
 const state = { query: boot.query, id: null, title: part("title").textContent, whole: null };
 // an address with a short name keeps it
@@ -25,7 +24,9 @@ const plot = new Plot(part("plot"), part("stage"));
 const cursor = new Cursor(part("plot-cursor"), part("stage"), plot);
 const readout = new Readout(part("strip"), part("more"), part("more-table"), part("run-sheet"));
 const form = new Form(part("form"), { commit: () => commit(), drag: () => drag(), reword: () => reword() });
-const watch = new Watch(boot, { picture: draw, progress: showProgress, ended, failed });
+const watch = new Watch(boot, { picture: draw, progress: (facts) => progress.show(facts), ended: (facts) => progress.ended(facts), failed });
+const progress = new Progress({ cancel: () => watch.cancel(), goOn: () => compute() });
+const keeper = new ZoomKeeper(form, "api/link", { replaced, failed });
 
 const address = (query) => withQuery("sweep", query);
 const absolute = (query) => new URL(address(query), location.href).href;
@@ -35,7 +36,7 @@ looks(() => plot.draw());
 paper(plot, () => cursor.place());
 
 plot.onDrawn = () => cursor.place();
-plot.onZoom = (range) => zoomed(range);
+plot.onZoom = (range) => keeper.zoomed(range);
 cursor.onMove = (point) => readout.show(point, cursor.pinned !== null);
 cursor.describe = (point) => readout.describe(point);
 cursor.onPin = (value) => pinned(value);
@@ -48,12 +49,12 @@ readout.onOpen = () => openPoint();
 async function draw(picture) {
   plot.whole = wholeRange(picture);
   state.id = picture.readout.id;
-  part("stage").querySelector(".waiting")?.remove();
+  stopWaiting();
   // the plots first: they measure the page, which is slow while the rest of it changes
   const drawn = plot.show(picture.figure);
   part("stage").setAttribute("aria-busy", String(!picture.complete));
   readout.feed(picture.readout);
-  showProvenance(picture.readout.provenance);
+  showProvenance(picture.readout.provenance, state.id);
   cursor.feed(readout.points(), picture.readout.pinned);
   await drawn;
   if (picture.complete) plot.rehearse();
@@ -64,62 +65,9 @@ function wholeRange(picture) {
   return [values[0], values.at(-1)];
 }
 
-function showProvenance(made) {
-  const when = made.computed_at ? `computed ${made.computed_at.replace("T", " ")}, ${made.seconds} s of processor time` : "still computing";
-  part("provenance").textContent = `Softmode ${made.softmode}, solver ${made.solver.slice(0, 12)}, numpy ${made.numpy}, scipy ${made.scipy}; ${when}; result ${state.id.slice(0, 16)}`;
-}
-
-// -- progress ---------------------------------------------------------------------------------------
-
-let showBar = null;
-
-function showProgress(facts) {
-  const active = facts.state === "queued" || facts.state === "running";
-  part("bar").max = facts.total;
-  part("bar").value = facts.done;
-  const words = facts.state === "queued" ? "waiting for a free processor" : duration(facts.seconds_left);
-  part("progress-words").textContent = `${facts.done} of ${facts.total} points${words ? `, ${words}` : ""}`;
-  part("cancel").hidden = !active;
-  part("go-on").hidden = true;
-  if (active) {
-    // a quick sweep is over before a bar could be read
-    showBar ??= setTimeout(() => { part("progress").hidden = false; }, 150);
-  }
-}
-
-function ended(facts) {
-  clearTimeout(showBar);
-  showBar = null;
-  part("cancel").hidden = true;
-  if (facts.state === "done") {
-    part("progress").hidden = true; // the last picture is on its way
-    return;
-  }
-  part("stage").setAttribute("aria-busy", "false");
-  part("stage").querySelector(".waiting")?.remove();
-  part("progress").hidden = false;
-  const words = { cancelled: "Cancelled", restarting: "The server is restarting", failed: "Failed" }[facts.state] ?? facts.state;
-  part("progress-words").textContent = `${words}: ${facts.done} of ${facts.total} points are there.`;
-  part("go-on").hidden = facts.state !== "cancelled";
-}
-
 function failed(problem) {
-  const facts = problem.facts ?? { message: String(problem.message), field: null, allowed: null };
-  clearTimeout(showBar);
-  showBar = null;
-  part("progress").hidden = true;
-  part("stage").setAttribute("aria-busy", "false");
-  part("stage").querySelector(".waiting")?.remove();
-  const atField = facts.field && form.problem(facts);
-  const lines = [["p", facts.message]];
-  if (!atField && facts.allowed !== null && facts.allowed !== undefined) lines.push(["p", `Allowed: ${facts.allowed}`]);
-  part("message").replaceChildren(...lines.map(([tag, text]) => Object.assign(document.createElement(tag), { textContent: text })));
-  part("message").hidden = false;
+  progress.failed(problem, form);
 }
-
-part("cancel").addEventListener("click", () => watch.cancel());
-part("go-on").addEventListener("click", () => compute());
-part("reload-now").addEventListener("click", () => location.reload());
 
 // -- state ------------------------------------------------------------------------------------------
 
@@ -132,30 +80,18 @@ function compute() {
 function reveal() {
   part("message").hidden = true;
   for (const id of ["toolbar", "stage", "stage-hint", "model"]) part(id).hidden = false;
-  if (!plot.figure && !part("stage").querySelector(".waiting")) {
-    part("stage").append(Object.assign(document.createElement("p"), { className: "waiting", textContent: "Computing the first points…" }));
-  }
+  wait(plot);
 }
 
 function showLink() {
-  part("link").value = absolute(state.query);
-  part("print-link").textContent = absolute(state.query);
-  part("to-cutoff").href = withQuery("cutoff", state.query);
-  const twin = part("twin");
-  if (twin) twin.href = withQuery("api/sweep", state.query);
+  applyLink(absolute(state.query), withQuery("api/sweep", state.query));
 }
 
 async function showFace(query, before) {
   const face = await askJson(withQuery("api/face", query, `coupling_as=${form.couplingAs.value}`));
   if (query !== state.query) return;
   state.title = face.title;
-  document.title = `${face.title} – Softmode`;
-  part("title").textContent = face.title;
-  part("note").textContent = face.note;
-  part("note").hidden = !face.note;
-  part("member").textContent = face.member;
-  part("hamiltonian").innerHTML = face.hamiltonian;
-  part("values").replaceChildren(...face.values.map((value) => Object.assign(document.createElement("li"), { innerHTML: value })));
+  applyFace(face, face.title);
   form.show(face, before);
 }
 
@@ -250,26 +186,11 @@ async function openPoint() {
   }
 }
 
-let zoomTimer = null;
-
-// Zooming replaces the address, it pushes nothing: the picture is already on the screen.
-function zoomed(range) {
-  clearTimeout(zoomTimer);
-  zoomTimer = setTimeout(async () => {
-    const text = range === null ? "" : `${range[0]}:${range[1]}`;
-    if (form.box("zoom").value === text) return;
-    form.box("zoom").value = text;
-    try {
-      const answer = await post("api/link", form.fields());
-      state.query = answer.query;
-      if (watch.run) watch.run.query = watch.query = answer.query;
-      form.committed = form.snapshot();
-      history.replaceState(null, "", address(answer.query));
-      showLink();
-    } catch (problem) {
-      failed(problem);
-    }
-  }, ADDRESS_PAUSE);
+function replaced(answer) {
+  state.query = answer.query;
+  if (watch.run) watch.run.query = watch.query = answer.query;
+  history.replaceState(null, "", address(answer.query));
+  showLink();
 }
 
 // -- dragging ---------------------------------------------------------------------------------------

@@ -5,6 +5,7 @@ import { looks, paper } from "./looks.js";
 import { ask, Problem, withQuery } from "./net.js";
 import { key as keyOf } from "./overlay.js";
 import { copyText, save } from "./share.js";
+import { part, showProvenance } from "./sheet_page.js";
 import { resolver, size } from "./tokens.js";
 import { cellOf, element, Values } from "./values.js";
 
@@ -19,7 +20,6 @@ const ORDER = ["entropy", "squeezing", "squeezing_ramsey", "bunching", "boson_nu
 
 const PLATEAU_WORDS = { energy: "ground energy", gap: "gap", boson_number: "boson number", order_parameter: "order parameter" };
 
-const part = (id) => document.getElementById(id);
 const boot = JSON.parse(part("boot").textContent);
 const here = new URL(withQuery("point", boot.query), location.href).href;
 const values = new Values();
@@ -118,10 +118,6 @@ function showNoise(noise) {
 
 function tailWords(weight) {
   return weight > 0 ? bound(weight) : "0";
-}
-
-function showProvenance(made, id) {
-  part("provenance").textContent = `Softmode ${made.softmode}, solver ${made.solver.slice(0, 12)}, numpy ${made.numpy}, scipy ${made.scipy}; computed ${made.computed_at.replace("T", " ")}, ${made.seconds} s of processor time; result ${id.slice(0, 16)}`;
 }
 
 function failed(problem) {
