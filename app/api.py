@@ -123,10 +123,13 @@ async def sweep_python(request: Request) -> Response:
 async def link_of_form(request: Request) -> Response:
     """Return the canonical link for what was typed into a form; a long one is stored under a short name."""
     sheet = links.from_form(await _body(request))
+    return _json(await _address_of(request, sheet))
+
+
+async def _address_of(request: Request, sheet: Sheet) -> dict[str, Any]:
+    """Return how a sheet is addressed: its link and query, short where need be, and its name."""
     query = await _engine(request).store.shortened(links.query_of(sheet))
-    return _json(
-        {"link": links.whole(query), "query": query, "sheet": sheet.data(), "id": identity.sheet_id(sheet)}
-    )
+    return {"link": links.whole(query), "query": query, "sheet": sheet.data(), "id": identity.sheet_id(sheet)}
 
 
 # -- jobs ---------------------------------------------------------------------------------------
@@ -136,23 +139,24 @@ async def link_of_form(request: Request) -> Response:
 async def start_job(request: Request) -> Response:
     """Start the job of a sheet, or join it, and hand out a lease.
 
-    With `first` the answer waits that many seconds for the first points and brings their picture.
+    The body is a sheet, `{"link": ...}`, or `{"form": ...}` with what was typed; the answer to a form
+    brings the address of its sheet. A form may give up a lease on what was shown before, as
+    `"instead": {"id": ..., "lease": ...}`: once the new job is held. With `first` the answer waits that
+    many seconds for the first points and brings their picture.
     """
     pairs = _pairs(request)
     patience = links.take(pairs, "first", FIRST)
     body = await _body(request)
-    if set(body) == {"link"}:
-        if not isinstance(body["link"], str):
-            raise SheetError("wrong-type", "'link' must be text", "link", body["link"], "a link")
-        sheet: Question = links.parse_link(await _whole_link(request, body["link"]))
-    else:
-        sheet = Sheet.model_validate(body)
     engine = _engine(request)
+    sheet = await _sheet_asked(request, body)
     job, lease = await engine.submit(sheet, _client(request))
+    _leave_other(engine, body.get("instead") if "form" in body else None)
     if job.error is not None:
         raise job.error
     facts = job.snapshot(engine.pool.size)
     facts |= {"lease": lease, "lease_seconds": engine.settings.lease_seconds}
+    if "form" in body and isinstance(sheet, Sheet):
+        facts["address"] = await _address_of(request, sheet)
     if patience:
         await job.wait_until(lambda one: one.done > 0 or not one.is_active, patience)
         facts |= job.snapshot(engine.pool.size)
@@ -162,6 +166,28 @@ async def start_job(request: Request) -> Response:
                 await asyncio.to_thread(exports.encode, facts), 202, media_type="application/json"
             )
     return _json(facts, 200 if job.state == "done" else 202)
+
+
+async def _sheet_asked(request: Request, body: dict[str, Any]) -> Question:
+    """Return the sheet that a body asks for: as a link, as a form, or key by key."""
+    if set(body) == {"link"}:
+        if not isinstance(body["link"], str):
+            raise SheetError("wrong-type", "'link' must be text", "link", body["link"], "a link")
+        return links.parse_link(await _whole_link(request, body["link"]))
+    if "form" in body and set(body) <= {"form", "instead"}:
+        if not isinstance(body["form"], dict):
+            raise SheetError("wrong-type", "'form' must be an object", "form", body["form"], "an object")
+        return links.from_form(body["form"])
+    return Sheet.model_validate(body)
+
+
+def _leave_other(engine: Engine, held: Any) -> None:
+    """Give up the lease that a form names; one that has lapsed, or names nothing, is given up already."""
+    if not isinstance(held, dict):
+        return
+    job = engine.jobs.get(str(held.get("id")))
+    if job is not None:
+        engine.leave(job, str(held.get("lease")))
 
 
 async def _whole_link(request: Request, link: str) -> str:

@@ -8,6 +8,8 @@ Numbers = list[float | None]
 
 # a band thinner than this share of its panel cannot be seen at any zoom that doubles can hold apart
 THINNEST_BAND = 1e-9
+# nobody zooms into a picture that is still growing: bands too thin to be seen as it stands can wait
+THINNEST_BAND_YET = 1e-3
 
 
 def joined(x: Sequence[float], rows: Sequence[Sequence[float | None]]) -> tuple[Numbers, Numbers]:
@@ -22,9 +24,15 @@ def joined(x: Sequence[float], rows: Sequence[Sequence[float | None]]) -> tuple[
 
 
 def outlines(
-    x: Sequence[float], low: Sequence[Numbers], high: Sequence[Numbers]
+    x: Sequence[float],
+    low: Sequence[Numbers],
+    high: Sequence[Numbers],
+    thinnest: float = THINNEST_BAND,
 ) -> tuple[Numbers, Numbers] | None:
-    """Return the outlines between lower and upper curves, or None when they are too thin to be seen."""
+    """Return the outlines between lower and upper curves, or None when they are too thin to be seen.
+
+    `thinnest` is the share of the curves' range that can be seen.
+    """
     known = [value for row in high for value in row if value is not None]
     widths = [
         top - bottom
@@ -32,7 +40,7 @@ def outlines(
         for bottom, top in zip(lower, upper, strict=True)
         if bottom is not None and top is not None
     ]
-    if not widths or max(widths) <= THINNEST_BAND * max(max(known) - min(known), 1e-300):
+    if not widths or max(widths) <= thinnest * max(max(known) - min(known), 1e-300):
         return None
     across: Numbers = []
     up: Numbers = []

@@ -5,7 +5,7 @@ from dataclasses import dataclass, field
 from typing import Any
 
 from app import figure_style as style
-from app.figure_joins import Numbers, joined, outlines
+from app.figure_joins import THINNEST_BAND, THINNEST_BAND_YET, Numbers, joined, outlines
 from app.figure_style import Stroke
 from app.sheets import Sheet
 from app.symbols import curve_label, with_unit
@@ -16,7 +16,7 @@ class Curve:
     """One curve of a result, reduced to the points that are computed.
 
     `series`, `limit`, `uncoupled` and `effective` hold one entry per entry of `x`; `spins` is the number of
-    spins at each point.
+    spins at each point; `thinnest` is the share of a panel below which a band is left out.
     """
 
     label: str
@@ -27,6 +27,7 @@ class Curve:
     limit: dict[str, Numbers]
     uncoupled: list[list[float]]
     effective: list[list[float | None] | None] | None
+    thinnest: float = THINNEST_BAND
 
 
 @dataclass
@@ -43,8 +44,11 @@ class Panel:
     from_zero: bool = False
 
 
-def computed_curves(sheet: Sheet, curves: Sequence[Mapping[str, Any]]) -> list[Curve]:
+def computed_curves(
+    sheet: Sheet, curves: Sequence[Mapping[str, Any]], *, complete: bool = True
+) -> list[Curve]:
     """Return the curves of a result without the points that are still missing."""
+    thinnest = THINNEST_BAND if complete or sheet.zoom is not None else THINNEST_BAND_YET
     found = []
     for number, curve in enumerate(curves):
         kept = [point for point, energy in enumerate(curve["series"]["energy"]) if energy is not None]
@@ -64,6 +68,7 @@ def computed_curves(sheet: Sheet, curves: Sequence[Mapping[str, Any]]) -> list[C
                 {key: pick(values) for key, values in curve["limit"].items()},
                 pick(curve["uncoupled"]["levels"]),
                 pick(curve["effective"]["energy"]) if "effective" in curve else None,
+                thinnest,
             )
         )
     return found
@@ -153,7 +158,7 @@ def _add_levels(panel: Panel, curve: Curve, zero: list[float], axis: str, *, fam
         upper = _by_parity(curve, "energy", parity, zero, most)
         lower = _by_parity(curve, "energy_lower", parity, zero, most)
         label = name if curve.stroke is None else f"{curve.label}, {name}"
-        outline = outlines(curve.x, lower, upper)
+        outline = outlines(curve.x, lower, upper, curve.thinnest)
         if outline is not None:
             panel.traces.append(style.band(*outline, stroke, axis, f"{label}: bounds"))
         panel.traces.append(style.curve(*joined(curve.x, upper), stroke, axis, label))
@@ -301,7 +306,7 @@ def _add_number(
         known = value is not None and error is not None
         low.append([value - error * factor if known else None])
         high.append([value + error * factor if known else None])
-    outline = outlines(curve.x, low, high)
+    outline = outlines(curve.x, low, high, curve.thinnest)
     if outline is not None:
         panel.traces.append(style.band(*outline, look, axis, f"{label}: bounds"))
     name = label if curve.stroke is None else f"{curve.label}, {label}"

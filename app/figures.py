@@ -40,7 +40,7 @@ def sweep_figure(sheet: Sheet, result: Mapping[str, Any]) -> dict[str, Any]:
     `layout.meta` has what the script draws on top: per panel its title, place and key, the key of the
     family, and the critical places.
     """
-    curves = computed_curves(sheet, curves_of(result))
+    curves = computed_curves(sheet, curves_of(result), complete=result["complete"])
     panels = [
         build(sheet, curves, "y" if number == 0 else f"y{number + 1}")
         for number, build in enumerate(BUILDERS)

@@ -20,6 +20,7 @@ from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
 from multiprocessing.connection import Connection, wait
 from multiprocessing.context import SpawnProcess
+from pathlib import Path
 from typing import Any
 
 from app.companions import companions
@@ -38,7 +39,7 @@ from solver import (
 
 logger = logging.getLogger(__name__)
 
-NICENESS = 5
+NICENESS = 10
 THREAD_CAPS = (
     "OMP_NUM_THREADS",
     "OPENBLAS_NUM_THREADS",
@@ -158,7 +159,7 @@ def _serve(pipe: Connection) -> None:
     if parent is not None:
         threading.Thread(target=_follow, args=(parent.sentinel,), daemon=True).start()
     # the server, and a browser on the same machine, come first: they show what is computed here
-    os.nice(NICENESS)
+    _stand_back()
     warm = [CollectiveModel(spins, 1.0, 1.0, 0.6, 0.6) for spins in (1, 4, 20)]
     compute([PointQuestion(model=model) for model in warm], lambda: False)
     with contextlib.suppress(EOFError, OSError):
@@ -168,6 +169,18 @@ def _serve(pipe: Connection) -> None:
             if message != STOP:  # a stop that came too late
                 questions, work, state = message
                 pipe.send(_answer(questions, work, state, pipe))
+
+
+def _stand_back() -> None:
+    """Let everything else on this machine come first.
+
+    Linux shares processors between sessions before it looks at niceness, so that a worker needs a session
+    of its own, with a niceness of its own, to stand back behind a browser.
+    """
+    os.nice(NICENESS)
+    with contextlib.suppress(OSError):
+        os.setsid()
+        Path("/proc/self/autogroup").write_text(str(NICENESS))
 
 
 def _answer(questions: Sequence[Any], work: str, state: StateName, pipe: Connection) -> Outcome:

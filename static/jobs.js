@@ -31,27 +31,29 @@ export class Watch {
 
   async begin(link, query) {
     this.leave();
-    this.link = link;
-    this.query = query;
-    const run = { query, alive: true, failures: 0, revision: -1, drawn: -1, lastPicture: 0 };
-    this.run = run;
+    const run = this.enter(link, query);
     try {
       // the first points are there before a stream could be: the answer waits for them
-      const { picture, ...facts } = await post(`api/jobs?first=${FIRST_PATIENCE}`, { link });
-      if (!run.alive) {
-        this.drop(facts.id, facts.lease);
-        return;
-      }
-      Object.assign(run, { id: facts.id, lease: facts.lease, pause: facts.lease_seconds * 333 });
-      run.pulse = setInterval(() => this.heartbeat(run), run.pause);
-      if (picture) {
-        run.revision = picture.revision;
-        run.drawn = picture.revision;
-        run.lastPicture = performance.now();
-        await this.calls.picture(picture);
-      }
-      this.take(run, facts);
-      if (ACTIVE.has(facts.state)) this.listen(run);
+      const answer = await post(`api/jobs?first=${FIRST_PATIENCE}`, { link });
+      if (run.alive) await this.hold(run, answer);
+      else this.drop(answer.id, answer.lease);
+    } catch (problem) {
+      if (run.alive) this.calls.failed(problem);
+    }
+  }
+
+  // What a form asks, in one round trip; what is shown now stays held until the answer is there.
+  ask(fields) {
+    const run = this.active ? this.run : null;
+    return post(`api/jobs?first=${FIRST_PATIENCE}`, { form: fields, ...(run && { instead: { id: run.id, lease: run.lease } }) });
+  }
+
+  // Follow what `ask` brought, in the place of what was followed before.
+  async follow(link, query, answer) {
+    if (this.run?.alive) this.finish(this.run);
+    const run = this.enter(link, query);
+    try {
+      await this.hold(run, answer);
     } catch (problem) {
       if (run.alive) this.calls.failed(problem);
     }
@@ -65,6 +67,26 @@ export class Watch {
     this.query = query;
     run.drawn = -1;
     this.picture(run);
+  }
+
+  enter(link, query) {
+    this.link = link;
+    this.query = query;
+    this.run = { query, alive: true, failures: 0, revision: -1, drawn: -1, lastPicture: 0 };
+    return this.run;
+  }
+
+  async hold(run, { picture, address, ...facts }) {
+    Object.assign(run, { id: facts.id, lease: facts.lease, pause: facts.lease_seconds * 333 });
+    run.pulse = setInterval(() => this.heartbeat(run), run.pause);
+    if (picture) {
+      run.revision = picture.revision;
+      run.drawn = picture.revision;
+      run.lastPicture = performance.now();
+      await this.calls.picture(picture);
+    }
+    this.take(run, facts);
+    if (run.alive && ACTIVE.has(facts.state)) this.listen(run);
   }
 
   // -- news ---------------------------------------------------------------------------------------

@@ -47,14 +47,16 @@ readout.onOpen = () => openPoint();
 
 async function draw(picture) {
   plot.whole = wholeRange(picture);
+  state.id = picture.readout.id;
   part("stage").querySelector(".waiting")?.remove();
+  // the plots first: they measure the page, which is slow while the rest of it changes
+  const drawn = plot.show(picture.figure);
   part("stage").setAttribute("aria-busy", String(!picture.complete));
   readout.feed(picture.readout);
-  state.id = picture.readout.id;
   showProvenance(picture.readout.provenance);
-  const drawn = plot.show(picture.figure);
   cursor.feed(readout.points(), picture.readout.pinned);
   await drawn;
+  if (picture.complete) plot.rehearse();
 }
 
 function wholeRange(picture) {
@@ -122,12 +124,17 @@ part("reload-now").addEventListener("click", () => location.reload());
 // -- state ------------------------------------------------------------------------------------------
 
 function compute() {
+  reveal();
+  return watch.begin(address(state.query), state.query);
+}
+
+// Room for the picture, and a word where there is none yet.
+function reveal() {
   part("message").hidden = true;
   for (const id of ["toolbar", "stage", "stage-hint", "model"]) part(id).hidden = false;
   if (!plot.figure && !part("stage").querySelector(".waiting")) {
     part("stage").append(Object.assign(document.createElement("p"), { className: "waiting", textContent: "Computing the first points…" }));
   }
-  return watch.begin(address(state.query), state.query);
 }
 
 function showLink() {
@@ -169,38 +176,31 @@ async function commit() {
   form.committed = before;
   let answer;
   try {
-    answer = await post("api/link", form.fields());
+    answer = await watch.ask(form.fields());
   } catch (problem) {
     form.committed = null; // whatever comes next is new
     if (mine === ticket) failed(problem);
     return;
   }
-  if (mine !== ticket) return;
+  if (mine !== ticket) {
+    watch.drop(answer.id, answer.lease);
+    return;
+  }
   form.clearProblems();
-  part("message").hidden = true;
-  const same = answer.query === state.query && !boot.error;
-  if (!same) {
-    history.pushState(null, "", address(answer.query));
+  const { query } = answer.address;
+  if (query !== state.query || boot.error) {
+    history.pushState(null, "", address(query));
     part("invented").hidden = true;
   }
   boot.error = null;
-  await go(answer, before, same);
-}
-
-async function go(answer, before, same = false) {
-  const view = answer.id === state.computation && watch.run?.id !== undefined && watch.run.facts?.state !== "cancelled";
-  state.query = answer.query;
-  state.computation = answer.id;
+  state.query = query;
   showLink();
-  if (view) {
-    if (!same) watch.redraw(answer.query);
-  } else {
-    // the first curve comes before the words around it
-    const pause = new Promise((resolve) => setTimeout(resolve, FACE_PATIENCE));
-    await Promise.race([compute(), pause]);
-  }
+  // the first curve comes before the words around it
+  const pause = new Promise((resolve) => setTimeout(resolve, FACE_PATIENCE));
+  reveal();
+  await Promise.race([watch.follow(address(query), query, answer), pause]);
   try {
-    await showFace(answer.query, before);
+    await showFace(query, before);
   } catch (problem) {
     failed(problem);
   }
@@ -213,7 +213,6 @@ window.addEventListener("popstate", async () => {
   const atFront = !location.pathname.endsWith("/sweep") && !location.search;
   const query = atFront ? boot.query : location.search.slice(1);
   state.query = query;
-  state.computation = null;
   part("invented").hidden = !(atFront && part("invented").textContent);
   form.clearProblems();
   showLink();
@@ -263,7 +262,6 @@ function zoomed(range) {
     try {
       const answer = await post("api/link", form.fields());
       state.query = answer.query;
-      state.computation = answer.id;
       if (watch.run) watch.run.query = watch.query = answer.query;
       form.committed = form.snapshot();
       history.replaceState(null, "", address(answer.query));

@@ -85,6 +85,45 @@ def test_opening_pages_computes_nothing(server: RunningServer) -> None:
     )
 
 
+def test_a_form_is_addressed_and_computed_at_once(server: RunningServer) -> None:
+    answer = server.client.post("/api/jobs?first=5", json={"form": {"spins": "7", "points": "11"}}).json()
+    address = server.client.post("/api/link", json={"spins": "7", "points": "11"}).json()
+    assert answer["address"] == address
+    assert address["id"] == answer["id"]
+    assert answer["picture"]["figure"]["data"]
+    assert finish(server, answer["id"])["link"] == address["link"]
+
+
+def test_a_form_gives_up_what_was_shown_before(server: RunningServer) -> None:
+    old = start(server, LONG | {"spins": 41})
+    held = {"id": old["id"], "lease": old["lease"]}
+    asked = {"form": {"spins": "41", "points": "2001", "to": "1.5", "title": "the same"}, "instead": held}
+    again = server.client.post("/api/jobs", json=asked).json()
+    assert again["id"] == old["id"]
+    # the same computation under another title goes on: the new lease was there before the old one went
+    assert facts_of(server, old["id"])["state"] in {"queued", "running"}
+    held = {"id": again["id"], "lease": again["lease"]}
+    other = server.client.post("/api/jobs", json={"form": {"spins": "6"}, "instead": held}).json()
+    assert facts_of(server, old["id"])["state"] == "cancelled"
+    # a lease that is no more, and a form that says nothing of one, give up nothing
+    for more in ({"instead": held}, {"instead": {"id": "none"}}, {"instead": "x"}, {}):
+        answer = server.client.post("/api/jobs", json={"form": {"spins": "6"}, **more})
+        assert answer.json()["id"] == other["id"]
+
+
+@pytest.mark.parametrize("form", [None, "spins=3", ["spins"], {"spins": "0"}, {"spins": 4, "nothing": 1}])
+def test_a_bad_form_starts_nothing_and_leaves_nothing(server: RunningServer, form: Any) -> None:
+    old = start(server, LONG | {"spins": 42})
+    before = server.counts()["jobs_started"]
+    held = {"id": old["id"], "lease": old["lease"]}
+    answer = server.client.post("/api/jobs", json={"form": form, "instead": held})
+    assert answer.status_code == 422
+    assert answer.json()["error"]["field"] in {"form", "spins", "nothing"}
+    assert server.counts()["jobs_started"] == before
+    assert facts_of(server, old["id"])["state"] in {"queued", "running"}
+    server.client.delete(f"/api/jobs/{old['id']}?for=everyone")
+
+
 def test_progress_comes_as_events(server: RunningServer) -> None:
     job = start(server, {"spins": 30, "points": 200, "to": 1.0})
     seen = events(server, job["id"])

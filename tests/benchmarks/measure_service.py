@@ -69,6 +69,7 @@ def main() -> None:
                 page = browser.new_page()
                 page.goto(f"{server.address}/sweep")
                 page.wait_for_selector(DRAWN, state="attached")
+                page.wait_for_timeout(2500)
                 taken = [_first_curve(page, spins) for spins in (21, 22, 19, 18, 23)]
                 browser.close()
             print("first curve after a committed change of N, ms:", [round(t) for t in taken])

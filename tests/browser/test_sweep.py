@@ -24,7 +24,7 @@ def test_opening_the_page_computes_nothing_by_itself(server: RunningServer) -> N
 def test_default_sweep_draws_all_panels(visit: VisitFactory) -> None:
     page = visit().open("/sweep")
     assert page.title() == "Dicke model, N = 20: λ from 0 to 0.75 – Softmode"
-    assert page.locator(".cartesianlayer .subplot").count() == 5
+    assert page.locator("#plot .cartesianlayer .subplot").count() == 5
     names = page.evaluate("document.getElementById('plot').data.map(trace => trace.name)")
     for name in ("even", "odd", "N → ∞", "uncoupled", "same parity", "any parity", "inversion", "needed"):
         assert name in names
@@ -239,7 +239,7 @@ def test_every_axis_and_view_draws(visit: VisitFactory, query: str) -> None:
     spins = "" if "spins=" in query else "&spins=3"
     points = "" if "along=spins" in query else "&points=7"
     page = visit().open(f"/sweep?{query}{spins}{points}")
-    assert page.locator(".cartesianlayer .subplot").count() == 5
+    assert page.locator("#plot .cartesianlayer .subplot").count() == 5
     assert page.locator("#strip").is_visible()
 
 
