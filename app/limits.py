@@ -4,6 +4,7 @@ import functools
 from typing import Any
 
 from app.keys import GRAMMAR_VERSION, KEYS, SWEPT, Key
+from app.map_sheets import MAP_OWN_KEYS
 from app.places import MEMBER, STATE
 from app.plan import CHUNK_SECONDS
 from app.settings import Settings
@@ -54,6 +55,7 @@ def describe(settings: Settings) -> dict[str, Any]:
             "swept": list(SWEPT),
             "keys": [_described(key) for key in KEYS.values()],
             "point_keys": [_described(key) for key in (MEMBER, STATE)],
+            "map_keys": [_described(key) for key in MAP_OWN_KEYS.values()],
         },
     }
 

@@ -7,10 +7,10 @@ from fastapi import Request
 from starlette.responses import JSONResponse, Response
 
 from app import exports, links
-from app.cutoff_sheets import Question
 from app.engine import Engine
 from app.errors import BusyError, ConflictError, RequestError, SheetError
 from app.jobs import Job
+from app.questions import Question
 
 
 def engine_of(request: Request) -> Engine:

@@ -141,6 +141,7 @@ function showLink() {
   part("link").value = absolute(state.query);
   part("print-link").textContent = absolute(state.query);
   part("to-cutoff").href = withQuery("cutoff", state.query);
+  part("to-map").href = withQuery("sweep/map", state.query);
   const twin = part("twin");
   if (twin) twin.href = withQuery("api/sweep", state.query);
 }
