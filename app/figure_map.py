@@ -27,8 +27,8 @@ HEIGHT = 520
 CONTOUR = Stroke("ink", "dash", 1.3)
 CRITICAL = Stroke("critical", "solid", 2.4)
 FINE = 121
-# more dots than this are thinned out: they are a texture, not data
-MOST_DOTS = 3000
+# dots along one side of the map: they are a texture, not data
+MOST_DOTS = 32
 MOST_TICKS = 7
 
 
@@ -227,8 +227,7 @@ def _marks(panel: Panel, grid: Grid, xs: list[float], ys: list[float]) -> list[d
         panel.key.append(Stroke("uncoupled", "dot", 5.0).key("pale: not settled yet"))
     between = np.argwhere(grid.settled & ~grid.computed)
     if len(between):
-        step = math.ceil(math.sqrt(len(between) / MOST_DOTS))
-        kept = [(row, column) for row, column in between if row % step == 0 and column % step == 0]
+        kept = [(row, column) for row, column in between if _dotted(row, ys) and _dotted(column, xs)]
         made.append(
             {
                 "type": "scatter",
@@ -246,11 +245,17 @@ def _marks(panel: Panel, grid: Grid, xs: list[float], ys: list[float]) -> list[d
                 "name": "interpolated",
             }
         )
-        panel.key.append(
-            {"label": "interpolated", "token": "ink", "dash": "solid", "width": 0, "symbol": "circle"}
-            | {"marker_only": True}
-        )
+        panel.key.append(Stroke("ink", "dot", 2.0).key("interpolated"))
     return made
+
+
+def _dotted(number: int, values: Sequence[float]) -> bool:
+    """Say whether a row or column carries dots: half of them, fewer where there are many."""
+    step = 2
+    while len(values) > step * MOST_DOTS:
+        step *= 2
+    # blocks are halved: the middle of one is an odd multiple of half its side
+    return number % step == step // 2
 
 
 def _critical(question: MapSheet, panel: Panel) -> list[dict[str, Any]]:
@@ -263,16 +268,15 @@ def _critical(question: MapSheet, panel: Panel) -> list[dict[str, Any]]:
     coupling, critical = critical_couplings(question, xs, ys)
     if np.isnan(critical).any():
         return []
-    over = np.where(critical > 0.0, coupling / np.where(critical > 0.0, critical, 1.0) - 1.0, 1.0)
+    # squares: the critical one is a straight line over either frequency
+    over = coupling**2 - critical**2
     if "coupling-over-critical" in {sheet.along, question["across"]}:
-        multiples = (
-            np.array(xs)[None, :] if sheet.along == "coupling-over-critical" else np.array(ys)[:, None]
-        )
-        over = np.broadcast_to(multiples - 1.0, over.shape)
+        along_x, along_y = np.meshgrid(xs, ys)
+        over = (along_x if sheet.along == "coupling-over-critical" else along_y) - 1.0
     if not over.min() < 0.0 < over.max():
         return []
     panel.key.append(CRITICAL.key(f"{symbol('critical', sheet.frame).figure}, N → ∞"))
-    line = _line(xs, ys, np.clip(over, -1.0, 1.0), 0.0, CRITICAL) | {"name": "critical"}
+    line = _line(xs, ys, over, 0.0, CRITICAL) | {"name": "critical"}
     return [line]
 
 

@@ -49,7 +49,8 @@ class Key:
             "names": f"one or more of {', '.join(self.choices)}, with commas between",
             "numbers": f"1 to {MOST_NUMBERS} different numbers, with commas between",
             "text": f"at most {int(self.high)} characters",
-            "family": f"name:value,value,… with 1 to {MOST_CURVES} different values; names: {', '.join(SWEPT)}",
+            "family": f"name:value,value,… with 1 to {MOST_CURVES} different values; names: "
+            + ", ".join(SWEPT),
             "interval": "low:high, two numbers, low below high",
         }
         if self.kind in fixed:

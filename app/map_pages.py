@@ -1,6 +1,7 @@
 """The map: its page, its JSON, its table and arrays, and the ways from a cell."""
 
 import asyncio
+from collections.abc import Callable
 from dataclasses import asdict, dataclass, replace
 from typing import Any
 
@@ -8,7 +9,7 @@ from fastapi import APIRouter, Request
 from starlette.responses import JSONResponse, RedirectResponse, Response
 
 from app import exports, identity, kinds, links, second_axis
-from app.errors import SoftmodeError
+from app.errors import SheetError, SoftmodeError
 from app.face import Face, face_of, typed_texts
 from app.jobs import Job
 from app.keys import KEYS, Key
@@ -89,7 +90,7 @@ async def link_of_map_form(request: Request) -> Response:
 
 @router.get("/api/map/cell")
 async def map_cell(request: Request) -> Response:
-    """Return the addresses of a cell's point, and of its row and column as sweeps."""
+    """Return the addresses of a cell's point, and of its row and column as sweeps, None where there is none."""
     pairs = pairs_of(request)
     row, column = (links.take(pairs, key.name, key) for key in (ROW, COLUMN))
     question = links.map_from_pairs(pairs)
@@ -99,8 +100,11 @@ async def map_cell(request: Request) -> Response:
     x, y = axis_values(question.sheet)[column], question.rows[row]
     shortened = engine_of(request).store.shortened
 
-    async def address(query: str, page: str) -> str:
-        return links.whole(await shortened(query), page).lstrip("/")
+    async def address(query: Callable[[], str], page: str) -> str | None:
+        try:
+            return links.whole(await shortened(query()), page).lstrip("/")
+        except SheetError:  # multiples of a critical coupling that is 0
+            return None
 
     return json_reply(
         {
@@ -108,9 +112,9 @@ async def map_cell(request: Request) -> Response:
             "column": column,
             "place": f"{place_words(question, question.sheet.along, x)}, "
             f"{place_words(question, question['across'], y)}",
-            "point": await address(links.place_query(place_in(question, x, y)), links.POINT_PAGE),
-            "row_sweep": await address(links.query_of(row_of(question, y, x)), links.PAGE),
-            "column_sweep": await address(links.query_of(column_of(question, x, y)), links.PAGE),
+            "point": await address(lambda: links.place_query(place_in(question, x, y)), links.POINT_PAGE),
+            "row_sweep": await address(lambda: links.query_of(row_of(question, y, x)), links.PAGE),
+            "column_sweep": await address(lambda: links.query_of(column_of(question, x, y)), links.PAGE),
         }
     )
 

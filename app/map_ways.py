@@ -31,10 +31,12 @@ def place_in(question: MapSheet, x: float, y: float) -> Place:
 
 def _held(sheet: Sheet, name: str, value: float) -> Sheet:
     """Return a sheet with a swept quantity held at a value."""
+    kept = sheet.explicit() | {"from": sheet.start, "to": sheet.stop, "points": sheet.points}
     if name == "coupling-over-critical":
         # a multiple of what may vary along the axis: one curve of a family
-        return sheet.changed(each={"name": name, "values": [value]})
-    return sheet.changed(**dict.fromkeys(_same(name)) | {name: value})
+        return Sheet.model_validate(kept | {"each": {"name": name, "values": [value]}})
+    # the ends stay where they are, even if they are those that the held value would not lead to
+    return Sheet.model_validate({k: v for k, v in kept.items() if k not in _same(name)} | {name: value})
 
 
 def _same(name: str) -> frozenset[str]:

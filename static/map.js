@@ -13,6 +13,7 @@ import { cellOf, unitOf } from "./values.js";
 
 const WAYS_PAUSE = 150;
 const SPEAK_PAUSE = 300;
+const WAYS = [["open-point", "point"], ["row-sweep", "row_sweep"], ["column-sweep", "column_sweep"]];
 const STATES = ["not settled yet: estimated from cells around it", "interpolated between computed cells, no bound", "computed"];
 
 const part = (id) => document.getElementById(id);
@@ -109,9 +110,10 @@ async function ways() {
   const { row, column } = cursor;
   const found = await askJson(withQuery("api/map/cell", state.query, `row=${row}`, `column=${column}`));
   if (row === cursor.row && column === cursor.column) {
-    part("open-point").href = found.point;
-    part("row-sweep").href = found.row_sweep;
-    part("column-sweep").href = found.column_sweep;
+    for (const [id, key] of WAYS) {
+      part(id).href = found[key] ?? "";
+      part(id).hidden = found[key] === null; // multiples of a critical coupling that is 0 there
+    }
     part("strip").dataset.cell = `${row},${column}`;
   }
   return found;
@@ -121,6 +123,7 @@ async function ways() {
 async function open() {
   try {
     const found = await ways();
+    if (found.point === null) return;
     remember();
     location.assign(found.point);
   } catch (problem) {
@@ -133,13 +136,14 @@ function remember() {
 }
 
 // a way that is not there yet is waited for
-for (const [id, key] of [["open-point", "point"], ["row-sweep", "row_sweep"], ["column-sweep", "column_sweep"]]) {
+for (const [id, key] of WAYS) {
   part(id).addEventListener("click", async (event) => {
     remember();
     if (part("strip").dataset.cell === `${cursor.row},${cursor.column}`) return;
     event.preventDefault();
     try {
-      location.assign((await ways())[key]);
+      const found = (await ways())[key];
+      if (found !== null) location.assign(found);
     } catch (problem) {
       failed(problem);
     }

@@ -3,11 +3,23 @@
 import { Plot } from "./plot.js";
 
 const LEAST = 6; // pixels of the frame around a cell
+const NARROW = 640;
+const LOWER = 0.66; // of the height, on narrow screens
 
 export class MapPlot extends Plot {
   constructor(element, stage) {
     super(element, stage);
     this.onBox = () => {};
+  }
+
+  dressed(width, forFile) {
+    const shrink = this.shrink;
+    if (width < NARROW && this.fixedWidth === null) this.shrink = LOWER;
+    try {
+      return super.dressed(width, forFile);
+    } finally {
+      this.shrink = shrink;
+    }
   }
 
   // A box was drawn: what it spans, for each axis that it changes.
