@@ -90,7 +90,7 @@ async def link_of_map_form(request: Request) -> Response:
 
 @router.get("/api/map/cell")
 async def map_cell(request: Request) -> Response:
-    """Return the addresses of a cell's point, and of its row and column as sweeps, None where there is none."""
+    """Return the addresses of a cell's point, and of its row and column as sweeps; None for none."""
     pairs = pairs_of(request)
     row, column = (links.take(pairs, key.name, key) for key in (ROW, COLUMN))
     question = links.map_from_pairs(pairs)
