@@ -22,6 +22,11 @@ export class MapPlot extends Plot {
     }
   }
 
+  // All of a map is shown: a box leads to another map.
+  range() {
+    return null;
+  }
+
   // A box was drawn: what it spans, for each axis that it changes.
   relayouted(change) {
     const span = (axis) => {

@@ -240,6 +240,7 @@ def test_narrow_screens(visit: VisitFactory, scheme: str) -> None:
     assert page.evaluate("document.documentElement.scrollWidth") == 390
     page.tap("[data-step='1,0']")
     page.locator("#place", has_text="λ = 0.583333").wait_for()
+    page.evaluate("document.getElementById('stage-hint').scrollIntoView({block: 'end'})")
     page.touchscreen.tap(*centre(page, 3, 4))
     page.locator("#place", has_text="λ = 0.25").wait_for()
     assert "/map" in page.url
