@@ -15,21 +15,25 @@ from app import (
     cutoff_pages,
     exports,
     figure_cutoff,
+    figure_map,
     identity,
     limits,
     links,
+    map_pages,
     pages,
     point_pages,
     streams,
 )
-from app.cutoff_sheets import CutoffSheet, Question
+from app.cutoff_sheets import CutoffSheet
 from app.engine import Engine
 from app.errors import ConflictError, JobFailedError, NotFoundError, SheetError, SoftmodeError
 from app.faults import on_error
 from app.figures import picture
 from app.jobs import Job
 from app.keys import Key
+from app.map_sheets import MapSheet
 from app.points import PointDesk
+from app.questions import Question
 from app.replies import accepted as _accepted
 from app.replies import address_of, finished, table_reply
 from app.replies import body_of as _body
@@ -76,6 +80,7 @@ def create_app(settings: Settings) -> FastAPI:
     app.include_router(pages.router)
     app.include_router(point_pages.router)
     app.include_router(cutoff_pages.router)
+    app.include_router(map_pages.router)
     app.add_exception_handler(SoftmodeError, on_error)
     app.add_exception_handler(HTTPException, on_error)
     app.add_middleware(StoredLinks, engine=engine)
@@ -251,8 +256,13 @@ def _sheet_for(job: Job, pairs: dict[str, str]) -> Question:
     """Return the question of a query, which must be the job's; the job's own for an empty query."""
     if not pairs:
         return job.sheet
-    read = links.cutoff_from_pairs if isinstance(job.sheet, CutoffSheet) else links.from_pairs
-    sheet: Question = read(pairs)
+    sheet: Question
+    if isinstance(job.sheet, MapSheet):
+        sheet = links.map_from_pairs(pairs)
+    elif isinstance(job.sheet, CutoffSheet):
+        sheet = links.cutoff_from_pairs(pairs)
+    else:
+        sheet = links.from_pairs(pairs)
     if identity.sheet_id(sheet) != job.id:
         raise ConflictError(
             "another-question", "the link asks something else than this job computes", "id", job.id
@@ -292,6 +302,9 @@ async def job_picture(request: Request, name: str) -> Response:
 async def _picture(engine: Engine, job: Job, sheet: Question) -> dict[str, Any]:
     """Return the figure of what a job has computed so far."""
     revision = job.revision
+    if isinstance(sheet, MapSheet):
+        drawn = await engine.drawn(job, sheet, figure_map.picture)
+        return {"revision": revision} | drawn
     result = await engine.result(job, sheet)
     if isinstance(sheet, CutoffSheet):
         drawn = await asyncio.to_thread(figure_cutoff.picture, sheet, result)

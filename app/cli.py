@@ -8,6 +8,7 @@ from pathlib import Path
 
 from app import __version__, exports, kinds, limits, links
 from app.errors import SoftmodeError
+from app.map_sheets import MapSheet
 from app.offline import compute_sheet
 from app.plan import check_price
 from app.settings import MEBIBYTE, Settings, processors
@@ -28,7 +29,9 @@ def parser() -> argparse.ArgumentParser:
     commands = top.add_subparsers(dest="command", metavar="command")
     compute = commands.add_parser("compute", help="compute a link without a server")
     compute.add_argument("link", help="a link as in the address bar, in quotes")
-    compute.add_argument("--out", type=Path, required=True, help="file to write, ending in .csv or .json")
+    compute.add_argument(
+        "--out", type=Path, required=True, help="file to write, ending in .csv, .json or (maps) .npz"
+    )
     compute.add_argument("--workers", type=int, default=processors(), help="computing processes")
     commands.add_parser("limits", help="print what this machine can take")
     return top
@@ -126,8 +129,8 @@ def _serve(chosen: argparse.Namespace) -> int:
 
 
 def _compute(link: str, out: Path, workers: int) -> int:
-    if out.suffix not in {".csv", ".json"}:
-        print(f"softmode: {out} must end in .csv or .json", file=sys.stderr)
+    if out.suffix not in {".csv", ".json", ".npz"}:
+        print(f"softmode: {out} must end in .csv, .json or .npz", file=sys.stderr)
         return MISUSED
     if workers < 1:
         print("softmode: --workers must be at least 1", file=sys.stderr)
@@ -136,11 +139,16 @@ def _compute(link: str, out: Path, workers: int) -> int:
         print(f"softmode: there is no directory {out.parent}", file=sys.stderr)
         return MISUSED
     sheet = links.parse_link(link)
+    if out.suffix == ".npz" and not isinstance(sheet, MapSheet):
+        print("softmode: only maps are written as .npz; choose .csv or .json", file=sys.stderr)
+        return MISUSED
     check_price(kinds.plan_of(sheet), float("inf"), Settings().memory_ceiling)
     result = compute_sheet(sheet, workers, _show_progress)
     sys.stderr.write("\n")
     if out.suffix == ".json":
         out.write_bytes(exports.encode(result))
+    elif out.suffix == ".npz":
+        out.write_bytes(kinds.npz_of(result))
     else:
         out.write_text(kinds.csv_of(result), encoding="utf-8", newline="")
     print(f"{out}: {sheet.total} points, {result['provenance']['seconds']:.2f} s of processor time")

@@ -7,20 +7,17 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Any, Self
 
+from app import second_axis
 from app.errors import SheetError
-from app.keys import KEYS, SWEPT, Key, canonical_json, nearest_name, number_text
-from app.sheets import SAME_QUANTITY, Sheet, default_range, most_points
+from app.keys import KEYS, Key, canonical_json, nearest_name
+from app.sheets import Sheet
 
 QUANTITIES = ("energies", "gap", "boson_number", "order_parameter", "tail")
 THERMAL_QUANTITIES = ("boson_number", "order_parameter", "tail")
-MOST_POINTS = 40_000
 DEFAULT_ROWS = 21
 
 _ORDERED = (
-    Key("across", "choice", None, "second swept quantity: a map", choices=tuple(SWEPT)),
-    Key("low", "real", None, "first value of the second swept quantity"),
-    Key("high", "real", None, "last value of the second swept quantity"),
-    Key("rows", "integer", None, "number of values of the second swept quantity", low=2, high=2001),
+    *second_axis.SECOND_AXIS_KEYS,
     Key("asked", "names", None, "quantities that your calculation must give", choices=QUANTITIES),
     Key("need-gap", "real", 1e-3, "error your gap may have, in units of mode", low=1e-9, high=0.9),
     Key("need-bosons", "real", 1e-2, "error your boson number may have, in quanta", low=1e-9, high=100.0),
@@ -87,7 +84,7 @@ class CutoffSheet:
         _fill_asked(filled)
         _check_temperature(filled)
         _check_start(filled)
-        _fill_across(filled, sheet)
+        second_axis.fill(filled, sheet, DEFAULT_ROWS)
         return cls(sheet, tuple((k, tuple(v) if isinstance(v, list) else v) for k, v in filled.items()))
 
     def __getitem__(self, name: str) -> Any:
@@ -135,12 +132,7 @@ class CutoffSheet:
         defaults = {name: key.default for name, key in CUTOFF_KEYS.items()}
         defaults["asked"] = list(_judged(data["ensemble"]))
         if data["across"] is not None:
-            low, high = default_range(self.sheet.data() | {"along": data["across"]})
-            defaults |= {
-                "low": low,
-                "high": high,
-                "rows": _default_rows(data["across"], data["low"], data["high"]),
-            }
+            defaults |= second_axis.explicit_defaults(self.sheet, data, DEFAULT_ROWS)
         return {k: data[k] for k in CUTOFF_KEYS if data[k] is not None and data[k] != defaults[k]}
 
     def computation_key(self) -> str:
@@ -169,15 +161,9 @@ class CutoffSheet:
         )
 
 
-Question = Sheet | CutoffSheet
-
-
 def across_values(question: CutoffSheet) -> tuple[float, ...]:
     """Return the values of the second axis of a map, both ends exact, whole numbers for spins."""
-    last, low, high = question["rows"] - 1, question["low"], question["high"]
-    if question["across"] == "spins":
-        return tuple((int(low) * (last - i) + int(high) * i + last // 2) // last for i in range(last + 1))
-    return (low, *((low * (last - i) + high * i) / last for i in range(1, last)), high)
+    return second_axis.axis_values(*(question[name] for name in ("across", "low", "high", "rows")))
 
 
 def _judged(ensemble: str) -> tuple[str, ...]:
@@ -244,72 +230,4 @@ def _check_start(filled: Mapping[str, Any]) -> None:
             "start-quanta",
             quanta,
             "whole number, 0 to 1000",
-        )
-
-
-def _default_rows(across: str, low: float, high: float) -> int:
-    return min(DEFAULT_ROWS, most_points(across, low, high)) if across == "spins" else DEFAULT_ROWS
-
-
-def _fill_across(filled: dict[str, Any], sheet: Sheet) -> None:
-    """Fill in and check the second axis of a map."""
-    across = filled["across"]
-    if across is None:
-        return
-    if sheet.each is not None:
-        raise SheetError(
-            "map-or-family",
-            "a map has no family of curves: leave out 'each' or 'across'",
-            "each",
-            sheet.each.name,
-            "left out",
-        )
-    if across == sheet.along or any({across, sheet.along} <= group for group in SAME_QUANTITY):
-        raise SheetError(
-            "same-quantity",
-            f"'across' varies '{across}', which the axis '{sheet.along}' sets already; choose another",
-            "across",
-            across,
-            ", ".join(other for other in SWEPT if other != sheet.along),
-        )
-    if across == "coupling-over-critical" and sheet.along not in {"splitting", "detuning", "mode"}:
-        # the same check that a swept multiple gets
-        sheet.changed(along=across, start=None, stop=None, points=None, zoom=None, at=None)
-    defaults = default_range(sheet.data() | {"along": across})
-    for name, default in zip(("low", "high"), defaults, strict=True):
-        value = default if filled[name] is None else filled[name]
-        try:
-            filled[name] = SWEPT[across].checked(value)
-        except SheetError as error:
-            raise SheetError(
-                error.code,
-                f"'{name}' is not a value that '{across}' can take: {error.message}",
-                name,
-                value,
-                error.allowed,
-            ) from None
-    _check_rows(filled, sheet)
-
-
-def _check_rows(filled: dict[str, Any], sheet: Sheet) -> None:
-    across, low, high = filled["across"], filled["low"], filled["high"]
-    if not low < high:
-        raise SheetError(
-            "empty-range",
-            f"the second axis is empty: 'high' ({high:g}) must be above 'low' ({low:g})",
-            "high",
-            high,
-            f"above {number_text(low)}",
-        )
-    if filled["rows"] is None:
-        filled["rows"] = _default_rows(across, low, high)
-    most = min(most_points(across, low, high), MOST_POINTS // sheet.points)
-    if filled["rows"] > most:
-        raise SheetError(
-            "too-many-points",
-            f"{filled['rows']} rows of {sheet.points} points are too many: a map has at most {MOST_POINTS} "
-            "points, and each value of the second axis once",
-            "rows",
-            filled["rows"],
-            f"2 to {most}",
         )

@@ -10,13 +10,14 @@ import datetime as dt
 import logging
 import time
 from collections import Counter, OrderedDict
+from collections.abc import Callable
 from typing import Any
 
 from app import identity, kinds, plan
-from app.cutoff_sheets import Question
 from app.errors import BusyError, JobFailedError, NotFoundError, PriceError, SheetError, SoftmodeError
 from app.jobs import Job
 from app.plan import Chunk
+from app.questions import Question
 from app.settings import Settings
 from app.store import Store, StoredChunk
 from app.workers import Outcome, ProcessPool, Task
@@ -160,13 +161,17 @@ class Engine:
 
     async def result(self, job: Job, sheet: Question) -> dict[str, Any]:
         """Return the result of a job as it is now, for a sheet with the same computation."""
+        return await self.drawn(job, sheet, kinds.result_of)
+
+    async def drawn(self, job: Job, sheet: Question, draw: Callable[..., dict[str, Any]]) -> dict[str, Any]:
+        """Return what `draw` makes of a job as it is now: question, plan, rows, name and provenance."""
         if job.plan is None:
             raise BusyError(
                 "not-planned", "the job has not started yet; ask again in a moment", retry_after=1
             )
         provenance = identity.versions() | {"computed_at": job.finished_at, "seconds": round(job.seconds, 4)}
         return await asyncio.to_thread(
-            kinds.result_of, sheet, job.plan, list(job.rows), name=job.id, provenance=provenance
+            draw, sheet, job.plan, list(job.rows), name=job.id, provenance=provenance
         )
 
     def facts(self) -> dict[str, Any]:
@@ -198,12 +203,12 @@ class Engine:
                 found = await self.store.load(job.id)
                 job.rows = [None] * len(made.questions)
                 job.plan = made
-                for chunk in made.chunks:
-                    stored = found.get(chunk.number)
-                    if stored is not None and stored.points == chunk.points:
-                        job.accept(chunk, stored)
-                        self.counts["chunks_found"] += 1
-                if len(job.finished_chunks) == len(made.chunks):
+                self._take_stored(job, found, made.chunks)
+                while job.is_computed and job.plan.grow is not None:
+                    made, before = job.plan, len(job.plan.chunks)
+                    job.plan = await asyncio.to_thread(made.grown, list(job.rows))
+                    self._take_stored(job, found, job.plan.chunks[before:])
+                if job.is_computed:
                     job.finished_at = await self.store.finished_at(job.id)
         except SoftmodeError as error:
             self._fail(job, error)
@@ -217,14 +222,47 @@ class Engine:
         else:
             self._queue(job)
         finally:
+            self._prepared(job)
+
+    def _prepared(self, job: Job) -> None:
+        """Note that the task that runs now has done its part, unless another one follows it already."""
+        if job.preparing is asyncio.current_task():
             job.preparing = None
+
+    def _take_stored(self, job: Job, found: dict[int, StoredChunk], chunks: tuple[Chunk, ...]) -> None:
+        """Enter those chunks of a plan that the store has."""
+        for chunk in chunks:
+            stored = found.get(chunk.number)
+            if stored is not None and stored.points == chunk.points:
+                job.accept(chunk, stored)
+                self.counts["chunks_found"] += 1
+
+    async def _grow(self, job: Job) -> None:
+        """Add to a plan what its computed rows ask for, and go on with that, or finish."""
+        try:
+            if job.plan is not None and job.is_computed:
+                job.plan = await asyncio.to_thread(job.plan.grown, list(job.rows))
+        except Exception:
+            logger.exception("a plan could not grow")
+            self._fail(
+                job, JobFailedError("internal", "the sheet could not be planned; the server's log says why")
+            )
+        else:
+            self._queue(job)
+            if job.state == "done":
+                self.store.end(job.id, job.finished_at)
+        finally:
+            self._prepared(job)
 
     def _queue(self, job: Job) -> None:
         """Queue what is left of a planned job, unless it was cancelled meanwhile."""
         if job.plan is None or not job.is_active:
             return
-        if len(job.finished_chunks) == len(job.plan.chunks):
+        if job.is_computed and job.plan.grow is None:
             self._finish(job)
+            return
+        if job.is_computed:  # cancelled while its plan grew, and asked for again
+            job.preparing = asyncio.create_task(self._grow(job))
             return
         job.refill()
         self.store.begin(job.id, job.sheet.computation_key())
@@ -297,7 +335,7 @@ class Engine:
         job.pace = (job.pace[0] + chunk.seconds, job.pace[1] + outcome.seconds)
         self.counts["chunks_computed"] += 1
         self.counts["points_computed"] += len(chunk.points)
-        if job.plan is not None and len(job.finished_chunks) == len(job.plan.chunks) and job.is_active:
+        if job.is_computed and job.is_active and job.plan is not None and job.plan.grow is None:
             self._finish(job)
         else:
             job.changed()
@@ -305,6 +343,8 @@ class Engine:
         self.store.keep(job.id, chunk.number, finished)
         if job.state == "done":
             self.store.end(job.id, job.finished_at)
+        elif job.is_computed and job.is_active:
+            job.preparing = asyncio.create_task(self._grow(job))
 
     def _finish(self, job: Job) -> None:
         now = dt.datetime.now(dt.UTC)

@@ -7,8 +7,8 @@ import numpy as np
 import scipy
 
 from app import __version__
-from app.cutoff_sheets import Question
 from app.keys import canonical_json
+from app.questions import Question
 from solver import SOLVER_DIGEST
 
 

@@ -8,9 +8,9 @@ from collections.abc import Callable
 from dataclasses import dataclass, field
 from typing import Any
 
-from app.cutoff_sheets import Question
 from app.errors import SoftmodeError
 from app.plan import Chunk, Plan
+from app.questions import Question
 from app.store import StoredChunk
 from app.workers import Task
 
@@ -62,10 +62,17 @@ class Job:
 
     @property
     def done(self) -> int:
-        """Number of finished points."""
+        """Number of finished points, with those that need no computation."""
         if self.plan is None:
             return 0
-        return sum(len(self.plan.chunks[number].points) for number in self.finished_chunks)
+        return self.plan.settled + sum(
+            len(self.plan.chunks[number].points) for number in self.finished_chunks
+        )
+
+    @property
+    def is_computed(self) -> bool:
+        """Whether all chunks that the plan has so far are finished."""
+        return self.plan is not None and len(self.finished_chunks) == len(self.plan.chunks)
 
     @property
     def total(self) -> int:
@@ -119,7 +126,7 @@ class Job:
         predicted, measured = self.pace
         speed = min(10.0, max(0.02, measured / predicted)) if predicted > 0.0 else 1.0
         left = sum(chunk.seconds for chunk in self.plan.chunks if chunk.number not in self.finished_chunks)
-        return speed * left / workers
+        return speed * (left + self.plan.later_seconds) / workers
 
     def snapshot(self, workers: int) -> dict[str, Any]:
         """Return the public facts of the job."""

@@ -16,6 +16,7 @@ from app.errors import SheetError
 LARGEST = 1e6
 SMALLEST_MODE = 1e-6
 MOST_CURVES = 8
+MOST_NUMBERS = 8
 
 _NUMBER = re.compile(r"[+-]?([0-9]+(\.[0-9]*)?|\.[0-9]+)([eE][+-]?[0-9]{1,4})?")
 _WHOLE = re.compile(r"[+-]?[0-9]{1,12}")
@@ -26,9 +27,9 @@ _CONTROL = re.compile(r"[\x00-\x08\x0b-\x1f\x7f\ud800-\udfff]")
 class Key:
     """One key of the grammar.
 
-    `kind` is "integer", "real", "choice", "names" (one or more of the choices), "text", "family" or
-    "interval"; `low` and `high` bound numbers (inclusive) and, as `high`, the number of characters of a
-    text. View keys change what is shown, never what is computed.
+    `kind` is "integer", "real", "choice", "names" (one or more of the choices), "numbers" (a few different
+    ones), "text", "family" or "interval"; `low` and `high` bound numbers (inclusive) and, as `high`, the
+    number of characters of a text. View keys change what is shown, never what is computed.
     """
 
     name: str
@@ -43,16 +44,17 @@ class Key:
     @property
     def allowed(self) -> str:
         """Say in words which values are allowed."""
-        if self.kind == "choice":
-            return ", ".join(self.choices)
-        if self.kind == "names":
-            return f"one or more of {', '.join(self.choices)}, with commas between"
-        if self.kind == "text":
-            return f"at most {int(self.high)} characters"
-        if self.kind == "family":
-            return f"name:value,value,… with 1 to {MOST_CURVES} different values; names: {', '.join(SWEPT)}"
-        if self.kind == "interval":
-            return "low:high, two numbers, low below high"
+        fixed = {
+            "choice": ", ".join(self.choices),
+            "names": f"one or more of {', '.join(self.choices)}, with commas between",
+            "numbers": f"1 to {MOST_NUMBERS} different numbers, with commas between",
+            "text": f"at most {int(self.high)} characters",
+            "family": f"name:value,value,… with 1 to {MOST_CURVES} different values; names: "
+            + ", ".join(SWEPT),
+            "interval": "low:high, two numbers, low below high",
+        }
+        if self.kind in fixed:
+            return fixed[self.kind]
         noun = "whole number" if self.kind == "integer" else "number"
         return f"{noun}, {number_text(self.low)} to {number_text(self.high)}"
 
@@ -68,8 +70,9 @@ class Key:
             return self.checked(int(text))
         if self.kind == "real":
             return self.checked(self._number(text))
-        if self.kind == "interval":
-            return self.checked([self._number(part) for part in text.split(":")])
+        if self.kind in {"interval", "numbers"}:
+            mark = ":" if self.kind == "interval" else ","
+            return self.checked([self._number(part) for part in text.split(mark)])
         if self.kind == "names":
             return self.checked(text.split(","))
         if self.kind == "family":
@@ -91,6 +94,8 @@ class Key:
             return f"{value['name']}:{','.join(number_text(item) for item in value['values'])}"
         if self.kind == "interval":
             return ":".join(number_text(item) for item in value)
+        if self.kind == "numbers":
+            return ",".join(number_text(item) for item in value)
         if self.kind in {"integer", "real"}:
             return number_text(value)
         if self.kind == "names":
@@ -105,6 +110,8 @@ class Key:
             return self._checked_family(value)
         if self.kind == "interval":
             return self._checked_interval(value)
+        if self.kind == "numbers":
+            return self._checked_numbers(value)
         if self.kind == "names":
             return self._checked_names(value)
         if not isinstance(value, str):
@@ -115,6 +122,15 @@ class Key:
         if self.kind == "text":
             self._check_text(value)
         return value
+
+    def _checked_numbers(self, value: Any) -> list[float]:
+        """Return the numbers from below: the same set is always written the same way."""
+        if not isinstance(value, list | tuple) or not 1 <= len(value) <= MOST_NUMBERS:
+            raise self.error("wrong-type", f"'{self.name}' is a list of 1 to {MOST_NUMBERS} numbers", value)
+        kept = sorted(Key(self.name, "real", None, "").checked(item) for item in value)
+        if len(set(kept)) != len(kept):
+            raise self.error("repeated-value", f"'{self.name}' names the same number twice", value)
+        return kept
 
     def _checked_names(self, value: Any) -> list[str]:
         """Return the names in the order of the choices: the same set is always written the same way."""

@@ -10,15 +10,18 @@ from collections.abc import Mapping
 from typing import Any
 from urllib.parse import quote, unquote_to_bytes, urlsplit
 
-from app.cutoff_sheets import CUTOFF_KEYS, CutoffSheet, Question
+from app.cutoff_sheets import CUTOFF_KEYS, CutoffSheet
 from app.errors import RequestError, SheetError
 from app.keys import KEYS, MAP_KEYS, SWEPT, Key, nearest_name, number_text
+from app.map_sheets import MAP_OWN_KEYS, MapSheet
 from app.places import MEMBER, STATE, Place, place_of
+from app.questions import Question
 from app.sheets import Sheet, critical_coupling
 
 PAGE = "/sweep"
 POINT_PAGE = "/point"
 CUTOFF_PAGE = "/cutoff"
+MAP_PAGE = "/map"
 LONGEST_LINK = 1800
 STORED_KEY = "stored"
 STORED_NAME = re.compile(r"[0-9a-f]{32}")
@@ -63,6 +66,11 @@ def cutoff_from_pairs(pairs: Mapping[str, str]) -> CutoffSheet:
     return CutoffSheet.of(_read(pairs, KEYS | CUTOFF_KEYS))
 
 
+def map_from_pairs(pairs: Mapping[str, str]) -> MapSheet:
+    """Return the map for decoded keys and values of a link; raise SheetError."""
+    return MapSheet.of(_read(pairs, KEYS | MAP_OWN_KEYS))
+
+
 def _read(pairs: Mapping[str, str], known: Mapping[str, Key]) -> dict[str, Any]:
     """Return the values of known keys; unknown ones keep their text, for the error that names them."""
     values: dict[str, Any] = {}
@@ -84,13 +92,13 @@ def parse_link(link: str) -> Question:
         page = urlsplit(address).path.rpartition("/")[2]
     except ValueError:
         page = address
-    if page not in {"", "sweep", "cutoff"}:
+    if page not in {"", "sweep", "cutoff", "map"}:
         raise SheetError(
             "unknown-page",
-            "this is not a link to a sweep or to a cutoff question",
+            "this is not a link to a sweep, a map or a cutoff question",
             "link",
             link,
-            "/sweep?…, /cutoff?…",
+            "/sweep?…, /map?…, /cutoff?…",
         )
     if query.startswith(f"{STORED_KEY}="):
         raise SheetError(
@@ -101,6 +109,8 @@ def parse_link(link: str) -> Question:
             link,
             "the whole link",
         )
+    if page == "map":
+        return map_from_pairs(split_query(query))
     return cutoff_from_pairs(split_query(query)) if page == "cutoff" else parse(query)
 
 
@@ -112,6 +122,15 @@ def query_of(sheet: Sheet) -> str:
 def cutoff_query(question: CutoffSheet) -> str:
     """Return the canonical query string of a cutoff question: that of its sheet, then the desk's own keys."""
     parts = (query_of(question.sheet), _written(question.explicit_own(), CUTOFF_KEYS))
+    return "&".join(part for part in parts if part)
+
+
+def map_query(question: MapSheet) -> str:
+    """Return the canonical query string of a map: that of its sheet, then its own keys."""
+    parts = (
+        _written(question.explicit_sheet(), KEYS),
+        _written(question.explicit_own(), MAP_OWN_KEYS),
+    )
     return "&".join(part for part in parts if part)
 
 
@@ -127,6 +146,11 @@ def link_of(sheet: Sheet) -> str:
 def cutoff_link(question: CutoffSheet) -> str:
     """Return the canonical link of a cutoff question, however long."""
     return whole(cutoff_query(question), CUTOFF_PAGE)
+
+
+def map_link(question: MapSheet) -> str:
+    """Return the canonical link of a map, however long."""
+    return whole(map_query(question), MAP_PAGE)
 
 
 def whole(query: str, page: str = PAGE) -> str:
@@ -195,6 +219,11 @@ def from_form(fields: Mapping[str, Any]) -> Sheet:
 def cutoff_from_form(fields: Mapping[str, Any]) -> CutoffSheet:
     """Return the cutoff question for what was typed into its form, as `from_form` does; raise SheetError."""
     return cutoff_from_pairs(_typed(fields, KEYS | CUTOFF_KEYS))
+
+
+def map_from_form(fields: Mapping[str, Any]) -> MapSheet:
+    """Return the map for what was typed into its form, as `from_form` does; raise SheetError."""
+    return map_from_pairs(_typed(fields, KEYS | MAP_OWN_KEYS))
 
 
 def _typed(fields: Mapping[str, Any], known: Mapping[str, Key]) -> dict[str, str]:
@@ -271,6 +300,7 @@ __all__ = [
     "CUTOFF_PAGE",
     "LONGEST_LINK",
     "MAP_KEYS",
+    "MAP_PAGE",
     "POINT_PAGE",
     "SWEPT",
     "WAIT",
@@ -282,6 +312,10 @@ __all__ = [
     "from_form",
     "from_pairs",
     "link_of",
+    "map_from_form",
+    "map_from_pairs",
+    "map_link",
+    "map_query",
     "needs_storing",
     "parse",
     "parse_link",

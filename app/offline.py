@@ -6,9 +6,9 @@ from collections.abc import Callable
 from typing import Any
 
 from app import identity, kinds
-from app.cutoff_sheets import Question
 from app.errors import JobFailedError, SheetError
 from app.plan import Chunk
+from app.questions import Question
 from app.workers import Outcome, ProcessPool, Task
 
 Progress = Callable[[int, int], None]
@@ -40,11 +40,16 @@ def compute_sheet(sheet: Question, workers: int, progress: Progress) -> dict[str
     seconds = 0.0
     done = 0
     progress(0, len(rows))
+    submitted = finished = 0
     try:
-        for chunk in made.chunks:
-            pool.submit(Task(made.chunk_questions(chunk), _reporter(landed, chunk), made.work))
-        for _ in made.chunks:
+        while True:
+            for chunk in made.chunks[submitted:]:
+                pool.submit(Task(made.chunk_questions(chunk), _reporter(landed, chunk), made.work))
+            submitted = len(made.chunks)
+            if finished == submitted:
+                break
             chunk, outcome = landed.get()
+            finished += 1
             if outcome.error is not None:
                 raise SheetError("not-solvable", **outcome.error)
             if outcome.kind == "broken":
@@ -61,7 +66,9 @@ def compute_sheet(sheet: Question, workers: int, progress: Progress) -> dict[str
                 rows[point] = row
             seconds += outcome.seconds
             done += len(chunk.points)
-            progress(done, len(rows))
+            if finished == submitted:
+                made = made.grown(rows)
+            progress(made.settled + done, len(rows))
     finally:
         pool.close()
     provenance = identity.versions() | {

@@ -24,7 +24,7 @@ from app.sheets import Sheet
 
 router = APIRouter()
 
-FILES = ("softmode.css", "theme.js", "main.js", "point.js", "cutoff.js", "icon.svg", PLOTLY)
+FILES = ("softmode.css", "theme.js", "main.js", "point.js", "cutoff.js", "map.js", "icon.svg", PLOTLY)
 COUPLING_AS = Key("coupling_as", "choice", "lambda", "meaning of the box", choices=links.COUPLING_FORMS)
 
 

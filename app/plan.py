@@ -4,9 +4,9 @@ The plan depends on the sheet alone, never on the machine: a chunk starts cold a
 other in order, so the same plan gives the same numbers to the last bit wherever it runs.
 """
 
-from collections.abc import Sequence
-from dataclasses import dataclass
-from typing import Any
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass, replace
+from typing import Any, Self
 
 from app.errors import PriceError
 from app.keys import MOST_CURVES, number_text
@@ -39,6 +39,19 @@ class Chunk:
 
 
 @dataclass(frozen=True)
+class Growth:
+    """What a plan adds once everything in it is computed: points in the order in which they are solved.
+
+    `settled` is the number of points of the question that need no computation; `seconds` the processor time
+    predicted for what may be added later.
+    """
+
+    runs: tuple[tuple[int, ...], ...]
+    settled: int
+    seconds: float
+
+
+@dataclass(frozen=True)
 class Plan:
     """What has to be computed for a sheet.
 
@@ -46,6 +59,9 @@ class Plan:
     they should run, coarse ones first. `seconds` is the predicted processor time, `peak_bytes` the
     predicted memory of the largest point, whose model is `largest`. `work` names what the workers do with
     the questions (see `workers.WORK`).
+
+    A plan may grow: `grow` then says what the rows found so far ask for, None when it is at its end. It must
+    depend on the rows alone.
     """
 
     curves: tuple[Curve, ...]
@@ -55,6 +71,28 @@ class Plan:
     peak_bytes: int
     largest: CollectiveModel
     work: str = "points"
+    prices: tuple[float, ...] = ()
+    grow: Callable[[Sequence[Mapping[str, Any] | None]], Growth] | None = None
+    settled: int = 0
+    later_seconds: float = 0.0
+
+    def grown(self, rows: Sequence[Mapping[str, Any] | None]) -> Self:
+        """Return the plan with its next chunks, now that all of it is computed; without `grow` at its end."""
+        if self.grow is None:
+            return self
+        added = self.grow(rows)
+        first = len(self.chunks)
+        chunks = tuple(
+            Chunk(first + number, run, sum(self.prices[point] for point in run))
+            for number, run in enumerate(added.runs)
+        )
+        return replace(
+            self,
+            chunks=self.chunks + chunks,
+            settled=added.settled,
+            later_seconds=added.seconds,
+            grow=self.grow if chunks else None,
+        )
 
     def chunk_questions(self, chunk: Chunk) -> tuple[Any, ...]:
         """Return the questions of a chunk in the order in which they are solved."""

@@ -95,11 +95,15 @@ def cap_threads() -> None:
         os.environ[name] = "1"
 
 
-def compute(questions: Sequence[PointQuestion], stopped: Callable[[], bool]) -> list[dict[str, Any]] | None:
+def compute(
+    questions: Sequence[PointQuestion],
+    stopped: Callable[[], bool],
+    beside: Callable[[PointQuestion], dict[str, Any]] = companions,
+) -> list[dict[str, Any]] | None:
     """Return the rows of a chunk, or None when it was stopped between two points.
 
-    A point whose levels the solver cannot settle has a row without numbers, and a note that says so; the
-    points after it start cold.
+    `beside` gives what a row holds beside its answer. A point whose levels the solver cannot settle has a
+    row without numbers, and a note that says so; the points after it start cold.
     """
     rows = []
     answers = solve_chain(questions)
@@ -111,7 +115,7 @@ def compute(questions: Sequence[PointQuestion], stopped: Callable[[], bool]) -> 
         except ConvergenceError as error:
             answer = {**_NOTHING, "meets_tolerance": False, "note": f"not settled: {error.message}"}
             answers = solve_chain(questions[number + 1 :])
-        rows.append(_plain_row({"answer": answer} | companions(question)))
+        rows.append(_plain_row({"answer": answer} | beside(question)))
     return rows
 
 
@@ -130,6 +134,7 @@ def compute_each(
 Computer = Callable[[Sequence[Any], Callable[[], bool]], list[dict[str, Any]] | None]
 WORK: dict[str, Computer] = {
     "points": compute,
+    "cells": functools.partial(compute, beside=lambda _: {}),
     "needs": functools.partial(compute_each, answer_needs),
     "margins": functools.partial(compute_each, answer_margins),
     "convergence": functools.partial(compute_each, answer_convergence),

@@ -51,7 +51,8 @@ export class Form {
     fields[this.splittingAs.value] = this.box("splitting").value;
     fields.coupling = this.box("coupling").value;
     fields.coupling_as = this.couplingAs.value;
-    const family = this.box("each_name").value;
+    // a map has no family of curves
+    const family = this.box("each_name")?.value;
     if (family) fields.each = familyText(family, this.box("each_values").value);
     return { ...fields, ...more };
   }
@@ -113,6 +114,7 @@ export class Form {
     let newer = false;
     const put = (name, text) => {
       const box = this.box(name);
+      if (!box) return;
       if (sent !== null && box.value !== sent[name]) newer = true;
       else if (box.value !== text) box.value = text;
     };
@@ -124,10 +126,11 @@ export class Form {
     for (const knob of face.knobs) this.showKnob(knob, put);
     for (const name of ["from", "to", "points", "title"]) this.box(name).placeholder = face.placeholders[name];
     for (const name of ["from", "to"]) document.getElementById(`hint-${name}`).textContent = face.axis_unit;
-    for (const select of [this.box("along"), this.box("each_name")]) {
+    for (const select of [this.box("along"), this.box("each_name")].filter(Boolean)) {
       for (const [value, label] of face.swept_names) select.querySelector(`option[value="${value}"]`).textContent = label;
     }
-    document.querySelector('[data-field="each_values"]').hidden = !this.box("each_name").value;
+    const family = document.querySelector('[data-field="each_values"]');
+    if (family) family.hidden = !this.box("each_name").value;
     if (!newer) this.committed = this.snapshot();
   }
 

@@ -59,6 +59,16 @@ export class Watch {
     }
   }
 
+  // The view changed, the computation did not: same job, new picture.
+  redraw(query) {
+    const run = this.run;
+    if (!run?.id) return;
+    run.query = query;
+    this.query = query;
+    run.drawn = -1;
+    this.picture(run);
+  }
+
   enter(link, query) {
     this.link = link;
     this.query = query;

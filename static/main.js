@@ -85,6 +85,8 @@ function reveal() {
 
 function showLink() {
   applyLink(absolute(state.query), withQuery("api/sweep", state.query));
+  part("to-cutoff").href = withQuery("cutoff", state.query);
+  part("to-map").href = withQuery("sweep/map", state.query);
 }
 
 async function showFace(query, before) {

@@ -54,6 +54,7 @@ export class Share {
     on("save-csv", () => this.file(`${twin}.csv`, "csv"));
     on("save-sizes", () => this.file(`${twin}/sizes.csv`, "csv", "-sizes"));
     on("save-json", () => this.file(twin, "json"));
+    on("save-npz", () => this.file(`${twin}.npz`, "npz"));
     on("save-png", () => this.image("png"));
     on("save-svg", () => this.image("svg"));
     on("show-python", () => this.python());
@@ -99,7 +100,7 @@ export class Share {
     const answer = await ask(withQuery(address, this.now().query));
     if (answer.status === 202) {
       const facts = await answer.json();
-      this.say(`Still computing, ${facts.done} of ${facts.total} points; try again when the curve is complete.`);
+      this.say(`Still computing, ${facts.done} of ${facts.total} points; try again when all are there.`);
       return;
     }
     save(await answer.blob(), this.name(kind, what));

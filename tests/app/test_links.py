@@ -157,7 +157,7 @@ def test_links_are_read_with_and_without_host(link: str) -> None:
 
 
 @pytest.mark.parametrize(
-    "link", ["http://[/sweep?spins=3", "http://lab/map?spins=3", "ftp", "/sweeps?spins=3"]
+    "link", ["http://[/sweep?spins=3", "http://lab/chart?spins=3", "ftp", "/sweeps?spins=3"]
 )
 def test_other_addresses_are_refused(link: str) -> None:
     with pytest.raises(SheetError):
