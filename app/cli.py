@@ -15,6 +15,7 @@ from app.settings import MEBIBYTE, Settings, processors
 FAILED = 1
 MISUSED = 2
 BAR = 30
+CLUSTER_HELP = "compute on a Dask cluster: tcp://HOST:PORT of a scheduler here, tls://HOST:PORT elsewhere"
 
 
 def parser() -> argparse.ArgumentParser:
@@ -30,6 +31,7 @@ def parser() -> argparse.ArgumentParser:
     compute.add_argument("link", help="a link as in the address bar, in quotes")
     compute.add_argument("--out", type=Path, required=True, help="file to write, ending in .csv or .json")
     compute.add_argument("--workers", type=int, default=processors(), help="computing processes")
+    compute.add_argument("--cluster", metavar="ADDRESS", dest="compute_cluster", help=CLUSTER_HELP)
     commands.add_parser("limits", help="print what this machine can take")
     return top
 
@@ -43,6 +45,13 @@ def _server_options(top: argparse.ArgumentParser) -> None:
     )
     top.add_argument(
         "--workers", type=int, default=known.workers, help="computing processes (default %(default)s)"
+    )
+    top.add_argument("--cluster", metavar="ADDRESS", help=CLUSTER_HELP)
+    top.add_argument(
+        "--cluster-patience",
+        type=float,
+        default=known.cluster_patience,
+        help="seconds that work waits for a lost scheduler (%(default)s)",
     )
     top.add_argument("--key", default=os.environ.get("SOFTMODE_KEY"), help="shared key (or set SOFTMODE_KEY)")
     top.add_argument("--open", action="store_true", help="let everybody who reaches the address compute")
@@ -88,7 +97,7 @@ def run(arguments: Sequence[str]) -> int:
     chosen = parser().parse_args(arguments)
     try:
         if chosen.command == "compute":
-            return _compute(chosen.link, chosen.out, chosen.workers)
+            return _compute(chosen.link, chosen.out, chosen.workers, chosen.compute_cluster or chosen.cluster)
         if chosen.command == "limits":
             return _limits()
         return _serve(chosen)
@@ -111,6 +120,8 @@ def _serve(chosen: argparse.Namespace) -> int:
         port=chosen.port,
         data=chosen.data,
         workers=chosen.workers,
+        cluster=chosen.cluster,
+        cluster_patience=chosen.cluster_patience,
         key=chosen.key or None,
         open_to_all=chosen.open,
         prefix=chosen.prefix,
@@ -125,7 +136,7 @@ def _serve(chosen: argparse.Namespace) -> int:
     return serve(settings, browser=browser)
 
 
-def _compute(link: str, out: Path, workers: int) -> int:
+def _compute(link: str, out: Path, workers: int, cluster: str | None) -> int:
     if out.suffix not in {".csv", ".json"}:
         print(f"softmode: {out} must end in .csv or .json", file=sys.stderr)
         return MISUSED
@@ -137,7 +148,7 @@ def _compute(link: str, out: Path, workers: int) -> int:
         return MISUSED
     sheet = links.parse_link(link)
     check_price(kinds.plan_of(sheet), float("inf"), Settings().memory_ceiling)
-    result = compute_sheet(sheet, workers, _show_progress)
+    result = compute_sheet(sheet, workers, _show_progress, cluster)
     sys.stderr.write("\n")
     if out.suffix == ".json":
         out.write_bytes(exports.encode(result))

@@ -14,12 +14,21 @@ from typing import Any
 
 from app import identity, kinds, plan
 from app.cutoff_sheets import Question
-from app.errors import BusyError, JobFailedError, NotFoundError, PriceError, SheetError, SoftmodeError
+from app.errors import (
+    BusyError,
+    ClusterError,
+    JobFailedError,
+    NotFoundError,
+    PriceError,
+    SheetError,
+    SoftmodeError,
+)
+from app.executor import open_executor
 from app.jobs import Job
 from app.plan import Chunk
 from app.settings import Settings
 from app.store import Store, StoredChunk
-from app.workers import Outcome, ProcessPool, Task
+from app.workers import Outcome, Task
 
 logger = logging.getLogger(__name__)
 
@@ -34,7 +43,7 @@ class Engine:
     def __init__(self, settings: Settings) -> None:
         self.settings = settings
         self.store = Store(settings.data, settings.store_bytes)
-        self.pool = ProcessPool(settings.workers)
+        self.pool = open_executor(settings.workers, settings.cluster, settings.cluster_patience)
         self.jobs: OrderedDict[str, Job] = OrderedDict()
         self.counts: Counter[str] = Counter()
         self.restarting = False
@@ -84,7 +93,7 @@ class Engine:
         """
         name = identity.sheet_id(sheet)
         job = self.jobs.get(name)
-        if job is None or not (job.is_active or job.state in {"done", "failed"}):
+        if job is None or not (job.is_active or job.is_settled):
             job = self._begin(name, sheet, client, job)
         elif job.state == "done":
             self.store.touch(name)
@@ -205,6 +214,8 @@ class Engine:
                         self.counts["chunks_found"] += 1
                 if len(job.finished_chunks) == len(made.chunks):
                     job.finished_at = await self.store.finished_at(job.id)
+            if job.plan is not None and len(job.finished_chunks) < len(job.plan.chunks):
+                await asyncio.to_thread(self.pool.check)
         except SoftmodeError as error:
             self._fail(job, error)
             self.jobs.pop(job.id, None)
@@ -276,6 +287,8 @@ class Engine:
             )
         elif outcome.kind == "refused" and outcome.error is not None:
             self._fail(job, SheetError("not-solvable", **outcome.error))
+        elif outcome.kind == "unavailable" and outcome.error is not None:
+            self._fail(job, ClusterError(**outcome.error, retry_after=5))
         elif outcome.kind == "lost" and not self.restarting:
             self._fail(
                 job,
@@ -338,10 +351,19 @@ class Engine:
                 if job.is_active and not job.leases:
                     self.cancel(job)
                 self._check_spending(job)
+                self._tell_trouble(job)
             self._forget()
+
+    def _tell_trouble(self, job: Job) -> None:
+        """Let those who watch a job know why it does not go on, and when it does again."""
+        if job.is_active and job.notice != self.pool.trouble:
+            job.notice = self.pool.trouble
+            job.changed()
 
     def _check_spending(self, job: Job) -> None:
         """Stop a job that takes far longer than its price: a wrong forecast must not hold the workers."""
+        if self.pool.trouble is not None:
+            return
         now = time.monotonic()
         spent = job.pace[1] + sum(now - task.handed_over for task in job.active.values())
         most = OVERSPENDING * self.settings.price_ceiling

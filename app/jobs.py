@@ -33,7 +33,8 @@ class Job:
     """One computation, named by its content hash.
 
     `state` is queued, running, done, failed, cancelled or restarting. `rows` has one entry for each point
-    of the plan, None while it is missing; `revision` counts its changes.
+    of the plan, None while it is missing; `revision` counts its changes; `notice` says why it does not go on
+    at present.
     """
 
     id: str
@@ -53,12 +54,19 @@ class Job:
     preparing: asyncio.Task[None] | None = None
     turn: int = 0
     pace: tuple[float, float] = (0.0, 0.0)
+    notice: str | None = None
     _changed: asyncio.Event = field(default_factory=asyncio.Event)
 
     @property
     def is_active(self) -> bool:
         """Whether the job waits for computation or is being computed."""
         return self.state in ACTIVE
+
+    @property
+    def is_settled(self) -> bool:
+        """Whether asking again changes nothing: there is a result, or a failure that would come again."""
+        failed = self.state == "failed" and (self.error is None or self.error.retry_after is None)
+        return self.state == "done" or failed
 
     @property
     def done(self) -> int:
@@ -132,6 +140,8 @@ class Job:
             "seconds_left": None if left is None else round(left, 2),
             "revision": self.revision,
         }
+        if self.notice is not None and self.is_active:
+            facts["notice"] = self.notice
         if self.error is not None:
             facts |= self.error.body()
         return facts

@@ -7,14 +7,18 @@ from typing import Any
 
 from app import identity, kinds
 from app.cutoff_sheets import Question
-from app.errors import JobFailedError, SheetError
+from app.errors import ClusterError, JobFailedError, SheetError
+from app.executor import open_executor
 from app.plan import Chunk
-from app.workers import Outcome, ProcessPool, Task
+from app.settings import Settings
+from app.workers import Outcome, Task
 
 Progress = Callable[[int, int], None]
 
 
-def compute_sheet(sheet: Question, workers: int, progress: Progress) -> dict[str, Any]:
+def compute_sheet(
+    sheet: Question, workers: int, progress: Progress, cluster: str | None = None
+) -> dict[str, Any]:
     """Return the complete result of a sheet.
 
     Parameters
@@ -25,6 +29,8 @@ def compute_sheet(sheet: Question, workers: int, progress: Progress) -> dict[str
         Number of computing processes.
     progress : callable
         Called with the finished and the total number of points.
+    cluster : str or None
+        Address of a Dask scheduler whose workers compute in the place of processes.
 
     Raises
     ------
@@ -32,11 +38,13 @@ def compute_sheet(sheet: Question, workers: int, progress: Progress) -> dict[str
         When the solver refuses a point.
     JobFailedError
         When a chunk ends its process twice.
+    StartError, ClusterError
+        When the cluster cannot be used, or is lost.
     """
     made = kinds.plan_of(sheet)
     rows: list[dict[str, Any] | None] = [None] * len(made.questions)
     landed: queue.SimpleQueue[tuple[Chunk, Outcome]] = queue.SimpleQueue()
-    pool = ProcessPool(workers)
+    pool = open_executor(workers, cluster, Settings().cluster_patience)
     seconds = 0.0
     done = 0
     progress(0, len(rows))
@@ -45,6 +53,8 @@ def compute_sheet(sheet: Question, workers: int, progress: Progress) -> dict[str
             pool.submit(Task(made.chunk_questions(chunk), _reporter(landed, chunk), made.work))
         for _ in made.chunks:
             chunk, outcome = landed.get()
+            if outcome.kind == "unavailable" and outcome.error is not None:
+                raise ClusterError(**outcome.error)
             if outcome.error is not None:
                 raise SheetError("not-solvable", **outcome.error)
             if outcome.kind == "broken":

@@ -16,7 +16,7 @@ from typing import Any
 from app import identity, plan
 from app.cutoff_work import MarginsQuestion, margins_bytes, margins_seconds
 from app.engine import OVERSPENDING, Engine
-from app.errors import BusyError, JobFailedError, PriceError, SheetError, SoftmodeError
+from app.errors import BusyError, ClusterError, JobFailedError, PriceError, SheetError, SoftmodeError
 from app.exports import point_of
 from app.places import Place
 from app.settings import Settings
@@ -120,6 +120,8 @@ class PointDesk:
         `asked` holds the questions, their work (see `workers`) and the state drawn; `spins` is for the words
         of an error. Raises BusyError, or what went wrong.
         """
+        if asked not in self.entries:
+            await asyncio.to_thread(self.engine.pool.check)
         entry = self.entries.get(asked) or self._begin(asked, spins, client)
         self.entries.move_to_end(asked)
         entry.waiting += 1
@@ -193,7 +195,7 @@ class PointDesk:
         if outcome.kind == "done":
             made = {"computed_at": entry.finished_at, "seconds": round(outcome.seconds, 4)}
             return outcome, identity.versions() | made
-        if outcome.kind in {"stopped", "broken"}:
+        if outcome.kind in {"stopped", "broken", "unavailable"}:
             # worth another try, unlike what the solver refuses
             self.entries.pop(asked, None)
         raise _error_of(outcome, entry, self.engine)
@@ -209,6 +211,8 @@ class PointDesk:
 def _error_of(outcome: Outcome, entry: _Entry, engine: Engine) -> SoftmodeError:
     if outcome.kind == "refused" and outcome.error is not None:
         return SheetError("not-solvable", **outcome.error)
+    if outcome.kind == "unavailable" and outcome.error is not None:
+        return ClusterError(**outcome.error, retry_after=5)
     if outcome.kind == "stopped" and entry.overspent:
         most = OVERSPENDING * engine.settings.price_ceiling
         return PriceError(

@@ -60,8 +60,8 @@ class Outcome:
     """How a chunk ended.
 
     `kind` is "done", "stopped" (cancelled half-way), "refused" (the solver says why in `error`), "broken"
-    (an unforeseen failure, its trace in `trace`) or "lost" (killed two processes); `rows` and `seconds`
-    (processor time) belong to "done".
+    (an unforeseen failure, its trace in `trace`), "lost" (killed two processes) or "unavailable" (a cluster
+    that cannot compute it, `error` says why); `rows` and `seconds` (processor time) belong to "done".
     """
 
     kind: str
@@ -168,7 +168,8 @@ def _serve(pipe: Connection) -> None:
             message = pipe.recv()
             if message != STOP:  # a stop that came too late
                 questions, work, state = message
-                pipe.send(_answer(questions, work, state, pipe))
+                # nothing but a stop is sent while a chunk is under way
+                pipe.send(answer(questions, work, state, lambda: pipe.poll() and pipe.recv() == STOP))
 
 
 def _stand_back() -> None:
@@ -183,14 +184,14 @@ def _stand_back() -> None:
         Path("/proc/self/autogroup").write_text(str(NICENESS))
 
 
-def _answer(questions: Sequence[Any], work: str, state: StateName, pipe: Connection) -> Outcome:
-    started = time.process_time()
+def answer(questions: Sequence[Any], work: str, state: StateName, stopped: Callable[[], bool]) -> Outcome:
+    """Return the outcome of a chunk, computed in this thread; `stopped` is asked between two points."""
+    started = time.thread_time()
     try:
         if work == "portrait":
             rows: list[dict[str, Any]] | None = compute_portrait(questions, state)
         else:
-            # nothing but a stop is sent while a chunk is under way
-            rows = WORK[work](questions, lambda: pipe.poll() and pipe.recv() == STOP)
+            rows = WORK[work](questions, stopped)
     except SolverError as error:
         facts = {
             "message": error.message,
@@ -203,7 +204,7 @@ def _answer(questions: Sequence[Any], work: str, state: StateName, pipe: Connect
         return Outcome("broken", trace=traceback.format_exc())
     if rows is None:
         return Outcome("stopped")
-    return Outcome("done", rows, time.process_time() - started)
+    return Outcome("done", rows, time.thread_time() - started)
 
 
 def _follow(sentinel: int) -> None:
@@ -356,6 +357,14 @@ class ProcessPool:
     def lost(self) -> int:
         """Number of processes that died without being asked to."""
         return sum(worker.lost for worker in self.workers)
+
+    @property
+    def trouble(self) -> str | None:
+        """None: processes are always there, a dead one is replaced."""
+        return None
+
+    def check(self) -> None:
+        """Do nothing: each process compares its solver when it starts."""
 
     def submit(self, task: Task) -> None:
         """Hand over a task; its `report` is called once, from a thread of the pool."""
