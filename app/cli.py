@@ -6,9 +6,9 @@ import sys
 from collections.abc import Sequence
 from pathlib import Path
 
-from app import __version__, exports, kinds, limits, links
+from app import __version__, calibration, exports, kinds, limits, links
 from app.errors import SoftmodeError
-from app.offline import compute_sheet
+from app.offline import compute_sheet, measure_machine
 from app.plan import check_price
 from app.settings import MEBIBYTE, Settings, processors
 
@@ -99,7 +99,7 @@ def run(arguments: Sequence[str]) -> int:
         if chosen.command == "compute":
             return _compute(chosen.link, chosen.out, chosen.workers, chosen.compute_cluster or chosen.cluster)
         if chosen.command == "limits":
-            return _limits()
+            return _limits(chosen.data)
         return _serve(chosen)
     except SoftmodeError as error:
         print(f"softmode: {error.message}", file=sys.stderr)
@@ -168,11 +168,15 @@ def _show_progress(done: int, total: int) -> None:
     sys.stderr.flush()
 
 
-def _limits() -> int:
+def _limits(data: Path) -> int:
     settings = Settings()
-    described = limits.describe(settings)
+    found = calibration.load(data) or measure_machine(data)
+    described = limits.describe(settings, found)
     print(f"{settings.workers} computing processes; up to {settings.memory_ceiling / 1e9:.3g} GB for a point")
     print(f"default ceiling of a sheet: {settings.price_ceiling:g} s of processor time")
+    factors = ", ".join(f"{work} {factor:.2f}" for work, factor in sorted(found.factors.items()))
+    print(f"processor: {found.processor}")
+    print(f"measured {found.measured_at}, actual over forecast processor time: {factors}")
     print()
     print("isotropic, resonant, 6 levels, tol 1e-9; predicted for one point solved on its own:")
     print(f"{'spins':>6} {'coupling/critical':>18} {'seconds':>10} {'MB':>8} {'points in the ceiling':>22}")

@@ -13,6 +13,7 @@ from collections import Counter, OrderedDict
 from typing import Any
 
 from app import identity, kinds, plan
+from app.calibration import Calibrator
 from app.cutoff_sheets import Question
 from app.errors import (
     BusyError,
@@ -28,6 +29,7 @@ from app.jobs import Job
 from app.plan import Chunk
 from app.settings import Settings
 from app.store import Store, StoredChunk
+from app.turns import Turns
 from app.workers import Outcome, Task
 
 logger = logging.getLogger(__name__)
@@ -44,19 +46,20 @@ class Engine:
         self.settings = settings
         self.store = Store(settings.data, settings.store_bytes)
         self.pool = open_executor(settings.workers, settings.cluster, settings.cluster_patience)
+        self.calibrator = Calibrator(self.store.directory, self.pool, settings.cluster)
+        self.turns = Turns()
         self.jobs: OrderedDict[str, Job] = OrderedDict()
         self.counts: Counter[str] = Counter()
         self.restarting = False
         self._busy = 0
-        self._tick = 0
-        self._served: dict[str, int] = {}
         self._loop: asyncio.AbstractEventLoop | None = None
-        self._tidying: asyncio.Task[None] | None = None
+        self._tending: tuple[asyncio.Task[None], ...] = ()
 
     async def start(self) -> None:
-        """Begin to look after leases."""
+        """Begin to look after leases; measure the workers when there is nothing else to do."""
         self._loop = asyncio.get_running_loop()
-        self._tidying = asyncio.create_task(self._tidy())
+        measuring = self.calibrator.run(lambda: not any(job.is_active for job in self.jobs.values()))
+        self._tending = (asyncio.create_task(self._tidy()), asyncio.create_task(measuring))
 
     def announce_restart(self) -> None:
         """Tell everybody who watches that the server goes down; finished chunks are kept."""
@@ -70,10 +73,10 @@ class Engine:
     async def close(self) -> None:
         """Stop computing, finish writing."""
         self.announce_restart()
-        if self._tidying is not None:
-            self._tidying.cancel()
+        for task in self._tending:
+            task.cancel()
             with contextlib.suppress(asyncio.CancelledError):
-                await self._tidying
+                await task
         await asyncio.to_thread(self.pool.close)
         await asyncio.to_thread(self.store.close)
 
@@ -202,7 +205,7 @@ class Engine:
         """Plan a job, take what the store has, queue the rest."""
         try:
             if job.plan is None:
-                made = await asyncio.to_thread(kinds.plan_of, job.sheet)
+                made = self.calibrator.found.priced(await asyncio.to_thread(kinds.plan_of, job.sheet))
                 plan.check_price(made, self.settings.price_ceiling, self.settings.memory_ceiling)
                 found = await self.store.load(job.id)
                 job.rows = [None] * len(made.questions)
@@ -243,15 +246,13 @@ class Engine:
         self._dispatch()
 
     def _dispatch(self) -> None:
-        """Give free workers the next chunks: clients take turns, and so do the jobs of a client."""
+        """Give free workers the next chunks, of whoever has the next turn."""
         while self._busy < self.pool.size:
             candidates = [job for job in self.jobs.values() if job.waiting and job.is_active]
             if not candidates:
-                self._served.clear()
+                self.turns.clear()
                 return
-            job = min(candidates, key=lambda one: (self._served.get(one.client, 0), one.turn))
-            self._tick += 1
-            self._served[job.client] = job.turn = self._tick
+            job = self.turns.choose(candidates)
             self._run(job, job.waiting.popleft())
 
     def _run(self, job: Job, chunk: Chunk) -> None:
@@ -267,6 +268,7 @@ class Engine:
         job.active[chunk.number] = task
         job.state = "running"
         self._busy += 1
+        self.turns.charge(job.client, chunk.seconds * job.speed)
         self.pool.submit(task)
 
     def _landed(self, job: Job, chunk: Chunk, outcome: Outcome) -> None:
@@ -307,6 +309,7 @@ class Engine:
     def _take(self, job: Job, chunk: Chunk, outcome: Outcome) -> None:
         finished = StoredChunk(chunk.points, outcome.rows, outcome.seconds)
         job.accept(chunk, finished)
+        self.turns.charge(job.client, outcome.seconds - chunk.seconds * job.speed)
         job.pace = (job.pace[0] + chunk.seconds, job.pace[1] + outcome.seconds)
         self.counts["chunks_computed"] += 1
         self.counts["points_computed"] += len(chunk.points)

@@ -120,14 +120,30 @@ class Job:
             left = (chunk for chunk in self.plan.chunks if chunk.number not in self.finished_chunks)
             self.waiting = deque(chunk for chunk in left if chunk.number not in self.active)
 
+    @property
+    def speed(self) -> float:
+        """Actual over predicted seconds of a chunk: as measured so far, before that as the price has it."""
+        predicted, measured = self.pace
+        if predicted > 0.0:
+            return min(10.0, max(0.02, measured / predicted))
+        whole = sum(chunk.seconds for chunk in self.plan.chunks) if self.plan is not None else 0.0
+        return self.plan.seconds / whole if self.plan is not None and whole > 0.0 else 1.0
+
+    def is_shorter_than(self, seconds: float) -> bool:
+        """Say whether the chunks that wait will take less processor time than that."""
+        left, speed = seconds, self.speed
+        for chunk in self.waiting:
+            left -= speed * chunk.seconds
+            if left < 0.0:
+                return False
+        return True
+
     def seconds_left(self, workers: int) -> float | None:
         """Return the expected time to the end of this job alone, None when it is unknown or over."""
         if self.plan is None or not self.is_active:
             return None
-        predicted, measured = self.pace
-        speed = min(10.0, max(0.02, measured / predicted)) if predicted > 0.0 else 1.0
         left = sum(chunk.seconds for chunk in self.plan.chunks if chunk.number not in self.finished_chunks)
-        return speed * left / workers
+        return self.speed * left / workers
 
     def snapshot(self, workers: int) -> dict[str, Any]:
         """Return the public facts of the job."""

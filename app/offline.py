@@ -1,11 +1,14 @@
 """Computing a sheet without a server: the same plan, the same processes, the same numbers."""
 
+import contextlib
 import datetime as dt
 import queue
 from collections.abc import Callable
+from pathlib import Path
 from typing import Any
 
-from app import identity, kinds
+from app import calibration, identity, kinds
+from app.calibration import Calibration, Reference
 from app.cutoff_sheets import Question
 from app.errors import ClusterError, JobFailedError, SheetError
 from app.executor import open_executor
@@ -79,6 +82,31 @@ def compute_sheet(
         "seconds": round(seconds, 4),
     }
     return kinds.result_of(sheet, made, rows, name=identity.sheet_id(sheet), provenance=provenance)
+
+
+def measure_machine(directory: Path) -> Calibration:
+    """Return how fast the processes of this machine are, and keep it where there is a data directory.
+
+    Raises JobFailedError when a process cannot answer.
+    """
+    landed: queue.SimpleQueue[Outcome] = queue.SimpleQueue()
+    pool = open_executor(1, None, 0.0)
+
+    def seconds(reference: Reference) -> float:
+        pool.submit(Task(reference.questions, landed.put, reference.work))
+        outcome = landed.get()
+        if outcome.kind != "done":
+            raise JobFailedError("internal", f"the machine's speed could not be measured: {outcome.trace}")
+        return outcome.seconds
+
+    try:
+        found = calibration.measured(seconds)
+    finally:
+        pool.close()
+    if directory.is_dir():
+        with contextlib.suppress(OSError):
+            calibration.keep(directory, found)
+    return found
 
 
 def _reporter(landed: "queue.SimpleQueue[tuple[Chunk, Outcome]]", chunk: Chunk) -> Callable[[Outcome], None]:

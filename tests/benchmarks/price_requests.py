@@ -4,13 +4,14 @@ from __future__ import annotations
 
 import math
 import random
-import time
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 from app import plan
+from app.calibration import Calibration, measured
 from app.errors import SheetError
 from app.sheets import Sheet, critical_coupling
-from app.workers import compute
+from app.workers import answer
 
 MOST_SECONDS = 3.0
 LARGEST_BYTES = 2**30
@@ -86,10 +87,22 @@ def affordable_sheets(seed: int, count: int) -> list[Sheet]:
     return found
 
 
-def spent_on(sheet: Sheet, factor: float = 1.0) -> Spent:
+def machine() -> Calibration:
+    """How fast this process is, found as a server finds it."""
+    return measured(lambda one: answer(one.questions, one.work, "ground", lambda: False).seconds)
+
+
+def spent_on(sheet: Sheet, found: Calibration) -> Spent:
     """Compute a request in this process, chunk by chunk as a worker does."""
-    made = plan.make(sheet)
-    began = time.process_time()
+    made = found.priced(plan.make(sheet))
+    actual = 0.0
     for chunk in made.chunks:
-        compute(made.chunk_questions(chunk), lambda: False)
-    return Spent(sheet, factor * made.seconds, time.process_time() - began)
+        outcome = answer(made.chunk_questions(chunk), made.work, "ground", lambda: False)
+        assert outcome.kind == "done", outcome
+        actual += outcome.seconds
+    return Spent(sheet, made.seconds, actual)
+
+
+def share_within(spent: Sequence[Spent], factor: float) -> float:
+    """Share of the requests whose price is right within a factor."""
+    return sum(1.0 / factor <= one.ratio <= factor for one in spent) / len(spent)
