@@ -159,7 +159,7 @@ def _serve(pipe: Connection) -> None:
     if parent is not None:
         threading.Thread(target=_follow, args=(parent.sentinel,), daemon=True).start()
     # the server, and a browser on the same machine, come first: they show what is computed here
-    _stand_back()
+    stand_back()
     warm = [CollectiveModel(spins, 1.0, 1.0, 0.6, 0.6) for spins in (1, 4, 20)]
     compute([PointQuestion(model=model) for model in warm], lambda: False)
     with contextlib.suppress(EOFError, OSError):
@@ -172,7 +172,7 @@ def _serve(pipe: Connection) -> None:
                 pipe.send(answer(questions, work, state, lambda: pipe.poll() and pipe.recv() == STOP))
 
 
-def _stand_back() -> None:
+def stand_back() -> None:
     """Let everything else on this machine come first.
 
     Linux shares processors between sessions before it looks at niceness, so that a worker needs a session
