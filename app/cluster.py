@@ -29,6 +29,8 @@ logger = logging.getLogger(__name__)
 
 CONNECT_SECONDS = 5.0
 CALL_SECONDS = 20.0
+# a worker that is asked for the first time loads the solver, maybe from a slow disk
+PROBE_SECONDS = 90.0
 LOOK_SECONDS = 0.5
 RETRY_AFTER = 10
 
@@ -385,10 +387,17 @@ def _client_of(address: str) -> Any:
             address,
         ) from error
     parts = urlsplit(address)
-    # asked plainly first: a client that cannot connect leaves threads behind
-    with socket.create_connection((parts.hostname or "", parts.port or 0), CONNECT_SECONDS):
-        pass
-    security = Security(require_encryption=True) if parts.scheme == "tls" else Security()
+    encrypted = parts.scheme == "tls"
+    security = Security(require_encryption=True) if encrypted else Security()
+    # tried without Dask first: a client that cannot connect leaves threads and traces behind
+    with socket.create_connection((parts.hostname or "", parts.port or 0), CONNECT_SECONDS) as plain:
+        if encrypted:
+            context = security.get_connection_args("client").get("ssl_context")
+            if context is None:
+                raise ValueError("Dask's settings name no certificates (distributed.comm.tls)")
+            with context.wrap_socket(plain, server_hostname=parts.hostname) as proven:
+                # whether our own certificate is good shows in what is sent back
+                proven.recv(1)
     return Client(address, timeout=CONNECT_SECONDS, security=security, set_as_default=False)
 
 
@@ -404,7 +413,7 @@ def _asked(client: Any, workers: list[str]) -> dict[str, Any]:
     """Return the versions of some workers, something else where one does not say."""
     method = client._run  # noqa: SLF001 - `run` has no limit of time, and a worker may hang
     answers: dict[str, Any] = client.sync(
-        method, _probe(), workers=workers, on_error="return", callback_timeout=CALL_SECONDS
+        method, _probe(), workers=workers, on_error="return", callback_timeout=PROBE_SECONDS
     )
     return answers
 

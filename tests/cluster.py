@@ -32,7 +32,14 @@ def free_port() -> int:
 class Process:
     """One Dask command, its log, and its end."""
 
-    def __init__(self, place: Path, name: str, *arguments: str, environment: dict[str, str] | None = None):
+    def __init__(
+        self,
+        place: Path,
+        name: str,
+        *arguments: str,
+        environment: dict[str, str] | None = None,
+        behind: bool = False,
+    ) -> None:
         self.log = place / f"{name}.log"
         self._log_file = self.log.open("ab")
         one_thread = dict.fromkeys(("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS"), "1")
@@ -43,8 +50,7 @@ class Process:
             stdout=self._log_file,
             stderr=subprocess.STDOUT,
             env=os.environ | one_thread | QUICK | {"PYTHONPATH": str(ROOT)} | (environment or {}),
-            # as the processes of a server do, so that both can be compared on a busy machine
-            preexec_fn=stand_back if arguments[0] == "worker" else None,  # noqa: PLW1509 - no threads here
+            preexec_fn=stand_back if behind else None,  # noqa: PLW1509 - no threads here
         )
 
     def wait_for(self, words: str, times: int = 1) -> None:
@@ -67,8 +73,9 @@ class Process:
 class Cluster:
     """A scheduler and its workers, each one process with one thread."""
 
-    def __init__(self, place: Path) -> None:
+    def __init__(self, place: Path, certificate: Path | None = None) -> None:
         self.place = place
+        self.certificate = certificate
         self.port = free_port()
         self.processes: list[Process] = []
         self.started = 0
@@ -76,29 +83,42 @@ class Cluster:
 
     @property
     def address(self) -> str:
-        return f"tcp://127.0.0.1:{self.port}"
+        return f"{'tls' if self.certificate else 'tcp'}://127.0.0.1:{self.port}"
 
-    def _start(self, kind: str, *arguments: str, environment: dict[str, str] | None = None) -> Process:
+    def _start(
+        self,
+        kind: str,
+        *arguments: str,
+        environment: dict[str, str] | None = None,
+        behind: bool = False,
+    ) -> Process:
         self.started += 1
-        found = Process(self.place, f"{kind}-{self.started}", kind, *arguments, environment=environment)
+        if self.certificate:
+            file = str(self.certificate)
+            arguments += ("--tls-ca-file", file, "--tls-cert", file, "--tls-key", file)
+        name = f"{kind}-{self.started}"
+        found = Process(self.place, name, kind, *arguments, environment=environment, behind=behind)
         self.processes.append(found)
         return found
 
     def start_scheduler(self) -> Process:
         """Start the scheduler, at the same address each time."""
         found = self._start(
-            "scheduler", "--host", "127.0.0.1", "--port", str(self.port), "--no-dashboard", "--no-show"
+            "scheduler", "--host", self.address.rpartition(":")[0], "--port", str(self.port), "--no-dashboard"
         )
         found.wait_for("Scheduler at")
         return found
 
-    def start_worker(self, *, environment: dict[str, str] | None = None) -> Process:
-        """Start a worker and wait until the scheduler knows it."""
+    def start_worker(self, *, environment: dict[str, str] | None = None, behind: bool = False) -> Process:
+        """Start a worker and wait until the scheduler knows it.
+
+        `behind`: it stands back behind everything else, as the processes of a server do.
+        """
         found = self._start(
             "worker",
             self.address,
             "--host",
-            "127.0.0.1",
+            self.address.rpartition(":")[0],
             "--nthreads",
             "1",
             "--no-nanny",
@@ -106,6 +126,7 @@ class Cluster:
             "--local-directory",
             str(self.place),
             environment=environment,
+            behind=behind,
         )
         found.wait_for("Registered to")
         return found

@@ -1,6 +1,8 @@
 """Computing on a Dask cluster: a real scheduler and real workers on loopback."""
 
 import importlib.util
+import os
+import shutil
 import signal
 import subprocess
 import sys
@@ -61,13 +63,14 @@ def numbers(result: dict[str, Any]) -> dict[str, Any]:
     return {key: value for key, value in result.items() if key not in {"provenance", "sheet", "link"}}
 
 
-def program(*arguments: str) -> subprocess.CompletedProcess[str]:
+def program(*arguments: str, **environment: str) -> subprocess.CompletedProcess[str]:
     return subprocess.run(
         [sys.executable, "-m", "app", *arguments],
         cwd=ROOT,
         capture_output=True,
         text=True,
         timeout=120,
+        env=os.environ | environment,
         check=False,
     )
 
@@ -183,6 +186,42 @@ def test_cancelling_frees_the_workers_soon(start_server: ServerFactory, cluster:
     again = start(server, LONG)
     assert again["id"] == job["id"]
     assert again["state"] in {"queued", "running"}
+
+
+@pytest.mark.slow
+@needs_dask
+@pytest.mark.skipif(shutil.which("openssl") is None, reason="no openssl to make a certificate with")
+def test_an_encrypted_cluster_is_used_with_its_certificate_only(
+    start_server: ServerFactory, tmp_path: Path
+) -> None:
+    made, wrong = (tmp_path / f"{name}.pem" for name in ("made", "wrong"))
+    for file in (made, wrong):
+        request = f"openssl req -x509 -newkey rsa:2048 -nodes -subj /CN=test -keyout {file} -out {file}.cert"
+        subprocess.run(request.split(), check=True, capture_output=True)
+        file.write_text(file.read_text() + Path(f"{file}.cert").read_text())
+    encrypted = Cluster(tmp_path, made)
+    try:
+        encrypted.start_worker()
+        known = {
+            name: {
+                "DASK_DISTRIBUTED__COMM__TLS__CA_FILE": str(file),
+                "DASK_DISTRIBUTED__COMM__TLS__CLIENT__CERT": str(file),
+                "DASK_DISTRIBUTED__COMM__TLS__CLIENT__KEY": str(file),
+            }
+            for name, file in (("made", made), ("wrong", wrong))
+        }
+        server = start_server("--cluster", encrypted.address, environment=known["made"])
+        assert server.client.get("/api/sweep?spins=3&points=5").status_code == 200
+        for environment in (known["wrong"], {}):
+            out = str(tmp_path / "x.json")
+            ended = program(
+                "compute", "spins=2&points=3", "--cluster", encrypted.address, "--out", out, **environment
+            )
+            assert ended.returncode == 2
+            assert encrypted.address in ended.stderr
+            assert "Traceback" not in ended.stderr
+    finally:
+        encrypted.stop()
 
 
 OTHER_SCIPY = """

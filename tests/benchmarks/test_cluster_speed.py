@@ -40,7 +40,7 @@ def cluster(tmp_path: Path) -> Iterator[Cluster]:
     running = Cluster(tmp_path)
     try:
         for _ in range(WORKERS):
-            running.start_worker()
+            running.start_worker(behind=True)
         yield running
     finally:
         running.stop()
