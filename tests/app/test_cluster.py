@@ -152,6 +152,27 @@ def test_a_lost_worker_loses_nothing(start_server: ServerFactory, cluster: Clust
 
 @pytest.mark.slow
 @needs_dask
+def test_what_ends_two_workers_is_given_up(start_server: ServerFactory, tmp_path: Path) -> None:
+    cluster = Cluster(tmp_path)
+    try:
+        cluster.start_worker()
+        server = start_server("--cluster", cluster.address)
+        # a scheduler's own limit would be four workers
+        job = start(server, {"spins": 3000, "points": 5, "to": 1.5})
+        server.wait_until(lambda: server.counts()["workers_busy"] == 1)
+        cluster.processes[-1].stop()
+        assert facts_of(server, job["id"])["state"] == "running"
+        cluster.start_worker().stop()
+        server.wait_until(lambda: facts_of(server, job["id"])["state"] == "failed")
+        assert facts_of(server, job["id"])["error"]["code"] == "kills-workers"
+        cluster.start_worker()
+        assert server.client.get("/api/sweep?spins=3&points=5").status_code == 200
+    finally:
+        cluster.stop()
+
+
+@pytest.mark.slow
+@needs_dask
 def test_a_link_and_a_point_are_computed_on_the_cluster(
     start_server: ServerFactory, cluster: Cluster, tmp_path: Path
 ) -> None:
