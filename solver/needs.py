@@ -22,8 +22,9 @@ from solver.converged import Converged, converge
 from solver.cutoff import needed_cutoff, weight_above
 from solver.errors import QuestionError
 from solver.floor import Floors
-from solver.forecast import first_cutoff, forecast
+from solver.forecast import classical_quanta, first_cutoff, forecast
 from solver.model import CollectiveModel
+from solver.price import point_seconds
 from solver.truncated import Accuracy, FockTruncations, TruncatedValues, Truncations, largest_affordable
 from solver.truncated_blocks import BlockTruncations
 from solver.wanted import QUANTITIES, Wanted
@@ -461,7 +462,8 @@ def predicted_cutoff_seconds(question: CutoffQuestion) -> float:
     """Expected time of `answer_cutoff` on one core."""
     model = question.model
     if model.conserves_excitations:
-        return 5e-3 + 4e-5 * model.spins * question.levels
+        layers = (model.spins + 1.0) * classical_quanta(model)
+        return 4e-3 + point_seconds(model, question.levels) + 2.7e-6 * layers
     solve = forecast(model, question.levels).seconds
     cutoff = first_cutoff(model, "fock", question.levels)
     sectors = 2 if model.conserves_parity else 1
