@@ -320,7 +320,7 @@ async def _picture(engine: Engine, job: Job, sheet: Question) -> dict[str, Any]:
 async def server_limits(request: Request) -> Response:
     """Return what this server takes, and the grammar of links."""
     settings: Settings = request.app.state.settings
-    data = await asyncio.to_thread(limits.describe, settings)
+    data = await asyncio.to_thread(limits.describe, settings, _engine(request).calibrator.found)
     data["store"] = await _engine(request).store.usage()
     return _json(data)
 

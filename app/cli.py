@@ -6,16 +6,17 @@ import sys
 from collections.abc import Sequence
 from pathlib import Path
 
-from app import __version__, exports, kinds, limits, links
+from app import __version__, calibration, exports, kinds, limits, links
 from app.errors import SoftmodeError
 from app.map_sheets import MapSheet
-from app.offline import compute_sheet
+from app.offline import compute_sheet, measure_machine
 from app.plan import check_price
 from app.settings import MEBIBYTE, Settings, processors
 
 FAILED = 1
 MISUSED = 2
 BAR = 30
+CLUSTER_HELP = "compute on a Dask cluster: tcp://HOST:PORT of a scheduler here, tls://HOST:PORT elsewhere"
 
 
 def parser() -> argparse.ArgumentParser:
@@ -33,6 +34,7 @@ def parser() -> argparse.ArgumentParser:
         "--out", type=Path, required=True, help="file to write, ending in .csv, .json or (maps) .npz"
     )
     compute.add_argument("--workers", type=int, default=processors(), help="computing processes")
+    compute.add_argument("--cluster", metavar="ADDRESS", dest="compute_cluster", help=CLUSTER_HELP)
     commands.add_parser("limits", help="print what this machine can take")
     return top
 
@@ -46,6 +48,13 @@ def _server_options(top: argparse.ArgumentParser) -> None:
     )
     top.add_argument(
         "--workers", type=int, default=known.workers, help="computing processes (default %(default)s)"
+    )
+    top.add_argument("--cluster", metavar="ADDRESS", help=CLUSTER_HELP)
+    top.add_argument(
+        "--cluster-patience",
+        type=float,
+        default=known.cluster_patience,
+        help="seconds that work waits for a lost scheduler (%(default)s)",
     )
     top.add_argument("--key", default=os.environ.get("SOFTMODE_KEY"), help="shared key (or set SOFTMODE_KEY)")
     top.add_argument("--open", action="store_true", help="let everybody who reaches the address compute")
@@ -91,9 +100,9 @@ def run(arguments: Sequence[str]) -> int:
     chosen = parser().parse_args(arguments)
     try:
         if chosen.command == "compute":
-            return _compute(chosen.link, chosen.out, chosen.workers)
+            return _compute(chosen.link, chosen.out, chosen.workers, chosen.compute_cluster or chosen.cluster)
         if chosen.command == "limits":
-            return _limits()
+            return _limits(chosen.data)
         return _serve(chosen)
     except SoftmodeError as error:
         print(f"softmode: {error.message}", file=sys.stderr)
@@ -114,6 +123,8 @@ def _serve(chosen: argparse.Namespace) -> int:
         port=chosen.port,
         data=chosen.data,
         workers=chosen.workers,
+        cluster=chosen.cluster,
+        cluster_patience=chosen.cluster_patience,
         key=chosen.key or None,
         open_to_all=chosen.open,
         prefix=chosen.prefix,
@@ -128,7 +139,7 @@ def _serve(chosen: argparse.Namespace) -> int:
     return serve(settings, browser=browser)
 
 
-def _compute(link: str, out: Path, workers: int) -> int:
+def _compute(link: str, out: Path, workers: int, cluster: str | None) -> int:
     if out.suffix not in {".csv", ".json", ".npz"}:
         print(f"softmode: {out} must end in .csv, .json or .npz", file=sys.stderr)
         return MISUSED
@@ -143,7 +154,7 @@ def _compute(link: str, out: Path, workers: int) -> int:
         print("softmode: only maps are written as .npz; choose .csv or .json", file=sys.stderr)
         return MISUSED
     check_price(kinds.plan_of(sheet), float("inf"), Settings().memory_ceiling)
-    result = compute_sheet(sheet, workers, _show_progress)
+    result = compute_sheet(sheet, workers, _show_progress, cluster)
     sys.stderr.write("\n")
     if out.suffix == ".json":
         out.write_bytes(exports.encode(result))
@@ -165,11 +176,15 @@ def _show_progress(done: int, total: int) -> None:
     sys.stderr.flush()
 
 
-def _limits() -> int:
+def _limits(data: Path) -> int:
     settings = Settings()
-    described = limits.describe(settings)
+    found = calibration.load(data) or measure_machine(data)
+    described = limits.describe(settings, found)
     print(f"{settings.workers} computing processes; up to {settings.memory_ceiling / 1e9:.3g} GB for a point")
     print(f"default ceiling of a sheet: {settings.price_ceiling:g} s of processor time")
+    factors = ", ".join(f"{work} {factor:.2f}" for work, factor in sorted(found.factors.items()))
+    print(f"processor: {found.processor}")
+    print(f"measured {found.measured_at}, actual over forecast processor time: {factors}")
     print()
     print("isotropic, resonant, 6 levels, tol 1e-9; predicted for one point solved on its own:")
     print(f"{'spins':>6} {'coupling/critical':>18} {'seconds':>10} {'MB':>8} {'points in the ceiling':>22}")

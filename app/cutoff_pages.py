@@ -130,8 +130,8 @@ async def cutoff_margins(request: Request) -> Response:
             "no-cutoff", "say around which cutoff: cutoff=number", "cutoff", None, CUTOFF.allowed
         )
     model, asked = await asyncio.to_thread(margins_at, question, point, cutoff)
-    settings = engine_of(request).settings
-    await asyncio.to_thread(check_margins_price, model, asked, settings)
+    engine = engine_of(request)
+    await asyncio.to_thread(check_margins_price, model, asked, engine.settings, engine.calibrator.found)
     desk: PointDesk = request.app.state.points
     found = await desk.compute(((asked,), MARGINS_WORK, "ground"), model.spins, client_of(request), wait)
     if found is None:

@@ -14,13 +14,24 @@ from collections.abc import Callable
 from typing import Any
 
 from app import identity, kinds, plan
-from app.errors import BusyError, JobFailedError, NotFoundError, PriceError, SheetError, SoftmodeError
+from app.calibration import Calibrator
+from app.errors import (
+    BusyError,
+    ClusterError,
+    JobFailedError,
+    NotFoundError,
+    PriceError,
+    SheetError,
+    SoftmodeError,
+)
+from app.executor import open_executor
 from app.jobs import Job
 from app.plan import Chunk
 from app.questions import Question
 from app.settings import Settings
 from app.store import Store, StoredChunk
-from app.workers import Outcome, ProcessPool, Task
+from app.turns import Turns
+from app.workers import Outcome, Task
 
 logger = logging.getLogger(__name__)
 
@@ -35,20 +46,21 @@ class Engine:
     def __init__(self, settings: Settings) -> None:
         self.settings = settings
         self.store = Store(settings.data, settings.store_bytes)
-        self.pool = ProcessPool(settings.workers)
+        self.pool = open_executor(settings.workers, settings.cluster, settings.cluster_patience)
+        self.calibrator = Calibrator(self.store.directory, self.pool, settings.cluster)
+        self.turns = Turns()
         self.jobs: OrderedDict[str, Job] = OrderedDict()
         self.counts: Counter[str] = Counter()
         self.restarting = False
         self._busy = 0
-        self._tick = 0
-        self._served: dict[str, int] = {}
         self._loop: asyncio.AbstractEventLoop | None = None
-        self._tidying: asyncio.Task[None] | None = None
+        self._tending: tuple[asyncio.Task[None], ...] = ()
 
     async def start(self) -> None:
-        """Begin to look after leases."""
+        """Begin to look after leases; measure the workers when there is nothing else to do."""
         self._loop = asyncio.get_running_loop()
-        self._tidying = asyncio.create_task(self._tidy())
+        measuring = self.calibrator.run(lambda: not any(job.is_active for job in self.jobs.values()))
+        self._tending = (asyncio.create_task(self._tidy()), asyncio.create_task(measuring))
 
     def announce_restart(self) -> None:
         """Tell everybody who watches that the server goes down; finished chunks are kept."""
@@ -62,10 +74,10 @@ class Engine:
     async def close(self) -> None:
         """Stop computing, finish writing."""
         self.announce_restart()
-        if self._tidying is not None:
-            self._tidying.cancel()
+        for task in self._tending:
+            task.cancel()
             with contextlib.suppress(asyncio.CancelledError):
-                await self._tidying
+                await task
         await asyncio.to_thread(self.pool.close)
         await asyncio.to_thread(self.store.close)
 
@@ -85,7 +97,7 @@ class Engine:
         """
         name = identity.sheet_id(sheet)
         job = self.jobs.get(name)
-        if job is None or not (job.is_active or job.state in {"done", "failed"}):
+        if job is None or not (job.is_active or job.is_settled):
             job = self._begin(name, sheet, client, job)
         elif job.state == "done":
             self.store.touch(name)
@@ -198,7 +210,7 @@ class Engine:
         """Plan a job, take what the store has, queue the rest."""
         try:
             if job.plan is None:
-                made = await asyncio.to_thread(kinds.plan_of, job.sheet)
+                made = self.calibrator.found.priced(await asyncio.to_thread(kinds.plan_of, job.sheet))
                 plan.check_price(made, self.settings.price_ceiling, self.settings.memory_ceiling)
                 found = await self.store.load(job.id)
                 job.rows = [None] * len(made.questions)
@@ -210,6 +222,8 @@ class Engine:
                     self._take_stored(job, found, job.plan.chunks[before:])
                 if job.is_computed:
                     job.finished_at = await self.store.finished_at(job.id)
+            if job.plan is not None and len(job.finished_chunks) < len(job.plan.chunks):
+                await asyncio.to_thread(self.pool.check)
         except SoftmodeError as error:
             self._fail(job, error)
             self.jobs.pop(job.id, None)
@@ -270,15 +284,13 @@ class Engine:
         self._dispatch()
 
     def _dispatch(self) -> None:
-        """Give free workers the next chunks: clients take turns, and so do the jobs of a client."""
+        """Give free workers the next chunks, of whoever has the next turn."""
         while self._busy < self.pool.size:
             candidates = [job for job in self.jobs.values() if job.waiting and job.is_active]
             if not candidates:
-                self._served.clear()
+                self.turns.clear()
                 return
-            job = min(candidates, key=lambda one: (self._served.get(one.client, 0), one.turn))
-            self._tick += 1
-            self._served[job.client] = job.turn = self._tick
+            job = self.turns.choose(candidates)
             self._run(job, job.waiting.popleft())
 
     def _run(self, job: Job, chunk: Chunk) -> None:
@@ -294,6 +306,7 @@ class Engine:
         job.active[chunk.number] = task
         job.state = "running"
         self._busy += 1
+        self.turns.charge(job.client, chunk.seconds * job.speed)
         self.pool.submit(task)
 
     def _landed(self, job: Job, chunk: Chunk, outcome: Outcome) -> None:
@@ -314,6 +327,8 @@ class Engine:
             )
         elif outcome.kind == "refused" and outcome.error is not None:
             self._fail(job, SheetError("not-solvable", **outcome.error))
+        elif outcome.kind == "unavailable" and outcome.error is not None:
+            self._fail(job, ClusterError(**outcome.error, retry_after=5))
         elif outcome.kind == "lost" and not self.restarting:
             self._fail(
                 job,
@@ -332,6 +347,7 @@ class Engine:
     def _take(self, job: Job, chunk: Chunk, outcome: Outcome) -> None:
         finished = StoredChunk(chunk.points, outcome.rows, outcome.seconds)
         job.accept(chunk, finished)
+        self.turns.charge(job.client, outcome.seconds - chunk.seconds * job.speed)
         job.pace = (job.pace[0] + chunk.seconds, job.pace[1] + outcome.seconds)
         self.counts["chunks_computed"] += 1
         self.counts["points_computed"] += len(chunk.points)
@@ -378,10 +394,19 @@ class Engine:
                 if job.is_active and not job.leases:
                     self.cancel(job)
                 self._check_spending(job)
+                self._tell_trouble(job)
             self._forget()
+
+    def _tell_trouble(self, job: Job) -> None:
+        """Let those who watch a job know why it does not go on, and when it does again."""
+        if job.is_active and job.notice != self.pool.trouble:
+            job.notice = self.pool.trouble
+            job.changed()
 
     def _check_spending(self, job: Job) -> None:
         """Stop a job that takes far longer than its price: a wrong forecast must not hold the workers."""
+        if self.pool.trouble is not None:
+            return
         now = time.monotonic()
         spent = job.pace[1] + sum(now - task.handed_over for task in job.active.values())
         most = OVERSPENDING * self.settings.price_ceiling

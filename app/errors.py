@@ -8,6 +8,7 @@ SoftmodeError
 ├── NotFoundError       no such page, job or stored link (404)
 ├── ConflictError       the job is in a state in which this cannot be done (409)
 ├── BusyError           the queue is full or the server is restarting (503, Retry-After)
+├── ClusterError        the cluster that computes is lost, or would give other numbers (503, Retry-After)
 ├── JobFailedError      the computation ended without a result (500)
 ├── StoreError          the data directory cannot be used (507)
 └── StartError          the server cannot start with these settings
@@ -111,6 +112,12 @@ class ConflictError(SoftmodeError):
 
 class BusyError(SoftmodeError):
     """The server cannot take this on now."""
+
+    status = 503
+
+
+class ClusterError(SoftmodeError):
+    """The cluster that computes is lost, or its workers would give other numbers."""
 
     status = 503
 

@@ -33,7 +33,8 @@ class Job:
     """One computation, named by its content hash.
 
     `state` is queued, running, done, failed, cancelled or restarting. `rows` has one entry for each point
-    of the plan, None while it is missing; `revision` counts its changes.
+    of the plan, None while it is missing; `revision` counts its changes; `notice` says why it does not go on
+    at present.
     """
 
     id: str
@@ -53,12 +54,19 @@ class Job:
     preparing: asyncio.Task[None] | None = None
     turn: int = 0
     pace: tuple[float, float] = (0.0, 0.0)
+    notice: str | None = None
     _changed: asyncio.Event = field(default_factory=asyncio.Event)
 
     @property
     def is_active(self) -> bool:
         """Whether the job waits for computation or is being computed."""
         return self.state in ACTIVE
+
+    @property
+    def is_settled(self) -> bool:
+        """Whether asking again changes nothing: there is a result, or a failure that would come again."""
+        failed = self.state == "failed" and (self.error is None or self.error.retry_after is None)
+        return self.state == "done" or failed
 
     @property
     def done(self) -> int:
@@ -119,14 +127,30 @@ class Job:
             left = (chunk for chunk in self.plan.chunks if chunk.number not in self.finished_chunks)
             self.waiting = deque(chunk for chunk in left if chunk.number not in self.active)
 
+    @property
+    def speed(self) -> float:
+        """Actual over predicted seconds of a chunk: as measured so far, before that as the price has it."""
+        predicted, measured = self.pace
+        if predicted > 0.0:
+            return min(10.0, max(0.02, measured / predicted))
+        whole = sum(chunk.seconds for chunk in self.plan.chunks) if self.plan is not None else 0.0
+        return self.plan.seconds / whole if self.plan is not None and whole > 0.0 else 1.0
+
+    def is_shorter_than(self, seconds: float) -> bool:
+        """Say whether the chunks that wait will take less processor time than that."""
+        left, speed = seconds, self.speed
+        for chunk in self.waiting:
+            left -= speed * chunk.seconds
+            if left < 0.0:
+                return False
+        return True
+
     def seconds_left(self, workers: int) -> float | None:
         """Return the expected time to the end of this job alone, None when it is unknown or over."""
         if self.plan is None or not self.is_active:
             return None
-        predicted, measured = self.pace
-        speed = min(10.0, max(0.02, measured / predicted)) if predicted > 0.0 else 1.0
         left = sum(chunk.seconds for chunk in self.plan.chunks if chunk.number not in self.finished_chunks)
-        return speed * (left + self.plan.later_seconds) / workers
+        return self.speed * (left + self.plan.later_seconds) / workers
 
     def snapshot(self, workers: int) -> dict[str, Any]:
         """Return the public facts of the job."""
@@ -139,6 +163,8 @@ class Job:
             "seconds_left": None if left is None else round(left, 2),
             "revision": self.revision,
         }
+        if self.notice is not None and self.is_active:
+            facts["notice"] = self.notice
         if self.error is not None:
             facts |= self.error.body()
         return facts

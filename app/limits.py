@@ -3,6 +3,7 @@
 import functools
 from typing import Any
 
+from app.calibration import POINTS, Calibration
 from app.cutoff_sheets import CUTOFF_KEYS
 from app.keys import GRAMMAR_VERSION, KEYS, SWEPT, Key
 from app.map_sheets import MAP_OWN_KEYS
@@ -35,11 +36,13 @@ def prices() -> tuple[dict[str, Any], ...]:
     return tuple(found)
 
 
-def describe(settings: Settings) -> dict[str, Any]:
-    """Return the limits of a server as JSON-able data."""
+def describe(settings: Settings, calibration: Calibration) -> dict[str, Any]:
+    """Return the limits of a server as JSON-able data, prices in seconds of its machine."""
+    factor = calibration.factor(POINTS)
     return {
         "limits": {
             "workers": settings.workers,
+            "cluster": settings.cluster,
             "processor_seconds_per_sheet": settings.price_ceiling,
             "bytes_per_point": settings.memory_ceiling,
             "sheets_at_a_time": settings.queue_limit,
@@ -50,7 +53,8 @@ def describe(settings: Settings) -> dict[str, Any]:
             "grace_seconds": settings.grace_seconds,
             "chunk_seconds": CHUNK_SECONDS,
         },
-        "point_prices": list(prices()),
+        "calibration": calibration.data(),
+        "point_prices": [price | {"seconds": round(factor * price["seconds"], 5)} for price in prices()],
         "grammar": {
             "version": GRAMMAR_VERSION,
             "swept": list(SWEPT),

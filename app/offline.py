@@ -1,20 +1,27 @@
 """Computing a sheet without a server: the same plan, the same processes, the same numbers."""
 
+import contextlib
 import datetime as dt
 import queue
 from collections.abc import Callable
+from pathlib import Path
 from typing import Any
 
-from app import identity, kinds
-from app.errors import JobFailedError, SheetError
+from app import calibration, identity, kinds
+from app.calibration import Calibration, Reference
+from app.errors import ClusterError, JobFailedError, SheetError
+from app.executor import open_executor
 from app.plan import Chunk
 from app.questions import Question
-from app.workers import Outcome, ProcessPool, Task
+from app.settings import Settings
+from app.workers import Outcome, Task
 
 Progress = Callable[[int, int], None]
 
 
-def compute_sheet(sheet: Question, workers: int, progress: Progress) -> dict[str, Any]:
+def compute_sheet(
+    sheet: Question, workers: int, progress: Progress, cluster: str | None = None
+) -> dict[str, Any]:
     """Return the complete result of a sheet.
 
     Parameters
@@ -25,6 +32,8 @@ def compute_sheet(sheet: Question, workers: int, progress: Progress) -> dict[str
         Number of computing processes.
     progress : callable
         Called with the finished and the total number of points.
+    cluster : str or None
+        Address of a Dask scheduler whose workers compute in the place of processes.
 
     Raises
     ------
@@ -32,11 +41,13 @@ def compute_sheet(sheet: Question, workers: int, progress: Progress) -> dict[str
         When the solver refuses a point.
     JobFailedError
         When a chunk ends its process twice.
+    StartError, ClusterError
+        When the cluster cannot be used, or is lost.
     """
     made = kinds.plan_of(sheet)
     rows: list[dict[str, Any] | None] = [None] * len(made.questions)
     landed: queue.SimpleQueue[tuple[Chunk, Outcome]] = queue.SimpleQueue()
-    pool = ProcessPool(workers)
+    pool = open_executor(workers, cluster, Settings().cluster_patience)
     seconds = 0.0
     done = 0
     progress(0, len(rows))
@@ -50,6 +61,8 @@ def compute_sheet(sheet: Question, workers: int, progress: Progress) -> dict[str
                 break
             chunk, outcome = landed.get()
             finished += 1
+            if outcome.kind == "unavailable" and outcome.error is not None:
+                raise ClusterError(**outcome.error)
             if outcome.error is not None:
                 raise SheetError("not-solvable", **outcome.error)
             if outcome.kind == "broken":
@@ -76,6 +89,31 @@ def compute_sheet(sheet: Question, workers: int, progress: Progress) -> dict[str
         "seconds": round(seconds, 4),
     }
     return kinds.result_of(sheet, made, rows, name=identity.sheet_id(sheet), provenance=provenance)
+
+
+def measure_machine(directory: Path) -> Calibration:
+    """Return how fast the processes of this machine are, and keep it where there is a data directory.
+
+    Raises JobFailedError when a process cannot answer.
+    """
+    landed: queue.SimpleQueue[Outcome] = queue.SimpleQueue()
+    pool = open_executor(1, None, 0.0)
+
+    def seconds(reference: Reference) -> float:
+        pool.submit(Task(reference.questions, landed.put, reference.work))
+        outcome = landed.get()
+        if outcome.kind != "done":
+            raise JobFailedError("internal", f"the machine's speed could not be measured: {outcome.trace}")
+        return outcome.seconds
+
+    try:
+        found = calibration.measured(seconds)
+    finally:
+        pool.close()
+    if directory.is_dir():
+        with contextlib.suppress(OSError):
+            calibration.keep(directory, found)
+    return found
 
 
 def _reporter(landed: "queue.SimpleQueue[tuple[Chunk, Outcome]]", chunk: Chunk) -> Callable[[Outcome], None]:

@@ -15,7 +15,7 @@ from solver import CollectiveModel, PointQuestion, predicted_bytes, predicted_se
 
 COARSE_STEP = 8
 # a chunk this short brings a first curve while the finger is still on the key
-FIRST_CHUNK_SECONDS = 0.02
+FIRST_CHUNK_SECONDS = 0.03
 CHUNK_SECONDS = 0.2
 MOST_POINTS_IN_CHUNK = 64
 

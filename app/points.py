@@ -14,9 +14,10 @@ from dataclasses import dataclass
 from typing import Any
 
 from app import identity, plan
+from app.calibration import POINTS, Calibration
 from app.cutoff_work import MarginsQuestion, margins_bytes, margins_seconds
 from app.engine import OVERSPENDING, Engine
-from app.errors import BusyError, JobFailedError, PriceError, SheetError, SoftmodeError
+from app.errors import BusyError, ClusterError, JobFailedError, PriceError, SheetError, SoftmodeError
 from app.exports import point_of
 from app.places import Place
 from app.settings import Settings
@@ -68,11 +69,11 @@ def chain_of(place: Place) -> tuple[PointQuestion, ...]:
     return tuple(made.questions[one] for one in before)
 
 
-def check_price(questions: tuple[PointQuestion, ...], settings: Settings) -> None:
+def check_price(questions: tuple[PointQuestion, ...], settings: Settings, calibration: Calibration) -> None:
     """Raise PriceError when a portrait costs more processor time or memory than the server allows."""
     seconds = sum(predicted_seconds(question) for question in questions) + portrait_seconds(questions[-1])
     most_bytes = max(predicted_bytes(question) for question in questions)
-    check_ceilings(questions[-1].model, seconds, most_bytes, settings)
+    check_ceilings(questions[-1].model, calibration.factor(POINTS) * seconds, most_bytes, settings)
 
 
 def check_ceilings(model: CollectiveModel, seconds: float, most_bytes: int, settings: Settings) -> None:
@@ -89,9 +90,12 @@ def check_ceilings(model: CollectiveModel, seconds: float, most_bytes: int, sett
         )
 
 
-def check_margins_price(model: CollectiveModel, asked: MarginsQuestion, settings: Settings) -> None:
+def check_margins_price(
+    model: CollectiveModel, asked: MarginsQuestion, settings: Settings, calibration: Calibration
+) -> None:
     """Raise PriceError when the margins of a point cost more than the server allows."""
-    check_ceilings(model, margins_seconds(asked), margins_bytes(model, asked), settings)
+    seconds = calibration.factor("margins") * margins_seconds(asked)
+    check_ceilings(model, seconds, margins_bytes(model, asked), settings)
 
 
 class PointDesk:
@@ -107,7 +111,7 @@ class PointDesk:
         Raises PriceError, BusyError, or what went wrong with the computation.
         """
         questions = await asyncio.to_thread(chain_of, place)
-        check_price(questions, self.engine.settings)
+        check_price(questions, self.engine.settings, self.engine.calibrator.found)
         asked = (questions, "portrait", place.state)
         found = await self.compute(asked, questions[-1].model.spins, client, wait)
         return None if found is None else await self._told(place, *found)
@@ -120,6 +124,8 @@ class PointDesk:
         `asked` holds the questions, their work (see `workers`) and the state drawn; `spins` is for the words
         of an error. Raises BusyError, or what went wrong.
         """
+        if asked not in self.entries:
+            await asyncio.to_thread(self.engine.pool.check)
         entry = self.entries.get(asked) or self._begin(asked, spins, client)
         self.entries.move_to_end(asked)
         entry.waiting += 1
@@ -193,7 +199,7 @@ class PointDesk:
         if outcome.kind == "done":
             made = {"computed_at": entry.finished_at, "seconds": round(outcome.seconds, 4)}
             return outcome, identity.versions() | made
-        if outcome.kind in {"stopped", "broken"}:
+        if outcome.kind in {"stopped", "broken", "unavailable"}:
             # worth another try, unlike what the solver refuses
             self.entries.pop(asked, None)
         raise _error_of(outcome, entry, self.engine)
@@ -209,6 +215,8 @@ class PointDesk:
 def _error_of(outcome: Outcome, entry: _Entry, engine: Engine) -> SoftmodeError:
     if outcome.kind == "refused" and outcome.error is not None:
         return SheetError("not-solvable", **outcome.error)
+    if outcome.kind == "unavailable" and outcome.error is not None:
+        return ClusterError(**outcome.error, retry_after=5)
     if outcome.kind == "stopped" and entry.overspent:
         most = OVERSPENDING * engine.settings.price_ceiling
         return PriceError(

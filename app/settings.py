@@ -4,6 +4,7 @@ import ipaddress
 import os
 from dataclasses import dataclass, field
 from pathlib import Path
+from urllib.parse import urlsplit
 
 from app.errors import StartError
 
@@ -45,6 +46,11 @@ class Settings:
         Path below which a proxy shows the server without stripping it, such as "/softmode".
     allowed_hosts : tuple of str
         Further names under which the server is addressed.
+    cluster : str or None
+        Address of a Dask scheduler that computes in the place of processes on this machine: tcp:// on this
+        machine, tls:// anywhere.
+    cluster_patience : float
+        Seconds for which work under way waits for a lost scheduler.
     price_ceiling : float
         Largest predicted processor time of one sheet, in seconds.
     memory_ceiling : int
@@ -71,6 +77,8 @@ class Settings:
     open_to_all: bool = False
     prefix: str = ""
     allowed_hosts: tuple[str, ...] = ()
+    cluster: str | None = None
+    cluster_patience: float = 300.0
     price_ceiling: float = 1200.0
     memory_ceiling: int = field(default_factory=lambda: max(256 * MEBIBYTE, machine_bytes() // 4))
     queue_limit: int = 32
@@ -87,6 +95,8 @@ class Settings:
         """Raise StartError when these settings are unsafe or cannot work."""
         if self.workers < 1:
             raise StartError("bad-workers", "at least one worker is needed", "workers", self.workers, ">= 1")
+        if self.cluster is not None:
+            check_cluster_address(self.cluster)
         if self.key is not None and len(self.key) < SHORTEST_KEY:
             raise StartError(
                 "short-key", f"the key needs at least {SHORTEST_KEY} characters", "key", None, "longer keys"
@@ -118,6 +128,33 @@ def is_loopback(host: str) -> bool:
         return ipaddress.ip_address(host.strip("[]")).is_loopback
     except ValueError:
         return False
+
+
+def check_cluster_address(address: str) -> None:
+    """Raise StartError unless this is a scheduler to trust: on this machine, or proven by TLS."""
+    allowed = "tcp://127.0.0.1:PORT, or tls://HOST:PORT with Dask's own TLS settings"
+    try:
+        parts = urlsplit(address)
+        complete = parts.scheme in {"tcp", "tls"} and parts.hostname and parts.port
+    except ValueError:
+        complete = False
+    if not complete:
+        raise StartError(
+            "bad-cluster-address",
+            "the address of the cluster's scheduler looks like tcp://127.0.0.1:8786",
+            "cluster",
+            address,
+            allowed,
+        )
+    if parts.scheme == "tcp" and not is_loopback(parts.hostname or ""):
+        raise StartError(
+            "cluster-not-encrypted",
+            f"{address} would be reached in the clear, and whoever answers there could run programs here: "
+            "use tls://, or a scheduler on this machine (an SSH tunnel makes a far one look like that)",
+            "cluster",
+            address,
+            allowed,
+        )
 
 
 def templates_dir() -> Path:

@@ -61,8 +61,8 @@ class Outcome:
     """How a chunk ended.
 
     `kind` is "done", "stopped" (cancelled half-way), "refused" (the solver says why in `error`), "broken"
-    (an unforeseen failure, its trace in `trace`) or "lost" (killed two processes); `rows` and `seconds`
-    (processor time) belong to "done".
+    (an unforeseen failure, its trace in `trace`), "lost" (killed two processes) or "unavailable" (a cluster
+    that cannot compute it, `error` says why); `rows` and `seconds` (processor time) belong to "done".
     """
 
     kind: str
@@ -166,7 +166,7 @@ def _serve(pipe: Connection) -> None:
     if parent is not None:
         threading.Thread(target=_follow, args=(parent.sentinel,), daemon=True).start()
     # the server, and a browser on the same machine, come first: they show what is computed here
-    _stand_back()
+    stand_back()
     warm = [CollectiveModel(spins, 1.0, 1.0, 0.6, 0.6) for spins in (1, 4, 20)]
     compute([PointQuestion(model=model) for model in warm], lambda: False)
     with contextlib.suppress(EOFError, OSError):
@@ -175,10 +175,11 @@ def _serve(pipe: Connection) -> None:
             message = pipe.recv()
             if message != STOP:  # a stop that came too late
                 questions, work, state = message
-                pipe.send(_answer(questions, work, state, pipe))
+                # nothing but a stop is sent while a chunk is under way
+                pipe.send(answer(questions, work, state, lambda: pipe.poll() and pipe.recv() == STOP))
 
 
-def _stand_back() -> None:
+def stand_back() -> None:
     """Let everything else on this machine come first.
 
     Linux shares processors between sessions before it looks at niceness, so that a worker needs a session
@@ -190,14 +191,14 @@ def _stand_back() -> None:
         Path("/proc/self/autogroup").write_text(str(NICENESS))
 
 
-def _answer(questions: Sequence[Any], work: str, state: StateName, pipe: Connection) -> Outcome:
-    started = time.process_time()
+def answer(questions: Sequence[Any], work: str, state: StateName, stopped: Callable[[], bool]) -> Outcome:
+    """Return the outcome of a chunk, computed in this thread; `stopped` is asked between two points."""
+    started = time.thread_time()
     try:
         if work == "portrait":
             rows: list[dict[str, Any]] | None = compute_portrait(questions, state)
         else:
-            # nothing but a stop is sent while a chunk is under way
-            rows = WORK[work](questions, lambda: pipe.poll() and pipe.recv() == STOP)
+            rows = WORK[work](questions, stopped)
     except SolverError as error:
         facts = {
             "message": error.message,
@@ -210,7 +211,7 @@ def _answer(questions: Sequence[Any], work: str, state: StateName, pipe: Connect
         return Outcome("broken", trace=traceback.format_exc())
     if rows is None:
         return Outcome("stopped")
-    return Outcome("done", rows, time.process_time() - started)
+    return Outcome("done", rows, time.thread_time() - started)
 
 
 def _follow(sentinel: int) -> None:
@@ -363,6 +364,14 @@ class ProcessPool:
     def lost(self) -> int:
         """Number of processes that died without being asked to."""
         return sum(worker.lost for worker in self.workers)
+
+    @property
+    def trouble(self) -> str | None:
+        """None: processes are always there, a dead one is replaced."""
+        return None
+
+    def check(self) -> None:
+        """Do nothing: each process compares its solver when it starts."""
 
     def submit(self, task: Task) -> None:
         """Hand over a task; its `report` is called once, from a thread of the pool."""

@@ -19,8 +19,8 @@ _SECONDS_PER_OPERATION = 5.0e-10
 _SECONDS_PER_SECTOR = 1.5e-3
 _SECONDS_PER_BLOCK = 4.0e-5
 _SECONDS_PER_AMPLITUDE = 5.0e-8
-_SOLVES = 28.0
-_PLAIN_COUNT_UP_TO = 100
+SOLVES = 28.0
+PLAIN_COUNT_UP_TO = 100
 
 
 def classical_quanta(model: CollectiveModel) -> float:
@@ -86,8 +86,8 @@ def predicted_cost(model: CollectiveModel, basis: BasisName, levels: int) -> flo
         inner = cutoff + 1
         # the parities share the elimination
         half_width, pieces = 2 * cutoff + 1, (size + 1.0) / sectors
-        paired = 1.0 if size <= _PLAIN_COUNT_UP_TO else 2.0
-    work = sectors * dimension * half_width * (half_width + 4.0 * _SOLVES)
+        paired = 1.0 if size <= PLAIN_COUNT_UP_TO else 2.0
+    work = sectors * dimension * half_width * (half_width + 4.0 * SOLVES)
     count = pieces * (_SECONDS_PER_BLOCK + 3.0 * (paired * inner) ** 3 * _SECONDS_PER_OPERATION)
     layers = sectors * dimension * levels * _SECONDS_PER_AMPLITUDE
     return sectors * _SECONDS_PER_SECTOR + work * _SECONDS_PER_OPERATION + count + layers

@@ -9,6 +9,7 @@ from typing import Literal
 from solver.forecast import forecast
 from solver.observables import REGISTRY
 from solver.point import PointAnswer, PointQuestion, answer_point
+from solver.price import point_seconds
 from solver.spectrum import Start
 
 
@@ -145,11 +146,8 @@ def solve_chain_with_states(
 
 
 def predicted_seconds(question: PointQuestion) -> float:
-    """Expected time for one point started cold, on one core."""
-    model = question.model
-    if model.conserves_excitations:
-        return 2e-3 + 2e-6 * model.spins * question.levels
-    return forecast(model, question.levels).seconds
+    """Expected processor seconds for one point, on a machine of no particular speed."""
+    return point_seconds(question.model, question.levels)
 
 
 def predicted_bytes(question: PointQuestion) -> int:

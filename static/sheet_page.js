@@ -35,7 +35,7 @@ export class Progress {
     const active = facts.state === "queued" || facts.state === "running";
     part("bar").max = facts.total;
     part("bar").value = facts.done;
-    const words = facts.state === "queued" ? "waiting for a free processor" : duration(facts.seconds_left);
+    const words = facts.notice ?? (facts.state === "queued" ? "waiting for a free processor" : duration(facts.seconds_left));
     part("progress-words").textContent = `${facts.done} of ${facts.total} points${words ? `, ${words}` : ""}`;
     part("cancel").hidden = !active;
     part("go-on").hidden = true;

@@ -58,10 +58,14 @@ def test_a_directory_that_is_not_there(tmp_path: Path) -> None:
     assert "none" in ended.stderr
 
 
-def test_limits_of_this_machine() -> None:
-    ended = softmode("limits")
+def test_limits_of_this_machine(tmp_path: Path) -> None:
+    ended = softmode("--data", str(tmp_path), "limits")
     assert ended.returncode == 0, ended.stderr
     assert "computing processes" in ended.stdout
+    told = [line for line in ended.stdout.splitlines() if line.startswith("measured ")]
+    assert len(told) == 1
+    # measured once, kept
+    assert told[0] in softmode("--data", str(tmp_path), "limits").stdout
     rows = [
         line.split()
         for line in ended.stdout.splitlines()

@@ -325,6 +325,43 @@ def test_small_sheets_do_not_wait_for_large_ones(start_server: ServerFactory) ->
     assert facts_of(server, large["id"])["state"] == "running"
 
 
+def test_a_long_sheet_goes_on_while_small_ones_keep_coming(start_server: ServerFactory) -> None:
+    server = start_server("--workers", "1")
+    large = start(server, LONG | {"spins": 200})
+    server.wait_until(lambda: server.counts()["workers_busy"] == 1)
+    before = facts_of(server, large["id"])["done"]
+    for k in range(12):
+        # each is over before the long one has had much of a turn
+        assert server.client.get(f"/api/sweep?spins=10&points=41&mode={1 + k / 100}").status_code == 200
+        assert facts_of(server, large["id"])["state"] == "running"
+    assert facts_of(server, large["id"])["done"] > before
+
+
+def test_clients_share_the_processors(start_server: ServerFactory) -> None:
+    """Two clients by address: one with a single long sheet, one with three."""
+    server = start_server("--workers", "1")
+    other = httpx.Client(
+        base_url=server.address,
+        timeout=60.0,
+        trust_env=False,
+        transport=httpx.HTTPTransport(local_address="127.0.0.2"),
+    )
+    with other:
+        single = start(server, LONG | {"spins": 100})
+        many = [other.post("/api/jobs", json=LONG | {"spins": spins}).json() for spins in (101, 102, 103)]
+
+        def done() -> list[int]:
+            return [facts_of(server, job["id"])["done"] for job in (single, *many)]
+
+        server.wait_until(lambda: min(done()) > 0)
+        before = done()
+        server.wait_until(lambda: sum(done()) - sum(before) >= 240, 240.0)
+        gained = [after - one for after, one in zip(done(), before, strict=True)]
+    # the sheets cost nearly the same for each point; a chunk more or less is no injustice
+    assert 0.3 <= gained[0] / sum(gained) <= 0.7
+    assert min(gained[1:]) > 0
+
+
 def test_expensive_sheets_are_refused_before_they_run(start_server: ServerFactory) -> None:
     server = start_server("--ceiling", "0.5")
     for answer in (
