@@ -29,8 +29,8 @@ from app.errors import ConflictError, JobFailedError, NotFoundError, SheetError,
 from app.faults import on_error
 from app.figures import picture
 from app.jobs import Job
-from app.keys import Key
 from app.metrics import Metrics, Observed
+from app.openapi import FIRST, PARTIAL
 from app.points import PointDesk
 from app.replies import accepted as _accepted
 from app.replies import body_of as _body
@@ -44,9 +44,6 @@ from app.security import Guard
 from app.settings import Settings
 from app.sheets import Sheet
 from app.short_links import StoredLinks
-
-FIRST = Key("first", "real", 0.0, "seconds to wait for the first picture", low=0.0, high=5.0)
-PARTIAL = Key("partial", "choice", "0", "whether an unfinished result will do", choices=("0", "1"))
 
 router = APIRouter()
 

@@ -14,6 +14,7 @@ from dataclasses import dataclass
 from typing import Any
 
 from app import identity, plan
+from app.cutoff_plan import told_as_sheet_errors
 from app.cutoff_work import MarginsQuestion, margins_bytes, margins_seconds
 from app.engine import OVERSPENDING, Engine
 from app.errors import BusyError, JobFailedError, PriceError, SheetError, SoftmodeError
@@ -91,7 +92,9 @@ def check_ceilings(model: CollectiveModel, seconds: float, most_bytes: int, sett
 
 def check_margins_price(model: CollectiveModel, asked: MarginsQuestion, settings: Settings) -> None:
     """Raise PriceError when the margins of a point cost more than the server allows."""
-    check_ceilings(model, margins_seconds(asked), margins_bytes(model, asked), settings)
+    with told_as_sheet_errors():
+        seconds, most_bytes = margins_seconds(asked), margins_bytes(model, asked)
+    check_ceilings(model, seconds, most_bytes, settings)
 
 
 class PointDesk:

@@ -328,8 +328,8 @@ class Guesses:
 
     def wait(self, client: str) -> float:
         """Return the seconds until this address may guess again."""
-        times = self._times.get(_network(client), ())
-        if len(times) < MOST_GUESSES:
+        times = self._times.get(_network(client))
+        if times is None or len(times) < MOST_GUESSES:
             return 0.0
         return times[0] + GUESS_SECONDS - time.monotonic()
 
