@@ -176,8 +176,6 @@ class Database:
 
     def __init__(self, path: Path, schema: Schema, clean: str = "") -> None:
         self.path = path
-        # what went wrong last, until a write works again
-        self.trouble: str | None = None
         self._dirty = False
         self._writes: Commands = queue.SimpleQueue()
         self._reads: Commands = queue.SimpleQueue()
@@ -199,17 +197,16 @@ class Database:
         self._writer.start()
         self._reader.start()
 
-    def tell(self, work: Work[Any], done: Callable[[], None] = lambda: None) -> None:
-        """Queue a write that nobody waits for, with what is called once it is on disk.
+    def tell(self, work: Work[Any], told: Callable[[Exception | None], None] = lambda _: None) -> None:
+        """Queue a write that nobody waits for; `told` is called with what went wrong, None when nothing did.
 
-        When it fails, the log says so.
+        When it fails, the log says so too.
         """
 
         def answer(_value: Any, error: Exception | None) -> None:
             if error is not None:
                 logger.error("not stored: %s", error)
-            else:
-                done()
+            told(error)
 
         self._writes.put((work, answer))
 
@@ -260,18 +257,16 @@ class Database:
             with contextlib.suppress(sqlite3.Error):
                 connection.execute("ROLLBACK")
             raise
-        self.trouble = None
         log = self.path.with_name(self.path.name + "-wal")
         if log.exists() and log.stat().st_size > LARGEST_WAL:
             _checkpoint(connection, "RESTART")
         return value
 
-    def _run(self, work: Callable[[], Any], answer: Answer) -> None:
+    @staticmethod
+    def _run(work: Callable[[], Any], answer: Answer) -> None:
         try:
             value = work()
         except (sqlite3.Error, StoreError, ValueError) as error:
-            if isinstance(error, sqlite3.DatabaseError) and not isinstance(error, sqlite3.IntegrityError):
-                self.trouble = str(error)
             answer(None, error)
         else:
             answer(value, None)

@@ -80,6 +80,9 @@ class Store:
         self.directory = prepare_directory(directory)
         self.budget = budget
         self.stored = 0
+        self._computations: dict[str, str] = {}
+        # what went wrong with a result last, until one is kept again
+        self._trouble: str | None = None
         self._lost: str | None = None
         self._passing: tempfile.TemporaryDirectory[str] | None = None
         self._lock = take_lock(self.directory / LOCK)
@@ -107,8 +110,8 @@ class Store:
         """Say what is wrong with the store, None when nothing is."""
         if self._lost is not None:
             return f"Results are kept only until the server stops: {self._lost}"
-        if self._database.trouble is not None:
-            return f"New results are not being kept: {self._database.trouble}"
+        if self._trouble is not None:
+            return f"New results are not being kept: {self._trouble}"
         return None
 
     async def load(self, name: str) -> dict[int, StoredChunk]:
@@ -126,6 +129,7 @@ class Store:
             found = await self._database.read(read)
         except StoreError as error:
             logger.error("%s; computing again", error.message)  # noqa: TRY400 - the trace says nothing more
+            self._trouble = error.message
             return {}
         if found:
             self.touch(name)
@@ -145,22 +149,18 @@ class Store:
 
     def begin(self, name: str, computation: str) -> None:
         """Note that a result is being computed: it is not evicted until `end`."""
-
-        def write(connection: sqlite3.Connection) -> None:
-            connection.execute(
-                "INSERT INTO results (id, computation, used, running, solver) VALUES (?, ?, ?, 1, ?) "
-                "ON CONFLICT (id) DO UPDATE SET used = excluded.used, running = 1, solver = excluded.solver",
-                (name, computation, time.time(), versions()["solver"]),
-            )
-
-        self._database.tell(write)
+        self._computations[name] = computation
+        self._database.tell(lambda connection: _enter(connection, name, computation))
 
     def keep(self, name: str, number: int, chunk: StoredChunk) -> None:
         """Keep a finished chunk of a result that was begun."""
+        computation = self._computations.get(name)
 
         def write(connection: sqlite3.Connection) -> None:
             body = zlib.compress(_encode(chunk.rows), COMPRESSION)
             self._make_room(connection, len(body), name)
+            if computation is not None:  # once more: the disk may have been full at the beginning
+                _enter(connection, name, computation)
             done = connection.execute(
                 "INSERT OR IGNORE INTO chunks (id, number, points, body, seconds) VALUES (?, ?, ?, ?, ?)",
                 (name, number, json.dumps(chunk.points), body, chunk.seconds),
@@ -168,10 +168,11 @@ class Store:
             if done.rowcount:
                 connection.execute("UPDATE results SET bytes = bytes + ? WHERE id = ?", (len(body), name))
 
-        self._database.tell(write, self._count)
+        def told(error: Exception | None) -> None:
+            self._trouble = None if error is None else str(error)
+            self.stored += error is None
 
-    def _count(self) -> None:
-        self.stored += 1
+        self._database.tell(write, told)
 
     def _forget(self, name: str, number: int) -> None:
         """Delete a chunk that cannot be read, so that it is kept anew."""
@@ -189,6 +190,7 @@ class Store:
 
     def end(self, name: str, finished_at: str | None) -> None:
         """Note that a result is no longer computed; `finished_at` is None when it is not complete."""
+        self._computations.pop(name, None)
 
         def write(connection: sqlite3.Connection) -> None:
             connection.execute(
@@ -284,6 +286,15 @@ class Store:
                 )
             connection.execute("DELETE FROM results WHERE id = ?", (row[0],))
             used -= row[1]
+
+
+def _enter(connection: sqlite3.Connection, name: str, computation: str) -> None:
+    """Enter a result that is being computed."""
+    connection.execute(
+        "INSERT INTO results (id, computation, used, running, solver) VALUES (?, ?, ?, 1, ?) "
+        "ON CONFLICT (id) DO UPDATE SET used = excluded.used, running = 1, solver = excluded.solver",
+        (name, computation, time.time(), versions()["solver"]),
+    )
 
 
 def _used(connection: sqlite3.Connection) -> int:

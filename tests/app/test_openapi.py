@@ -111,13 +111,22 @@ def test_no_request_brings_the_server_down(poor: RunningServer) -> None:
         checks += [status_code_conformance, content_type_conformance, response_schema_conformance]
         case.validate_response(response, checks=checks)
 
-    each = CASES // (2 * len(operations)) + 1
-    for operation in operations:
-        for mode in (GenerationMode.POSITIVE, GenerationMode.NEGATIVE):
-            run = settings(
-                max_examples=each, deadline=None, database=None, suppress_health_check=list(HealthCheck)
-            )(given(case=operation.as_strategy(generation_mode=mode))(check))
-            run()
+    def takes_something(operation: Any) -> bool:
+        return operation.method == "post" or any(True for _ in operation.query)
+
+    drawn = [
+        (operation, mode)
+        for operation in operations
+        for mode in (GenerationMode.POSITIVE, GenerationMode.NEGATIVE)
+        # nothing can be wrong where nothing is asked
+        if mode is GenerationMode.POSITIVE or takes_something(operation)
+    ]
+    each = CASES // len(drawn) + 1
+    for operation, mode in drawn:
+        run = settings(
+            max_examples=each, deadline=None, database=None, suppress_health_check=list(HealthCheck)
+        )(given(case=operation.as_strategy(generation_mode=mode))(check))
+        run()
     assert statuses.total() >= CASES
     assert statuses[200] > 20
     assert "Traceback" not in poor.log.read_text()
