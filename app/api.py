@@ -20,18 +20,20 @@ from app import (
     limits,
     links,
     map_pages,
+    operating,
     pages,
     point_pages,
     streams,
 )
 from app.cutoff_sheets import CutoffSheet
 from app.engine import Engine
-from app.errors import ConflictError, JobFailedError, NotFoundError, SheetError, SoftmodeError
+from app.errors import ConflictError, JobFailedError, NotFoundError, SheetError, SoftmodeError, StoreError
 from app.faults import on_error
 from app.figures import picture
 from app.jobs import Job
-from app.keys import Key
 from app.map_sheets import MapSheet
+from app.metrics import Metrics, Observed
+from app.openapi import FIRST, PARTIAL
 from app.points import PointDesk
 from app.questions import Question
 from app.replies import accepted as _accepted
@@ -46,9 +48,6 @@ from app.security import Guard
 from app.settings import Settings
 from app.sheets import Sheet
 from app.short_links import StoredLinks
-
-FIRST = Key("first", "real", 0.0, "seconds to wait for the first picture", low=0.0, high=5.0)
-PARTIAL = Key("partial", "choice", "0", "whether an unfinished result will do", choices=("0", "1"))
 
 router = APIRouter()
 
@@ -76,15 +75,19 @@ def create_app(settings: Settings) -> FastAPI:
     app.state.engine = engine
     app.state.points = PointDesk(engine)
     app.state.settings = settings
+    app.state.metrics = Metrics(engine)
     app.include_router(router)
     app.include_router(pages.router)
     app.include_router(point_pages.router)
     app.include_router(cutoff_pages.router)
     app.include_router(map_pages.router)
+    app.include_router(operating.router)
     app.add_exception_handler(SoftmodeError, on_error)
     app.add_exception_handler(HTTPException, on_error)
     app.add_middleware(StoredLinks, engine=engine)
     app.add_middleware(Guard, settings=settings)
+    app.add_middleware(Observed, metrics=app.state.metrics)
+    pages.show_trouble(lambda: engine.store.trouble)
     return app
 
 
@@ -321,7 +324,11 @@ async def server_limits(request: Request) -> Response:
     """Return what this server takes, and the grammar of links."""
     settings: Settings = request.app.state.settings
     data = await asyncio.to_thread(limits.describe, settings, _engine(request).calibrator.found)
-    data["store"] = await _engine(request).store.usage()
+    store = _engine(request).store
+    try:
+        data["store"] = await store.usage()
+    except StoreError as error:
+        data["store"] = {"budget": store.budget} | error.body()
     return _json(data)
 
 
@@ -330,9 +337,12 @@ async def health(request: Request) -> Response:
     """Say that the server works, in which version, and what it has done."""
     engine = _engine(request)
     state = "restarting" if engine.restarting else "ok"
-    return _json(
-        {"status": state, "assets": assets.shelf().digest} | identity.versions() | {"counts": engine.facts()}
-    )
+    trouble = engine.store.trouble
+    kept = {"state": "ok" if trouble is None else "failing", "trouble": trouble}
+    if engine.store.is_passing:
+        kept["state"] = "passing"
+    facts = {"status": state, "store": kept, "assets": assets.shelf().digest}
+    return _json(facts | identity.versions() | {"counts": engine.facts()})
 
 
 @router.get("/assets/{digest}/{name:path}")

@@ -1,12 +1,13 @@
-"""The command line: `softmode`, `softmode compute`, `softmode limits`."""
+"""The command line: `softmode`, `softmode compute`, `softmode store`, `softmode limits`."""
 
 import argparse
 import os
 import sys
 from collections.abc import Sequence
 from pathlib import Path
+from typing import Any
 
-from app import __version__, calibration, exports, kinds, limits, links
+from app import __version__, archive, calibration, exports, kinds, limits, links, logs
 from app.errors import SoftmodeError
 from app.map_sheets import MapSheet
 from app.offline import compute_sheet, measure_machine
@@ -35,8 +36,32 @@ def parser() -> argparse.ArgumentParser:
     )
     compute.add_argument("--workers", type=int, default=processors(), help="computing processes")
     compute.add_argument("--cluster", metavar="ADDRESS", dest="compute_cluster", help=CLUSTER_HELP)
+    _store_commands(commands.add_parser("store", help="list, pin, export or delete stored results"))
     commands.add_parser("limits", help="print what this machine can take")
     return top
+
+
+def _store_commands(store: argparse.ArgumentParser) -> None:
+    # the same option as that of the server; left out here, the one before the command holds
+    place = argparse.ArgumentParser(add_help=False)
+    place.add_argument("--data", type=Path, default=argparse.SUPPRESS, help="directory of the results")
+    actions = store.add_subparsers(dest="action", metavar="action", required=True)
+    actions.add_parser("list", parents=[place], help="show what is stored, with sizes")
+    words = "a link, or the beginning of a name as 'list' shows it"
+    for action, meaning in (
+        ("pin", "keep a result whatever the size of the store"),
+        ("unpin", "let a result go when room is needed"),
+        ("export", "write a stored result to a file"),
+    ):
+        one = actions.add_parser(action, parents=[place], help=meaning)
+        one.add_argument("result", help=words)
+        if action == "export":
+            one.add_argument("--out", type=Path, required=True, help="file to write, ending in .csv or .json")
+    prune = actions.add_parser(
+        "prune", parents=[place], help="delete what another solver computed and nobody pinned"
+    )
+    prune.add_argument("--to", type=int, metavar="MiB", help="also the least recently used beyond this size")
+    prune.add_argument("--dry-run", action="store_true", help="only say what would be deleted")
 
 
 def _server_options(top: argparse.ArgumentParser) -> None:
@@ -92,6 +117,15 @@ def _server_options(top: argparse.ArgumentParser) -> None:
     top.add_argument(
         "--grace", type=float, default=known.grace_seconds, help="seconds beyond the lease (%(default)s)"
     )
+    top.add_argument(
+        "--patience",
+        type=float,
+        default=known.patience_seconds,
+        help="seconds that the head of a request, and its body, may take (%(default)s)",
+    )
+    top.add_argument(
+        "--log", choices=logs.FORMS, default=known.log, help="form of the log on standard error (%(default)s)"
+    )
     top.add_argument("--no-browser", action="store_true", help="do not open a browser")
 
 
@@ -101,6 +135,8 @@ def run(arguments: Sequence[str]) -> int:
     try:
         if chosen.command == "compute":
             return _compute(chosen.link, chosen.out, chosen.workers, chosen.compute_cluster or chosen.cluster)
+        if chosen.command == "store":
+            return _store(chosen)
         if chosen.command == "limits":
             return _limits(chosen.data)
         return _serve(chosen)
@@ -134,20 +170,18 @@ def _serve(chosen: argparse.Namespace) -> int:
         queue_limit=chosen.queue,
         lease_seconds=chosen.lease,
         grace_seconds=chosen.grace,
+        patience_seconds=chosen.patience,
+        log=chosen.log,
     )
     browser = not chosen.no_browser and bool(os.environ.get("DISPLAY") or sys.platform == "darwin")
     return serve(settings, browser=browser)
 
 
 def _compute(link: str, out: Path, workers: int, cluster: str | None) -> int:
-    if out.suffix not in {".csv", ".json", ".npz"}:
-        print(f"softmode: {out} must end in .csv, .json or .npz", file=sys.stderr)
+    if not _writable(out):
         return MISUSED
     if workers < 1:
         print("softmode: --workers must be at least 1", file=sys.stderr)
-        return MISUSED
-    if not out.parent.is_dir():
-        print(f"softmode: there is no directory {out.parent}", file=sys.stderr)
         return MISUSED
     sheet = links.parse_link(link)
     if out.suffix == ".npz" and not isinstance(sheet, MapSheet):
@@ -156,13 +190,51 @@ def _compute(link: str, out: Path, workers: int, cluster: str | None) -> int:
     check_price(kinds.plan_of(sheet), float("inf"), Settings().memory_ceiling)
     result = compute_sheet(sheet, workers, _show_progress, cluster)
     sys.stderr.write("\n")
+    _write(out, result)
+    print(f"{out}: {sheet.total} points, {result['provenance']['seconds']:.2f} s of processor time")
+    return 0
+
+
+def _writable(out: Path) -> bool:
+    """Say whether a result can be written to `out`; tell the user when it cannot."""
+    problem = None
+    if out.suffix not in {".csv", ".json", ".npz"}:
+        problem = f"{out} must end in .csv, .json or (maps) .npz"
+    elif not out.parent.is_dir():
+        problem = f"there is no directory {out.parent}"
+    if problem is not None:
+        print(f"softmode: {problem}", file=sys.stderr)
+    return problem is None
+
+
+def _write(out: Path, result: dict[str, Any]) -> None:
     if out.suffix == ".json":
         out.write_bytes(exports.encode(result))
     elif out.suffix == ".npz":
         out.write_bytes(kinds.npz_of(result))
     else:
         out.write_text(kinds.csv_of(result), encoding="utf-8", newline="")
-    print(f"{out}: {sheet.total} points, {result['provenance']['seconds']:.2f} s of processor time")
+
+
+def _store(chosen: argparse.Namespace) -> int:
+    kept = archive.Archive(chosen.data)
+    if chosen.action == "list":
+        print(archive.table(kept.entries()))
+        return 0
+    if chosen.action == "prune":
+        most = None if chosen.to is None else chosen.to * MEBIBYTE
+        print(archive.table(kept.prune(most, rehearse=chosen.dry_run)))
+        print("nothing deleted yet: this was a dry run" if chosen.dry_run else "deleted")
+        return 0
+    if chosen.action == "export" and not _writable(chosen.out):
+        return MISUSED
+    entry, asked = kept.find(chosen.result)
+    if chosen.action == "export":
+        _write(chosen.out, kept.result(entry, asked))
+        print(f"{chosen.out}: {entry.id[:12]}, computed {entry.finished_at}")
+        return 0
+    kept.pin(entry.id, pinned=chosen.action == "pin")
+    print(f"{entry.id[:12]} is {'pinned' if chosen.action == 'pin' else 'no longer pinned'}")
     return 0
 
 

@@ -36,16 +36,16 @@ def curves(question: CutoffSheet) -> tuple[Curve, ...]:
 def make(question: CutoffSheet) -> Plan:
     """Return the plan of a cutoff question."""
     drawn = curves(question)
-    with _told_as_sheet_errors():
+    with told_as_sheet_errors():
         points = tuple(point_at(question, x, curve.value) for curve in drawn for x in curve.axis)
-    prices = [needs_seconds(point) for point in points]
-    sizes = [needs_bytes(point) for point in points]
+        prices = [needs_seconds(point) for point in points]
+        sizes = [needs_bytes(point) for point in points]
     largest = points[max(range(len(points)), key=sizes.__getitem__)]
     return plan.assembled(drawn, points, prices, peak_bytes=max(sizes), largest=largest.model, work="needs")
 
 
 @contextlib.contextmanager
-def _told_as_sheet_errors() -> Iterator[None]:
+def told_as_sheet_errors() -> Iterator[None]:
     """Turn what the solver refuses to be asked into the error of the sheet's own key."""
     try:
         yield
@@ -138,7 +138,7 @@ def margins_at(question: CutoffSheet, point: int, cutoff: int) -> tuple[Collecti
     """Return the model of a point and what is asked about the cutoffs around `cutoff`; raise SheetError."""
     place = place_of(question, point)
     cutoffs = margin_cutoffs(cutoff)
-    with _told_as_sheet_errors():
+    with told_as_sheet_errors():
         asked = [point_at(question, *place, stated) for stated in cutoffs]
     first = asked[0].main
     levels = None

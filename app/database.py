@@ -11,7 +11,8 @@ import logging
 import queue
 import sqlite3
 import threading
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass
 from pathlib import Path
 from typing import Any, TextIO, TypeVar
 
@@ -92,7 +93,16 @@ def prepare_directory(directory: Path) -> Path:
 
 def take_lock(path: Path) -> TextIO:
     """Return an open file that locks a data directory; raise StartError when another server holds it."""
-    file = path.open("a+")
+    try:
+        file = path.open("a+")
+    except OSError as error:
+        raise StartError(
+            "bad-data-directory",
+            f"nothing can be written to {path.parent}: {error.strerror or error}",
+            "data",
+            str(path.parent),
+            "a directory that can be written to",
+        ) from error
     try:
         fcntl.flock(file, fcntl.LOCK_EX | fcntl.LOCK_NB)
     except OSError:
@@ -108,29 +118,95 @@ def take_lock(path: Path) -> TextIO:
     return file
 
 
-class Database:
-    """One database file and its two threads."""
+@dataclass(frozen=True)
+class Schema:
+    """The tables of a database.
 
-    def __init__(self, path: Path, schema: str, version: int) -> None:
+    Attributes
+    ----------
+    tables : str
+        Statements that make them where there are none.
+    version : int
+        Number of this form of the tables.
+    steps : mapping of int to str
+        What leads from the version that is the key to the next one.
+    """
+
+    tables: str
+    version: int
+    steps: Mapping[int, str]
+
+
+def connect(path: Path) -> sqlite3.Connection:
+    """Return a connection on which transactions are begun and ended by hand."""
+    connection = sqlite3.connect(path, isolation_level=None, timeout=20.0)
+    connection.execute("PRAGMA foreign_keys = ON")
+    connection.execute("PRAGMA synchronous = NORMAL")
+    return connection
+
+
+def bring_up_to_date(connection: sqlite3.Connection, schema: Schema, path: Path) -> None:
+    """Make the tables, or lead those of an older version to this one, in one transaction.
+
+    Raises StartError when a newer version has written them.
+    """
+    found = connection.execute("PRAGMA user_version").fetchone()[0]
+    if found > schema.version:
+        raise StartError(
+            "newer-store",
+            "this data directory was written by a newer version; choose another one with --data",
+            "data",
+            str(path),
+        )
+    if found == schema.version:
+        return
+    made = connection.execute("SELECT count(*) FROM sqlite_master").fetchone()[0]
+    steps = [schema.steps[version] for version in range(found, schema.version)] if found and made else []
+    steps = steps or [schema.tables]
+    connection.executescript(
+        f"BEGIN IMMEDIATE;\n{''.join(steps)}\nPRAGMA user_version = {schema.version};\nCOMMIT;"
+    )
+
+
+class Database:
+    """One database file and its two threads.
+
+    `clean` is run once at the start, when nobody else writes.
+    """
+
+    def __init__(self, path: Path, schema: Schema, clean: str = "") -> None:
         self.path = path
         self._dirty = False
         self._writes: Commands = queue.SimpleQueue()
         self._reads: Commands = queue.SimpleQueue()
         try:
-            self._prepare(schema, version)
-        except sqlite3.Error as error:
-            raise StartError("bad-store", f"{path} cannot be opened: {error}", "data", str(path)) from error
+            with contextlib.closing(connect(path)) as connection:
+                connection.execute("PRAGMA journal_mode = WAL")
+                bring_up_to_date(connection, schema, path)
+                connection.executescript(clean)
+            path.chmod(0o600)
+        except (sqlite3.Error, OSError) as error:
+            raise StartError(
+                "bad-store",
+                f"{path} cannot be opened: {error}; move it away to begin a new one",
+                "data",
+                str(path),
+            ) from error
         self._writer = threading.Thread(target=self._write_all, name="store-writer", daemon=True)
         self._reader = threading.Thread(target=self._read_all, name="store-reader", daemon=True)
         self._writer.start()
         self._reader.start()
 
-    def tell(self, work: Work[Any]) -> None:
-        """Queue a write that nobody waits for; when it fails, the log says so."""
+    def tell(self, work: Work[Any], told: Callable[[Exception | None], None] = lambda _: None) -> None:
+        """Queue a write that nobody waits for; `told` is called with what went wrong, None when nothing did.
+
+        When it fails, the log says so too.
+        """
 
         def answer(_value: Any, error: Exception | None) -> None:
             if error is not None:
                 logger.error("not stored: %s", error)
+            told(error)
 
         self._writes.put((work, answer))
 
@@ -149,30 +225,9 @@ class Database:
         self._reads.put(None)
         self._reader.join(5.0)
 
-    def _connect(self) -> sqlite3.Connection:
-        connection = sqlite3.connect(self.path, isolation_level=None, timeout=20.0)
-        connection.execute("PRAGMA foreign_keys = ON")
-        connection.execute("PRAGMA synchronous = NORMAL")
-        return connection
-
-    def _prepare(self, schema: str, version: int) -> None:
-        with contextlib.closing(self._connect()) as connection:
-            connection.execute("PRAGMA journal_mode = WAL")
-            found = connection.execute("PRAGMA user_version").fetchone()[0]
-            if found > version:
-                raise StartError(
-                    "newer-store",
-                    "this data directory was written by a newer version; choose another one with --data",
-                    "data",
-                    str(self.path),
-                )
-            connection.executescript(schema)
-            connection.execute(f"PRAGMA user_version = {version}")
-        self.path.chmod(0o600)
-
     def _write_all(self) -> None:
         """Run the queued writes one by one; fold the log back when there are none."""
-        with contextlib.closing(self._connect()) as connection:
+        with contextlib.closing(connect(self.path)) as connection:
             while True:
                 try:
                     command = self._writes.get(timeout=IDLE_SECONDS if self._dirty else None)
@@ -183,14 +238,14 @@ class Database:
                 if command is None:
                     break
                 work, answer = command
-                _run(lambda: self._in_transaction(connection, work), answer)  # noqa: B023 - run at once
+                self._run(lambda: self._in_transaction(connection, work), answer)  # noqa: B023 - run at once
             _checkpoint(connection, "TRUNCATE")
 
     def _read_all(self) -> None:
-        with contextlib.closing(self._connect()) as connection:
+        with contextlib.closing(connect(self.path)) as connection:
             while (command := self._reads.get()) is not None:
                 work, answer = command
-                _run(lambda: work(connection), answer)  # noqa: B023 - run at once
+                self._run(lambda: work(connection), answer)  # noqa: B023 - run at once
 
     def _in_transaction(self, connection: sqlite3.Connection, work: Work[T]) -> T:
         self._dirty = True
@@ -207,14 +262,14 @@ class Database:
             _checkpoint(connection, "RESTART")
         return value
 
-
-def _run(work: Callable[[], Any], answer: Answer) -> None:
-    try:
-        value = work()
-    except (sqlite3.Error, StoreError, ValueError) as error:
-        answer(None, error)
-    else:
-        answer(value, None)
+    @staticmethod
+    def _run(work: Callable[[], Any], answer: Answer) -> None:
+        try:
+            value = work()
+        except (sqlite3.Error, StoreError, ValueError) as error:
+            answer(None, error)
+        else:
+            answer(value, None)
 
 
 def _checkpoint(connection: sqlite3.Connection, mode: str) -> None:

@@ -29,7 +29,7 @@ from app.jobs import Job
 from app.plan import Chunk
 from app.questions import Question
 from app.settings import Settings
-from app.store import Store, StoredChunk
+from app.store import StoredChunk, open_store
 from app.turns import Turns
 from app.workers import Outcome, Task
 
@@ -45,7 +45,7 @@ class Engine:
 
     def __init__(self, settings: Settings) -> None:
         self.settings = settings
-        self.store = Store(settings.data, settings.store_bytes)
+        self.store = open_store(settings.data, settings.store_bytes)
         self.pool = open_executor(settings.workers, settings.cluster, settings.cluster_patience)
         self.calibrator = Calibrator(self.store.directory, self.pool, settings.cluster)
         self.turns = Turns()
@@ -197,6 +197,7 @@ class Engine:
             "portraits_started",
         )
         return {name: self.counts[name] for name in names} | {
+            "chunks_stored": self.store.stored,
             "jobs_active": sum(job.is_active for job in self.jobs.values()),
             "workers": self.pool.size,
             "workers_ready": self.pool.ready,
@@ -318,7 +319,9 @@ class Engine:
         elif outcome.kind == "stopped" and job.is_active:
             job.waiting.appendleft(chunk)  # cancelled and asked for again before the stop took effect
         elif outcome.kind == "broken":
-            logger.error("computing chunk %d of %s failed:\n%s", chunk.number, job.sheet, outcome.trace)
+            # the numbers asked for, without title and note
+            asked = job.sheet.computation_key()
+            logger.error("computing chunk %d of %s failed:\n%s", chunk.number, asked, outcome.trace)
             self._fail(
                 job,
                 JobFailedError(

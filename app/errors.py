@@ -3,8 +3,8 @@
 SoftmodeError
 ├── SheetError          a link, form or body asks something that cannot be asked (422)
 ├── PriceError          the question is fine but costs more than this server allows (422)
-├── RequestError        the request itself is malformed: body, headers, address (400, 413, 414, 415)
-├── RefusedError        not allowed: key missing, foreign site, foreign host (401, 403, 421)
+├── RequestError        the request itself is malformed: body, headers, address (400, 408, 413, 414, 415)
+├── RefusedError        not allowed: key missing or guessed, foreign site or host (401, 403, 421, 429)
 ├── NotFoundError       no such page, job or stored link (404)
 ├── ConflictError       the job is in a state in which this cannot be done (409)
 ├── BusyError           the queue is full or the server is restarting (503, Retry-After)

@@ -65,11 +65,13 @@ def error_response(request: Request, error: SoftmodeError) -> Response:
         answer = JSONResponse(body, error.status)
     if error.retry_after is not None:
         answer.headers["Retry-After"] = str(error.retry_after)
+    if error.status == 408:
+        answer.headers["Connection"] = "close"
     return answer
 
 
 def _title(status: int) -> str:
-    if status in {401, 403, 421}:
+    if status in {401, 403, 421, 429}:
         return "Not allowed"
     if status == 404:
         return "Nothing here"

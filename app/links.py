@@ -138,6 +138,15 @@ def _written(values: Mapping[str, Any], known: Mapping[str, Key]) -> str:
     return "&".join(f"{name}={quote(known[name].write(value), safe=_SAFE)}" for name, value in values.items())
 
 
+def addressed(question: Question) -> tuple[str, str]:
+    """Return the page of a question and its canonical query."""
+    if isinstance(question, CutoffSheet):
+        return CUTOFF_PAGE, cutoff_query(question)
+    if isinstance(question, MapSheet):
+        return MAP_PAGE, map_query(question)
+    return PAGE, query_of(question)
+
+
 def link_of(sheet: Sheet) -> str:
     """Return the canonical link of a sheet, however long."""
     return whole(query_of(sheet))
@@ -304,6 +313,7 @@ __all__ = [
     "POINT_PAGE",
     "SWEPT",
     "WAIT",
+    "addressed",
     "check_length",
     "cutoff_from_form",
     "cutoff_from_pairs",

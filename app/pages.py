@@ -3,7 +3,7 @@
 import dataclasses
 import functools
 import re
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from dataclasses import asdict, dataclass
 from pathlib import Path
 from typing import Any
@@ -163,6 +163,15 @@ def range_words(key: Key) -> str:
     return key.allowed
 
 
+def show_trouble(trouble: Callable[[], str | None]) -> None:
+    """Have every page say what `trouble` returns, as long as it returns something."""
+    environment().globals["trouble"] = trouble
+
+
+def _no_trouble() -> None:
+    return None
+
+
 @functools.cache
 def environment() -> Environment:
     """Return the template environment: everything is escaped, an unknown name is an error."""
@@ -174,6 +183,7 @@ def environment() -> Environment:
         lstrip_blocks=True,
     )
     made.globals["swept"] = tuple(SWEPT)
+    made.globals["trouble"] = _no_trouble
     made.filters["mathml"] = Markup  # built by `symbols` alone, from fixed pieces and escaped text
     return made
 

@@ -103,7 +103,9 @@ async def point_convergence(request: Request) -> Response:
     place = links.place_from_pairs(pairs)
     asked = await asyncio.to_thread(convergence_at, place)
     desk: PointDesk = request.app.state.points
-    check_ceilings(asked.model, asked.seconds, asked.most_bytes, desk.engine.settings)
+    engine = desk.engine
+    seconds = engine.calibrator.found.factor(CONVERGENCE) * asked.seconds
+    check_ceilings(asked.model, seconds, asked.most_bytes, engine.settings)
     client = request.client.host if request.client else ""
     found = await desk.compute(((asked,), CONVERGENCE, "ground"), asked.model.spins, client, wait)
     if found is None:

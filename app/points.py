@@ -15,6 +15,7 @@ from typing import Any
 
 from app import identity, plan
 from app.calibration import POINTS, Calibration
+from app.cutoff_plan import told_as_sheet_errors
 from app.cutoff_work import MarginsQuestion, margins_bytes, margins_seconds
 from app.engine import OVERSPENDING, Engine
 from app.errors import BusyError, ClusterError, JobFailedError, PriceError, SheetError, SoftmodeError
@@ -94,8 +95,9 @@ def check_margins_price(
     model: CollectiveModel, asked: MarginsQuestion, settings: Settings, calibration: Calibration
 ) -> None:
     """Raise PriceError when the margins of a point cost more than the server allows."""
-    seconds = calibration.factor("margins") * margins_seconds(asked)
-    check_ceilings(model, seconds, margins_bytes(model, asked), settings)
+    with told_as_sheet_errors():
+        seconds, most_bytes = margins_seconds(asked), margins_bytes(model, asked)
+    check_ceilings(model, calibration.factor("margins") * seconds, most_bytes, settings)
 
 
 class PointDesk:

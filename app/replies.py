@@ -7,11 +7,9 @@ from fastapi import Request
 from starlette.responses import JSONResponse, Response
 
 from app import exports, identity, links
-from app.cutoff_sheets import CutoffSheet
 from app.engine import Engine
 from app.errors import BusyError, ConflictError, RequestError, SheetError
 from app.jobs import Job
-from app.map_sheets import MapSheet
 from app.questions import Question
 
 
@@ -119,12 +117,7 @@ def table_reply(text: str, name: str) -> Response:
 
 async def address_of(request: Request, question: Question) -> dict[str, Any]:
     """Return how a question is addressed: its link and query, short where need be, and its name."""
-    if isinstance(question, CutoffSheet):
-        page, whole = links.CUTOFF_PAGE, links.cutoff_query(question)
-    elif isinstance(question, MapSheet):
-        page, whole = links.MAP_PAGE, links.map_query(question)
-    else:
-        page, whole = links.PAGE, links.query_of(question)
+    page, whole = links.addressed(question)
     query = await engine_of(request).store.shortened(whole)
     return {
         "link": links.whole(query, page),

@@ -5,9 +5,11 @@ import hashlib
 import hmac
 import ipaddress
 import logging
+import math
 import re
 import socket
 import time
+from collections import OrderedDict, deque
 from http.cookies import CookieError, SimpleCookie
 from urllib.parse import parse_qsl, quote
 
@@ -25,7 +27,9 @@ logger = logging.getLogger(__name__)
 
 COOKIE = "softmode"
 SESSION_SECONDS = 30 * 24 * 3600
-FAILED_LOGIN_SECONDS = 0.5
+MOST_GUESSES = 10
+GUESS_SECONDS = 60.0
+MOST_ADDRESSES = 10_000
 LARGEST_HEADERS = 32 * 1024
 SAFE_METHODS = frozenset({"GET", "HEAD", "OPTIONS"})
 OPEN_PATHS = frozenset({"/login", "/health"})
@@ -57,7 +61,7 @@ class Guard:
         self.names = {"localhost", "127.0.0.1", "::1", settings.host.strip("[]").lower()}
         self.names |= {name.lower() for name in settings.allowed_hosts}
         self.reachable = not is_loopback(settings.host)
-        self._failed_logins = asyncio.Lock()
+        self.guesses = Guesses()
         if self.reachable:
             own = socket.gethostname().lower()
             self.names |= {own, f"{own}.local"}
@@ -201,14 +205,28 @@ class Guard:
         )
 
     def _limited(self, request: Request, receive: Receive) -> Receive:
-        """Return a receiver that refuses bodies longer than they said."""
+        """Return a receiver that refuses bodies longer than they said, or long in coming."""
         if request.method in SAFE_METHODS:
             return receive
-        size = 0
+        size, complete = 0, False
+        deadline = asyncio.get_running_loop().time() + self.settings.patience_seconds
 
         async def limited() -> Message:
-            nonlocal size
-            message = await receive()
+            nonlocal size, complete
+            if complete:  # what comes now is the end of the connection
+                return await receive()
+            try:
+                async with asyncio.timeout_at(deadline):
+                    message = await receive()
+            except TimeoutError:
+                raise RequestError(
+                    "request-too-slow",
+                    f"the body was not there within {self.settings.patience_seconds:g} s",
+                    "body",
+                    size,
+                    status=408,
+                ) from None
+            complete = not message.get("more_body", False)
             size += len(message.get("body", b""))
             if size > self.settings.body_bytes:
                 raise self._too_large(size)
@@ -220,8 +238,8 @@ class Guard:
 
     def _is_known(self, request: Request) -> bool:
         scheme, _, word = request.headers.get("authorization", "").partition(" ")
-        if scheme.lower() == "bearer":
-            return self._is_key(word.strip())
+        if scheme.lower() == "bearer" and word.strip():
+            return self._is_right(request, word.strip())
         try:
             cookie = SimpleCookie(request.headers.get("cookie", "")).get(COOKIE)
         except CookieError:
@@ -230,6 +248,25 @@ class Guard:
 
     def _is_key(self, word: str) -> bool:
         return hmac.compare_digest(word.encode(), (self.settings.key or "").encode())
+
+    def _is_right(self, request: Request, word: str) -> bool:
+        """Say whether a word is the key; raise RefusedError when there were too many guesses before."""
+        client = request.client.host if request.client else ""
+        wait = self.guesses.wait(client)
+        if wait > 0.0:
+            raise RefusedError(
+                "too-many-guesses",
+                "too many wrong keys came from your address; wait, then try again",
+                "key",
+                None,
+                f"{MOST_GUESSES} in {GUESS_SECONDS:g} s",
+                status=429,
+                retry_after=math.ceil(wait),
+            )
+        right = self._is_key(word)
+        if not right:
+            self.guesses.note(client)
+        return right
 
     def _is_session(self, value: str) -> bool:
         expires, _, mark = value.partition(".")
@@ -252,9 +289,13 @@ class Guard:
         limited = Request(request.scope, self._limited(request, request.receive))
         fields = dict(parse_qsl((await limited.body()).decode("utf-8", "replace")))
         target = safe_return(fields.get("next", ""))
-        if not self._is_key(fields.get("key", "")):
-            async with self._failed_logins:  # one after another, so that guessing stays slow
-                await asyncio.sleep(FAILED_LOGIN_SECONDS)
+        try:
+            right = self._is_right(request, fields.get("key", ""))
+        except RefusedError as error:
+            page = login_page(target, error.message, error.status)
+            page.headers["Retry-After"] = str(error.retry_after)
+            return page
+        if not right:
             return login_page(target, "This is not the key.", 401)
         expires = str(int(time.time()) + SESSION_SECONDS)
         answer = RedirectResponse(target or "./", 303)
@@ -269,6 +310,36 @@ class Guard:
             samesite="lax",
         )
         return answer
+
+
+class Guesses:
+    """Wrong keys by address, as many as are remembered; time is monotonic."""
+
+    def __init__(self) -> None:
+        self._times: OrderedDict[str, deque[float]] = OrderedDict()
+
+    def note(self, client: str) -> None:
+        """Note a wrong key."""
+        name = _network(client)
+        self._times.setdefault(name, deque(maxlen=MOST_GUESSES)).append(time.monotonic())
+        self._times.move_to_end(name)
+        while len(self._times) > MOST_ADDRESSES:
+            self._times.popitem(last=False)
+
+    def wait(self, client: str) -> float:
+        """Return the seconds until this address may guess again."""
+        times = self._times.get(_network(client))
+        if times is None or len(times) < MOST_GUESSES:
+            return 0.0
+        return times[0] + GUESS_SECONDS - time.monotonic()
+
+
+def _network(client: str) -> str:
+    """Return what one guesser has of addresses: an IPv4 address, or an IPv6 network of 64 bits."""
+    try:
+        return str(ipaddress.IPv6Network(f"{client.partition('%')[0]}/64", strict=False))
+    except ValueError:
+        return client
 
 
 def safe_return(target: str) -> str:

@@ -1,5 +1,7 @@
 """Running the web server: one process, an address printed, a shutdown that tells its streams."""
 
+import contextlib
+import resource
 import socket
 import threading
 import webbrowser
@@ -7,6 +9,7 @@ from types import FrameType
 
 import uvicorn
 
+from app import connections, logs
 from app.api import create_app
 from app.engine import Engine
 from app.errors import StartError
@@ -50,9 +53,18 @@ def listen(host: str, port: int) -> socket.socket:
     return listener
 
 
+def _allow_many_files() -> None:
+    """Take as many open files as this user may have: every connection is one."""
+    _soft, hard = resource.getrlimit(resource.RLIMIT_NOFILE)
+    with contextlib.suppress(OSError, ValueError):
+        resource.setrlimit(resource.RLIMIT_NOFILE, (hard, hard))
+
+
 def serve(settings: Settings, *, browser: bool) -> int:
     """Run the server until it is stopped; return the exit status. Raises StartError."""
     settings.check()
+    logs.set_up(settings.log)
+    _allow_many_files()
     listener = listen(settings.host, settings.port)
     port = listener.getsockname()[1]
     app = create_app(settings)
@@ -60,17 +72,19 @@ def serve(settings: Settings, *, browser: bool) -> int:
     address = f"http://{shown}:{port}{settings.prefix}/"
     config = uvicorn.Config(
         app,
-        log_level="warning",
+        http=connections.protocol(settings.patience_seconds),
+        ws="none",
+        log_config=None,
         access_log=False,
         server_header=False,
         proxy_headers=False,
         lifespan="on",
         h11_max_incomplete_event_size=LONGEST_HEADERS,
         timeout_graceful_shutdown=SHUTDOWN_SECONDS,
-        limit_concurrency=1000,
     )
     print(f"Softmode is at {address}", flush=True)  # noqa: T201 - the one thing the server has to say
-    print(f"Results are kept in {app.state.engine.store.directory}; stop with Ctrl-C", flush=True)  # noqa: T201
+    store = app.state.engine.store
+    print(store.trouble or f"Results are kept in {store.directory}; stop with Ctrl-C", flush=True)  # noqa: T201
     if browser:
         threading.Timer(0.8, webbrowser.open, [address]).start()
     Service(config, app.state.engine).run(sockets=[listener])

@@ -67,6 +67,10 @@ class Settings:
         Pause between heartbeats, and shortest pause between two updates, of an event stream.
     body_bytes, query_characters : int
         Longest request body and query string.
+    patience_seconds : float
+        Longest time that the head of a request, and again its body, may take to arrive.
+    log : str
+        "plain" lines or "json".
     """
 
     host: str = "127.0.0.1"
@@ -90,6 +94,8 @@ class Settings:
     update_seconds: float = 0.25
     body_bytes: int = 64 * 1024
     query_characters: int = 32_000
+    patience_seconds: float = 15.0
+    log: str = "plain"
 
     def check(self) -> None:
         """Raise StartError when these settings are unsafe or cannot work."""
@@ -97,6 +103,10 @@ class Settings:
             raise StartError("bad-workers", "at least one worker is needed", "workers", self.workers, ">= 1")
         if self.cluster is not None:
             check_cluster_address(self.cluster)
+        if not self.patience_seconds > 0.0:
+            raise StartError(
+                "bad-patience", "patience must be positive", "patience", self.patience_seconds, "> 0 seconds"
+            )
         if self.key is not None and len(self.key) < SHORTEST_KEY:
             raise StartError(
                 "short-key", f"the key needs at least {SHORTEST_KEY} characters", "key", None, "longer keys"

@@ -1,5 +1,6 @@
 """The sheet: one validated question, the same whether it came by link, form, body or command line."""
 
+import sys
 from collections.abc import Mapping
 from typing import Any, Self
 
@@ -292,7 +293,8 @@ def most_points(along: str, start: float, stop: float) -> int:
     if along == "spins":
         room = stop - start + 1
     else:
-        room = (stop - start) / (2.0**-49 * max(abs(start), abs(stop)))
+        # below the smallest normal number there is no room
+        room = (stop - start) / max(2.0**-49 * max(abs(start), abs(stop)), sys.float_info.min)
     return int(min(room, KEYS["points"].high))
 
 

@@ -26,8 +26,8 @@ function fill(table, head, rows) {
   const line = element("tr");
   for (const [column, text] of head.entries()) {
     const wordy = column === 0 || typeof rows[0]?.[column] === "object";
-    const cell = element("th", wordy ? "words" : "", text);
-    cell.scope = "col";
+    const cell = element(text ? "th" : "td", wordy ? "words" : "", text);
+    if (text) cell.scope = "col";
     line.append(cell);
   }
   const lines = rows.map(([name, ...cells]) => {

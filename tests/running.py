@@ -19,13 +19,15 @@ START_SECONDS = 60.0
 class RunningServer:
     """A `softmode` process, its address, its log, and a client that talks to it."""
 
-    def __init__(self, data: Path, *options: str, environment: dict[str, str] | None = None) -> None:
+    def __init__(
+        self, data: Path, *options: str, environment: dict[str, str] | None = None, root: Path = ROOT
+    ) -> None:
         self.data = data
         self.log = data.parent / f"{data.name}.log"
         self._log_file = self.log.open("ab")
         self.process = subprocess.Popen(
             [sys.executable, "-m", "app", "--port", "0", "--data", str(data), "--no-browser", *options],
-            cwd=ROOT,
+            cwd=root,
             stdin=subprocess.DEVNULL,
             stdout=subprocess.PIPE,
             stderr=self._log_file,

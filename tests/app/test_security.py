@@ -1,21 +1,26 @@
 """Headers, hosts, foreign sites, the shared key, sizes, prefixes, and one error shape on all routes."""
 
+import ast
 import html
+import json
 import os
 import re
 import socket
 import subprocess
 import sys
+import time
 from pathlib import Path
 from typing import Any
+from urllib.parse import urljoin
 
 import httpx
 import pytest
+from prometheus_client.parser import text_string_to_metric_families
 from starlette.routing import Route
 
 from app.api import router
 from app.assets import PLOTLY, asset_url
-from app.security import HEADERS, safe_return
+from app.security import GUESS_SECONDS, HEADERS, MOST_GUESSES, Guesses, safe_return
 from app.settings import Settings, is_loopback
 from tests.running import ROOT, RunningServer, ServerFactory
 
@@ -230,7 +235,7 @@ def test_works_below_a_prefix_stripped_or_not(start_server: ServerFactory) -> No
     assert server.address.endswith("/lab/softmode")
     root = server.address.removesuffix("/lab/softmode")
     with httpx.Client(
-        base_url=root, trust_env=False, headers={"authorization": f"Bearer {KEY}"} | PAGE
+        base_url=root, trust_env=False, timeout=60.0, headers={"authorization": f"Bearer {KEY}"} | PAGE
     ) as client:
         for prefix in ("/lab/softmode", ""):
             assert client.get(f"{prefix}/sweep?spins=3").status_code == 200
@@ -238,6 +243,23 @@ def test_works_below_a_prefix_stripped_or_not(start_server: ServerFactory) -> No
         assert client.get("/lab/softmode").headers["location"].endswith("/lab/softmode/")
         page = client.get("/lab/softmode/sweep").text
         assert not re.search(r"(?:href|src|action)=\"/", page)
+        # every address on every page leads somewhere, as a browser below the prefix reads it: with the
+        # prefix kept by the proxy, and with it taken away
+        for name in (
+            "sweep?spins=3&points=5",
+            "point?spins=3&at=0.4",
+            "cutoff?spins=3&points=5",
+            "sweep?spins=0",
+        ):
+            page = client.get(f"/lab/softmode/{name}").text
+            found = re.findall(r"(?:href|src|action)=\"([^\"#]+)\"", page)
+            assert any("assets/" in one for one in found)
+            for one in found:
+                whole = urljoin(f"{root}/lab/softmode/{name}", html.unescape(one))
+                assert whole.startswith(f"{root}/lab/softmode/")
+                for asked in (whole, whole.replace("/lab/softmode", "")):
+                    answer = client.get(asked, headers={"accept": "*/*"})
+                    assert answer.status_code == 200, asked
     with httpx.Client(base_url=root, trust_env=False, headers=PAGE) as client:
         sent = client.get("/lab/softmode/sweep?spins=3")
         assert sent.headers["location"] == "login?next=sweep%3Fspins%3D3"
@@ -303,3 +325,104 @@ def test_a_port_in_use_and_a_directory_in_use_are_named(server: RunningServer, t
 )
 def test_loopback(host: str, own: bool) -> None:
     assert is_loopback(host) is own
+
+
+def test_guessing_the_key_is_slowed_down(start_server: ServerFactory) -> None:
+    server = start_server("--workers", "1", "--key", KEY)
+    with httpx.Client(base_url=server.address, trust_env=False, headers=PAGE) as client:
+        entered = client.post("/login", data={"key": KEY})
+        session = {"cookie": f"softmode={client.cookies['softmode']}"}
+        client.cookies.clear()
+        assert entered.status_code == 303
+        for number in range(5):
+            assert client.post("/login", data={"key": f"guess {number}"}).status_code == 401
+            bearer = client.get("/api/limits", headers={"authorization": f"Bearer guess {number}"})
+            assert bearer.status_code == 401
+        wanted = "sweep?spins=3&title=a"
+        late = client.post("/login", data={"key": KEY, "next": wanted})
+        assert late.status_code == 429
+        assert 0 < int(late.headers["retry-after"]) <= 60
+        assert html.escape(wanted) in late.text
+        script = client.get("/api/limits", headers={"authorization": f"Bearer {KEY}"})
+        assert script.status_code == 429
+        assert script.json()["error"]["code"] == "too-many-guesses"
+        assert int(script.headers["retry-after"]) > 0
+        # who was let in before is not locked out
+        assert client.get("/api/limits", headers=session).status_code == 200
+    assert KEY not in server.log.read_text()
+
+
+def test_guesses_are_counted_by_network_and_forgotten_in_time(monkeypatch: pytest.MonkeyPatch) -> None:
+    guesses = Guesses()
+    for number in range(MOST_GUESSES):
+        guesses.note(f"2001:db8::{number:x}")
+    assert guesses.wait("2001:db8::ffff") > 0.0
+    assert guesses.wait("2001:db8:0:1::1") == 0.0
+    assert guesses.wait("192.0.2.1") == 0.0
+    later = time.monotonic() + GUESS_SECONDS + 1.0
+    monkeypatch.setattr(time, "monotonic", lambda: later)
+    assert guesses.wait("2001:db8::1") <= 0.0
+
+
+def test_keys_are_compared_in_constant_time() -> None:
+    """Whoever compares a secret in `security` does it with `hmac.compare_digest`."""
+    tree = ast.parse((ROOT / "app" / "security.py").read_text())
+    compared = [
+        node
+        for node in ast.walk(tree)
+        if isinstance(node, ast.Compare) and "settings.key" in ast.unparse(node)
+    ]
+    assert [ast.unparse(node) for node in compared] == ["self.settings.key is None"]
+    used = [
+        node for node in ast.walk(tree) if isinstance(node, ast.Attribute) and node.attr == "compare_digest"
+    ]
+    assert len(used) == 2
+
+
+def test_the_numbers_for_monitoring(locked: RunningServer) -> None:
+    with httpx.Client(base_url=locked.address, trust_env=False) as client:
+        assert client.get("/metrics").status_code == 401
+        client.headers["authorization"] = f"Bearer {KEY}"
+        assert client.get("/api/sweep?spins=2&points=5&title=secret").status_code == 200
+        locked.wait_until(lambda: locked.counts()["chunks_stored"] > 0)
+        answer = client.get("/metrics")
+    assert answer.headers["content-type"].startswith("text/plain; version=")
+    families = {family.name: family for family in text_string_to_metric_families(answer.text)}
+    samples = {
+        (sample.name, tuple(sorted(sample.labels.items()))): sample.value
+        for family in families.values()
+        for sample in family.samples
+    }
+    route = (("method", "GET"), ("route", "/api/sweep"), ("status", "200"))
+    assert samples["softmode_requests_total", route] == 1
+    assert samples["softmode_request_seconds_count", (("route", "/api/sweep"),)] == 1
+    assert samples["softmode_jobs", (("state", "done"),)] == 1
+    counts = locked.counts()
+    for what in ("computed", "found", "stored"):
+        assert samples["softmode_chunks_total", (("what", what),)] == counts[f"chunks_{what}"]
+    assert samples["softmode_workers", (("state", "ready"),)] == 1
+    assert samples["softmode_workers", (("state", "busy"),)] == 0
+    assert samples["softmode_workers_lost_total", ()] == 0
+    assert samples["softmode_queue_chunks", ()] == 0
+    assert samples["softmode_store_bytes", ()] > 0
+    assert samples["softmode_store_usable", ()] == 1
+    # a Python process with numpy takes more than 20 MB
+    assert samples["softmode_workers_memory_bytes", ()] > 2e7
+    assert samples["process_resident_memory_bytes", ()] > 2e7
+    assert "secret" not in answer.text
+
+
+def test_the_log_as_json_tells_no_secrets(start_server: ServerFactory) -> None:
+    server = start_server("--workers", "1", "--key", KEY, "--log", "json")
+    headers = {"authorization": f"Bearer {KEY}"}
+    server.client.get("/api/sweep?spins=2&points=5&title=my+private+title&note=n", headers=headers)
+    server.client.get("/sweep?spins=0&title=my+private+title", headers=headers)
+    server.client.post("/login", data={"key": "wrong and private", "next": "sweep?title=private"})
+    lines = [json.loads(line) for line in server.log.read_text().splitlines()]
+    assert all({"time", "level", "logger", "message"} <= set(line) for line in lines)
+    asked = [line for line in lines if line.get("route") == "/api/sweep"]
+    assert [(line["method"], line["status"]) for line in asked] == [("GET", 200)]
+    assert asked[0]["seconds"] > 0.0
+    text = server.log.read_text()
+    for secret in (KEY, "private", "title", "spins"):
+        assert secret not in text
