@@ -35,10 +35,10 @@ from app.map_sheets import MapSheet
 from app.points import PointDesk
 from app.questions import Question
 from app.replies import accepted as _accepted
+from app.replies import address_of, finished, table_reply
 from app.replies import body_of as _body
 from app.replies import client_of as _client
 from app.replies import engine_of as _engine
-from app.replies import finished, table_reply
 from app.replies import json_reply as _json
 from app.replies import pairs_of as _pairs
 from app.replies import raise_if_over as _raise_if_over
@@ -128,13 +128,7 @@ async def sweep_python(request: Request) -> Response:
 async def link_of_form(request: Request) -> Response:
     """Return the canonical link for what was typed into a form; a long one is stored under a short name."""
     sheet = links.from_form(await _body(request))
-    return _json(await _address_of(request, sheet))
-
-
-async def _address_of(request: Request, sheet: Sheet) -> dict[str, Any]:
-    """Return how a sheet is addressed: its link and query, short where need be, and its name."""
-    query = await _engine(request).store.shortened(links.query_of(sheet))
-    return {"link": links.whole(query), "query": query, "sheet": sheet.data(), "id": identity.sheet_id(sheet)}
+    return _json(await address_of(request, sheet))
 
 
 # -- jobs ---------------------------------------------------------------------------------------
@@ -160,8 +154,8 @@ async def start_job(request: Request) -> Response:
         raise job.error
     facts = job.snapshot(engine.pool.size)
     facts |= {"lease": lease, "lease_seconds": engine.settings.lease_seconds}
-    if "form" in body and isinstance(sheet, Sheet):
-        facts["address"] = await _address_of(request, sheet)
+    if "form" in body:
+        facts["address"] = await address_of(request, sheet)
     if patience:
         await job.wait_until(lambda one: one.done > 0 or not one.is_active, patience)
         facts |= job.snapshot(engine.pool.size)
@@ -174,7 +168,7 @@ async def start_job(request: Request) -> Response:
 
 
 async def _sheet_asked(request: Request, body: dict[str, Any]) -> Question:
-    """Return the sheet that a body asks for: as a link, as a form, or key by key."""
+    """Return what a body asks for: as a link, as a form, or key by key."""
     if set(body) == {"link"}:
         if not isinstance(body["link"], str):
             raise SheetError("wrong-type", "'link' must be text", "link", body["link"], "a link")

@@ -8,7 +8,7 @@ from typing import Any
 from fastapi import APIRouter, Request
 from starlette.responses import JSONResponse, Response
 
-from app import cutoff_exports, exports, identity, links, scenario
+from app import cutoff_exports, exports, links, scenario
 from app.cutoff_plan import CUTOFF, POINT, margins_at, place_of
 from app.cutoff_sheets import CUTOFF_KEYS, QUANTITIES, CutoffSheet, across_values
 from app.cutoff_summary import quantities_of
@@ -19,7 +19,17 @@ from app.jobs import Job
 from app.keys import KEYS
 from app.pages import COUPLING_AS, Shell, choices_of, query_of, range_words, rendered, shell
 from app.points import PointDesk, check_margins_price
-from app.replies import accepted, body_of, client_of, engine_of, finished, json_reply, pairs_of, table_reply
+from app.replies import (
+    accepted,
+    address_of,
+    body_of,
+    client_of,
+    engine_of,
+    finished,
+    json_reply,
+    pairs_of,
+    table_reply,
+)
 from app.sheets import default_range
 from app.symbols import interval_in_force
 
@@ -75,15 +85,7 @@ async def cutoff_face(request: Request) -> Response:
 async def link_of_cutoff_form(request: Request) -> Response:
     """Return the canonical link for what was typed into the form of the desk; a long one is stored."""
     question = links.cutoff_from_form(await body_of(request))
-    query = await engine_of(request).store.shortened(links.cutoff_query(question))
-    return json_reply(
-        {
-            "link": links.whole(query, links.CUTOFF_PAGE),
-            "query": query,
-            "sheet": question.data(),
-            "id": identity.sheet_id(question),
-        }
-    )
+    return json_reply(await address_of(request, question))
 
 
 @router.get("/api/cutoff")

@@ -27,24 +27,20 @@ def columns_of(question: CutoffSheet, rows: Sequence[Row | None]) -> dict[str, A
     """
     points = [_point(question, row) for row in rows]
     quantities = quantities_of(question)
-
-    def column(*path: str) -> list[Any]:
-        return [_dig(point, path) for point in points]
-
     columns: dict[str, Any] = {
-        key: {quantity: column(key, quantity) for quantity in quantities}
-        for key in ("needed", "status", "error")
+        key: _columns(_inside(points, key), quantities) for key in ("needed", "status", "error")
     }
-    columns |= {"covering": column("covering"), "deciding": column("deciding")}
+    columns |= {key: _inside(points, key) for key in ("covering", "deciding")}
     columns["stated"] = None
     if question["stated"] is not None:
+        told = _inside(points, "stated")
         columns["stated"] = {
             "cutoff": question["stated"],
-            "error": {quantity: column("stated", "error", quantity) for quantity in quantities},
-            "good": {quantity: column("stated", "good", quantity) for quantity in quantities},
-            "enough": column("stated", "enough"),
+            "error": _columns(_inside(told, "error"), quantities),
+            "good": _columns(_inside(told, "good"), quantities),
+            "enough": _inside(told, "enough"),
         }
-    columns["values"] = {name: column("values", name) for name in _value_names(question)}
+    columns["values"] = _columns(_inside(points, "values"), _value_names(question))
     columns["notes"] = [
         {"point": number, "note": row["note"]}
         for number, row in enumerate(rows)
@@ -67,36 +63,32 @@ def _point(question: CutoffSheet, row: Row | None) -> dict[str, Any]:
     if row is None or row["answer"] is None or (question["start"] != "none" and row["start"] is None):
         return {}
     answer, started = row["answer"], row["start"]
-    point: dict[str, Any] = {
-        "needed": dict(answer["needed"]),
-        "status": dict(answer["status"]),
-        "error": dict(answer["error"]),
-        "covering": answer["covering"],
-        "deciding": answer["deciding"],
-        "stated": answer["stated"] and {k: _copied(v) for k, v in answer["stated"].items()},
-        "values": {name: answer.get(name) for name in _value_names(question)},
-    }
-    if started is not None:
-        point["needed"][START], point["status"][START] = started["needed"], started["status"]["needed"]
-        point["values"] |= {name: started[name] for name in ("at_start", "mean_bosons_most")}
-        if started["needed"] is not None and started["needed"] > (answer["covering"] or -1):
-            point |= {"covering": started["needed"], "deciding": START}
-        if point["stated"]:
-            told = started["stated"]
-            point["stated"]["error"][START] = told["weight_most"]
-            point["stated"]["good"][START] = told["enough"]
-            point["stated"]["enough"] = point["stated"]["enough"] and told["enough"]
+    kept = ("needed", "status", "error", "covering", "deciding", "stated")
+    point: dict[str, Any] = {key: answer[key] for key in kept} | {"values": answer}
+    if started is None:
+        return point
+    point["needed"] = answer["needed"] | {START: started["needed"]}
+    point["status"] = answer["status"] | {START: started["status"]["needed"]}
+    point["values"] = answer | started
+    if started["needed"] > answer["covering"]:
+        point |= {"covering": started["needed"], "deciding": START}
+    if answer["stated"] is not None:
+        told, own = started["stated"], answer["stated"]
+        point["stated"] = {
+            "error": own["error"] | {START: told["weight_most"]},
+            "good": own["good"] | {START: told["enough"]},
+            "enough": own["enough"] and told["enough"],
+        }
     return point
 
 
-def _copied(value: Any) -> Any:
-    return dict(value) if isinstance(value, Mapping) else value
+def _inside(rows: Sequence[Any], key: str) -> list[Any]:
+    """Return one entry of each row, None where the row or the entry is missing."""
+    return [None if row is None else row.get(key) for row in rows]
 
 
-def _dig(found: Any, path: Sequence[str]) -> Any:
-    for name in path:
-        found = None if found is None else found.get(name)
-    return found
+def _columns(rows: Sequence[Any], names: Sequence[str]) -> dict[str, list[Any]]:
+    return {name: _inside(rows, name) for name in names}
 
 
 def summary_of(
@@ -150,16 +142,27 @@ def _stated(
     if stated is None:
         return None
     judged = {quantity: _judged(question, places, good) for quantity, good in stated["good"].items()}
-    worst = {}
-    for quantity, errors in stated["error"].items():
-        known = [(value, -point) for point, value in enumerate(errors) if value is not None]
-        if known:
-            value, negative = max(known)
-            worst[quantity] = {"error": value, "point": -negative} | dict(
-                zip(("x", "second"), places[-negative], strict=True)
-            )
+    worst = {
+        quantity: _worst(errors, stated["good"][quantity], places)
+        for quantity, errors in stated["error"].items()
+    }
     whole = _judged(question, places, stated["enough"])
     return {"cutoff": stated["cutoff"], **whole, "per_quantity": judged, "worst": worst}
+
+
+def _worst(
+    errors: Sequence[float | None],
+    good: Sequence[bool | None],
+    places: Sequence[tuple[float, float | None]],
+) -> dict[str, Any] | None:
+    """Return the largest error and its point; `error` None where the cutoff does not even hold the levels."""
+    unheld = [p for p, error in enumerate(errors) if error is None and good[p] is False]
+    known = [(error, -p) for p, error in enumerate(errors) if error is not None]
+    if not known and not unheld:
+        return None
+    error, point = (None, unheld[0]) if unheld else (max(known)[0], -max(known)[1])
+    x, second = places[point]
+    return {"error": error, "point": point, "x": x, "second": second}
 
 
 def _judged(

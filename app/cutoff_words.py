@@ -115,7 +115,51 @@ def answer_words(question: CutoffSheet, result: Mapping[str, Any]) -> dict[str, 
         "caution": caution,
         "stated": _stated_words(question, summary["stated"], whole),
         "per_quantity": _quantities(question, summary),
+        "more": [*_heat_words(question, result), *_start_words(question, result)],
     }
+
+
+def _heat_words(question: CutoffSheet, result: Mapping[str, Any]) -> list[str]:
+    """Say what the thermal equilibrium is, and where its order sets in."""
+    deciding = result["summary"]["deciding"]
+    if question["ensemble"] == "lowest" or deciding is None:
+        return []
+    spins = "distinguishable spins" if question["ensemble"] == "distinguishable" else "the collective spin"
+    if question["temperature"] is not None:
+        heat = f"k_B T/ħ = {_energy(question, question['temperature'])}"
+    else:
+        heat = f"the temperature at which the bare mode has the mean number {shown(question['quanta'])}"
+    told = [f"Thermal equilibrium of {spins} at {heat}."]
+    if question["ensemble"] == "distinguishable":
+        critical = result["values"]["critical_temperature"][deciding["point"]]
+        place = place_words(question, deciding["x"], deciding["second"])
+        below = (
+            "no order at any temperature"
+            if critical is None
+            else f"order below {_energy(question, critical)}"
+        )
+        told.append(f"At {place}, in the limit N → ∞: {below}.")
+    return told
+
+
+def _start_words(question: CutoffSheet, result: Mapping[str, Any]) -> list[str]:
+    """Say what the start alone needs, and what the time evolution adds."""
+    peak = result["summary"]["per_quantity"].get(START)
+    if peak is None:
+        return []
+    values, boson = result["values"], boson_name(question)
+    alone = max(value for value in values["at_start"] if value is not None)
+    most = max(value for value in values["mean_bosons_most"] if value is not None)
+    periods = shown(question["start-periods"])
+    alone_words, later_words = levels_words(alone, boson), levels_words(peak["cutoff"], boson)
+    told = f"The start alone needs {alone_words} (closed form, proven); {periods} mode periods after the "
+    told += f"model is switched on, {later_words} (checked). Largest mean number of quanta met: {most:.4g}."
+    return [told]
+
+
+def _energy(question: CutoffSheet, value: float) -> str:
+    unit = energy_unit(question.sheet)
+    return f"{shown(value)}{' ' + unit if unit else ''}"
 
 
 def _quantities(question: CutoffSheet, summary: Mapping[str, Any]) -> list[dict[str, Any]]:
@@ -174,8 +218,8 @@ def _stated_words(
                 "key": quantity,
                 "name": NAMES[quantity].capitalize(),
                 "good": _where(question, part),
-                "worst": stated["worst"].get(quantity, {}).get("error"),
-                "at": _worst_place(question, stated["worst"].get(quantity)),
+                "worst": (stated["worst"][quantity] or {}).get("error"),
+                "at": _worst_place(question, stated["worst"][quantity]),
                 "allowed": allowed_of(question)[quantity],
             }
             for quantity, part in stated["per_quantity"].items()

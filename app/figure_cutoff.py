@@ -5,15 +5,17 @@ from collections.abc import Mapping, Sequence
 from typing import Any
 
 from app import figure_style as style
+from app import links
 from app.cutoff_plan import model_at
 from app.cutoff_sheets import CutoffSheet
 from app.cutoff_summary import quantities_of
-from app.cutoff_words import NAMES, allowed_of, answer_words, question_title, size_words
+from app.cutoff_words import NAMES, allowed_of, answer_words, place_words, question_title, size_words
 from app.figure_joins import Numbers, crossings
 from app.figure_panels import Panel
 from app.figure_point import SEQUENTIAL
 from app.figure_style import Stroke
 from app.figures import stacked
+from app.places import MEMBER, place_of
 from app.plan import axis_values
 from app.symbols import curve_label, energy_unit, symbol, with_unit
 
@@ -22,6 +24,7 @@ COVERING = Stroke("ink", "solid", 1.2)
 STATUS_DASH = {"proven": "solid", "checked": "dash"}
 MAP_HEIGHT = 420
 LEAST_SHARE = -5.0
+MOST_ROWS_TOLD = 24
 
 
 def picture(question: CutoffSheet, result: Mapping[str, Any]) -> dict[str, Any]:
@@ -45,6 +48,8 @@ def picture(question: CutoffSheet, result: Mapping[str, Any]) -> dict[str, Any]:
             "notes",
         )
         kept |= {key: result[key] for key in told}
+    else:
+        kept["rows"] = _rows_of_map(question, result)
     swept = symbol(question.sheet.along, question.sheet.frame)
     return {
         "figure": figure(question, result),
@@ -64,9 +69,33 @@ def picture(question: CutoffSheet, result: Mapping[str, Any]) -> dict[str, Any]:
                 for value in question.curves
             ],
             "ensemble": question["ensemble"],
-            "start": question["start"],
+            "deciding_point": _deciding_link(question, result),
         },
     }
+
+
+def _deciding_link(question: CutoffSheet, result: Mapping[str, Any]) -> str | None:
+    """Return the address of the page of the deciding point; a map's points have no such page."""
+    deciding = result["summary"]["deciding"]
+    if deciding is None or question["across"] is not None:
+        return None
+    place = place_of(question.sheet.changed(at=deciding["x"]), {MEMBER.name: deciding["second"]})
+    return links.whole(links.place_query(place), links.POINT_PAGE).lstrip("/")
+
+
+def _rows_of_map(question: CutoffSheet, result: Mapping[str, Any]) -> list[dict[str, Any]]:
+    """Return for rows of a map, thinned to MOST_ROWS_TOLD, the largest cutoff needed and where."""
+    length, rows = question.sheet.points, list(question.curves)
+    step = -(-len(rows) // MOST_ROWS_TOLD)
+    told = []
+    for row in [*range(0, len(rows) - 1, step), len(rows) - 1]:
+        part = result["covering"][row * length : (row + 1) * length]
+        known = [(value, -column) for column, value in enumerate(part) if value is not None]
+        if known:
+            value, negative = max(known)
+            x, second = result["axis"]["values"][-negative], rows[row]
+            told.append({"place": place_words(question, x, second), "cutoff": value})
+    return told
 
 
 def figure(question: CutoffSheet, result: Mapping[str, Any]) -> dict[str, Any]:
@@ -121,24 +150,39 @@ def _needed_panel(question: CutoffSheet, result: Mapping[str, Any]) -> Panel:
     title = "Largest n needed"
     panel = Panel("needed", title, "n", 330, from_zero=True)
     xs = result["x"]
+    claims: set[str] = set()
     if question["stated"] is not None:
         _shade(panel, question, result)
     for quantity, label, stroke, points in _lines(question):
         if quantity == "covering":
-            kept = [point for point in points if result["covering"][point] is not None]
-            panel.traces.append(
-                style.curve([xs[p] for p in kept], [result["covering"][p] for p in kept], stroke, "y", label)
-            )
+            needed, status = _of_curve(result, points)
             panel.key.append(stroke.key(label))
-            continue
-        needed, status = result["needed"][quantity], result["status"][quantity]
+        else:
+            needed, status = result["needed"][quantity], result["status"][quantity]
         for claim, dash in STATUS_DASH.items():
             drawn = stroke.dashed(dash)
             x, y = _where_claimed(xs, needed, status, claim)
             if x:
                 panel.traces.append(style.curve(x, y, drawn, "y", f"{label}, {claim}"))
-                panel.key.append(drawn.key(f"{label}, {claim}"))
+                if quantity != "covering":
+                    panel.key.append(drawn.key(f"{label}, {claim}"))
+                claims.add(claim)
+    if question.second is not None:
+        panel.key += [
+            COVERING.dashed(dash).key(claim) for claim, dash in STATUS_DASH.items() if claim in claims
+        ]
     return panel
+
+
+def _of_curve(result: Mapping[str, Any], points: range) -> tuple[list[int | None], list[str | None]]:
+    """Return the covering cutoff of one curve's points, None elsewhere, and what is claimed of it."""
+    needed: list[int | None] = [None] * len(result["x"])
+    status: list[str | None] = [None] * len(result["x"])
+    for point in points:
+        needed[point] = result["covering"][point]
+        if result["deciding"][point] is not None:
+            status[point] = result["status"][result["deciding"][point]][point]
+    return needed, status
 
 
 def _where_claimed(
@@ -207,9 +251,9 @@ def _error_panel(question: CutoffSheet, result: Mapping[str, Any]) -> Panel:
             if shares:
                 x.append(xs[point])
                 y.append(max(shares))
+                largest = max(largest, *shares)
         if x:
             panel.traces.append(style.curve(x, y, stroke, "y2", label))
-            largest = max(largest, *y)
     ends: Numbers = [question.sheet.start, question.sheet.stop]
     panel.traces.append(style.curve(ends, [1.0, 1.0], STATED, "y2", "allowed"))
     panel.key.append(STATED.key("allowed"))

@@ -3,6 +3,7 @@
 import functools
 from typing import Any
 
+from app.cutoff_sheets import CUTOFF_KEYS
 from app.keys import GRAMMAR_VERSION, KEYS, SWEPT, Key
 from app.map_sheets import MAP_OWN_KEYS
 from app.places import MEMBER, STATE
@@ -56,6 +57,7 @@ def describe(settings: Settings) -> dict[str, Any]:
             "keys": [_described(key) for key in KEYS.values()],
             "point_keys": [_described(key) for key in (MEMBER, STATE)],
             "map_keys": [_described(key) for key in MAP_OWN_KEYS.values()],
+            "cutoff_keys": [_described(key) for key in CUTOFF_KEYS.values()],
         },
     }
 

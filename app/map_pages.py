@@ -8,7 +8,7 @@ from typing import Any
 from fastapi import APIRouter, Request
 from starlette.responses import JSONResponse, RedirectResponse, Response
 
-from app import exports, identity, kinds, links, second_axis
+from app import exports, kinds, links, second_axis
 from app.errors import SheetError, SoftmodeError
 from app.face import Face, face_of, typed_texts
 from app.jobs import Job
@@ -18,7 +18,7 @@ from app.map_ways import column_of, place_in, row_of
 from app.map_words import map_title, place_words, quantity_choices, shown_sheet
 from app.pages import COUPLING_AS, Shell, choices_of, query_of, range_words, rendered, shell
 from app.plan import axis_values
-from app.replies import accepted, body_of, engine_of, finished, json_reply, pairs_of, table_reply
+from app.replies import accepted, address_of, body_of, engine_of, finished, json_reply, pairs_of, table_reply
 from app.symbols import interval_in_force
 
 router = APIRouter()
@@ -76,16 +76,7 @@ async def map_face(request: Request) -> Response:
 @router.post("/api/map/link")
 async def link_of_map_form(request: Request) -> Response:
     """Return the canonical link for what was typed into the form of a map; a long one is stored."""
-    question = links.map_from_form(await body_of(request))
-    query = await engine_of(request).store.shortened(links.map_query(question))
-    return json_reply(
-        {
-            "link": links.whole(query, links.MAP_PAGE),
-            "query": query,
-            "sheet": question.data(),
-            "id": identity.sheet_id(question),
-        }
-    )
+    return json_reply(await address_of(request, links.map_from_form(await body_of(request))))
 
 
 @router.get("/api/map/cell")

@@ -9,7 +9,7 @@ from dataclasses import dataclass, replace
 from typing import Any, Self
 
 from app.errors import PriceError
-from app.keys import number_text
+from app.keys import MOST_CURVES, number_text
 from app.sheets import Sheet, critical_coupling
 from solver import CollectiveModel, PointQuestion, predicted_bytes, predicted_seconds
 
@@ -184,12 +184,14 @@ def assembled(
     """Return a plan of points that lie curve after curve; `prices` are their predicted seconds."""
     coarse: list[list[int]] = []
     fine: list[list[int]] = []
+    # with many rows the first few chunks are a picture already
+    shortest = FIRST_CHUNK_SECONDS if len(drawn) <= MOST_CURVES else CHUNK_SECONDS
     first = 0
     for one in drawn:
         last = first + len(one.axis) - 1
         picked = sorted({*range(first, last + 1, COARSE_STEP), last})
         others = sorted(set(range(first, last + 1)) - set(picked))
-        coarse += _combed(picked, prices)
+        coarse += _combed(picked, prices, shortest)
         fine += _cut(others, prices)
         first = last + 1
     chunks = tuple(
@@ -206,9 +208,9 @@ def _pieces(points: list[int], prices: list[float], most_seconds: float) -> int:
     return min(pieces, len(points))
 
 
-def _combed(points: list[int], prices: list[float]) -> list[list[int]]:
+def _combed(points: list[int], prices: list[float], most_seconds: float) -> list[list[int]]:
     """Share points out in turn, so that each chunk alone shows the whole curve."""
-    pieces = _pieces(points, prices, FIRST_CHUNK_SECONDS)
+    pieces = _pieces(points, prices, most_seconds)
     return [points[first::pieces] for first in range(pieces)]
 
 

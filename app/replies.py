@@ -6,10 +6,12 @@ from typing import Any
 from fastapi import Request
 from starlette.responses import JSONResponse, Response
 
-from app import exports, links
+from app import exports, identity, links
+from app.cutoff_sheets import CutoffSheet
 from app.engine import Engine
 from app.errors import BusyError, ConflictError, RequestError, SheetError
 from app.jobs import Job
+from app.map_sheets import MapSheet
 from app.questions import Question
 
 
@@ -113,3 +115,20 @@ def table_reply(text: str, name: str) -> Response:
     answer = Response(text, media_type="text/csv")
     answer.headers["Content-Disposition"] = f'attachment; filename="{name}"'
     return answer
+
+
+async def address_of(request: Request, question: Question) -> dict[str, Any]:
+    """Return how a question is addressed: its link and query, short where need be, and its name."""
+    if isinstance(question, MapSheet):
+        page, whole = links.MAP_PAGE, links.map_query(question)
+    elif isinstance(question, CutoffSheet):
+        page, whole = links.CUTOFF_PAGE, links.cutoff_query(question)
+    else:
+        page, whole = links.PAGE, links.query_of(question)
+    query = await engine_of(request).store.shortened(whole)
+    return {
+        "link": links.whole(query, page),
+        "query": query,
+        "sheet": question.data(),
+        "id": identity.sheet_id(question),
+    }

@@ -19,20 +19,11 @@ from solver.converged import Converged, converge
 from solver.errors import QuestionError
 from solver.forecast import first_cutoff, forecast
 from solver.model import CollectiveModel
-from solver.needs import (
-    COMMON,
-    MOST_LEVELS,
-    CutoffQuestion,
-    answer_cutoff,
-    error_of,
-    levels_bound,
-    solving_accuracy,
-    tail_above,
-    truncations_of,
-)
+from solver.needs import MOST_LEVELS, CutoffQuestion, answer_cutoff, solving_accuracy, truncations_of
 from solver.shifted_truncation import ShiftedTruncations
-from solver.truncated import largest_affordable
-from solver.wanted import Wanted
+from solver.truncated import FockTruncations, Truncations, error_of, largest_affordable
+from solver.truncation_bounds import levels_bound, tail_above
+from solver.wanted import COMMON, Wanted
 
 Array = NDArray[np.float64]
 ConvergenceBasis = Literal["fock", "shifted"]
@@ -143,7 +134,7 @@ def convergence(question: ConvergenceQuestion) -> Convergence:
         note = f"cutoffs above {most} left out: a truncated solve would be too large"
         if not cutoffs:
             raise QuestionError("cutoffs", question.cutoffs, f"at least one up to {most}")
-    truncations = shifted or truncations_of(exact, wanted, cutoffs[-1])
+    truncations: Truncations = shifted or truncations_of(exact, wanted, cutoffs[-1])
     found = [truncations.at(cutoff, gap=True, levels=True) for cutoff in cutoffs]
     tails = [
         shifted.tail_above(cutoff) if shifted is not None else tail_above(exact, cutoff) for cutoff in cutoffs
@@ -162,7 +153,7 @@ def convergence(question: ConvergenceQuestion) -> Convergence:
         truth=truth,
         value=value,
         error=error,
-        bound=_bounds(exact, cutoffs) if shifted is None else dict.fromkeys(ERRORS),
+        bound=_bounds(exact, truncations, cutoffs),
         tail=tails,
         plateaus=tuple(_plateaus(cutoffs, value, truth, wanted, model.mode)),
         note=note,
@@ -186,24 +177,27 @@ def _sensible(question: ConvergenceQuestion, shifted: ShiftedTruncations | None)
     return tuple(sorted({round(most * at / (MOST_CUTOFFS - 1)) for at in range(MOST_CUTOFFS)}))
 
 
-def _bounds(exact: Converged, cutoffs: Sequence[int]) -> dict[str, list[float | None] | None]:
-    """Errors told from the cut states alone, one per cutoff."""
-    levels = [_plain(levels_bound(exact, cutoff)) for cutoff in cutoffs]
-    sector = exact.sectors[exact.ground]
-    mode = exact.model.mode
-    gap: list[float | None] = []
-    for cutoff in cutoffs:
-        if exact.blocks is not None or len(sector.energies) < 2:
-            gap.append(None)
-        else:
-            first, second = sector.cut(2).errors(cutoff)
-            gap.append(abs(float(second - first)) / mode if math.isfinite(second) else None)
-    return {
-        "energies": levels,
-        "gap": gap if any(value is not None for value in gap) else None,
-        "boson_number": None,
-        "order_parameter": None,
-    }
+def _bounds(
+    exact: Converged, truncations: Truncations, cutoffs: Sequence[int]
+) -> dict[str, list[float | None] | None]:
+    """Errors told from the converged states alone, one per cutoff (number basis only)."""
+    out: dict[str, list[float | None] | None] = dict.fromkeys(ERRORS)
+    if isinstance(truncations, ShiftedTruncations):
+        return out
+    out["energies"] = [_plain(levels_bound(exact, cutoff)) for cutoff in cutoffs]
+    if not isinstance(truncations, FockTruncations):
+        return out
+    ground = exact.sectors[exact.ground]
+    if len(ground.energies) > 1:
+        pair = ground.cut(2)
+        lifted = [pair.errors(cutoff) for cutoff in cutoffs]
+        out["gap"] = [
+            abs(float(second - first)) / exact.model.mode if math.isfinite(second) else None
+            for first, second in lifted
+        ]
+    for name, errors in truncations.estimates(cutoffs[-1] + 1).items():
+        out[name] = [abs(float(errors[cutoff])) for cutoff in cutoffs]
+    return out
 
 
 def _plateaus(

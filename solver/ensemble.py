@@ -24,13 +24,19 @@ from solver.eigen import lowest_of_band
 from solver.errors import QuestionError
 from solver.floor import Floors
 from solver.fock_basis import FockBlock
-from solver.gibbs import SectorTrace, bare_mode_trace, block_seconds, sector_trace, series_degree
+from solver.gibbs import (
+    SectorTrace,
+    bare_mode_trace,
+    block_seconds,
+    sector_trace,
+)
 from solver.model import CollectiveModel
 from solver.spin import projections, raising_elements
 
 Array = NDArray[np.float64]
 
 LARGEST_BLOCK = 12_000
+LARGEST_BAND = 30_000_000
 _MOST_GROWTH = 30
 _EPS = float(np.finfo(np.float64).eps)
 
@@ -151,12 +157,19 @@ class Ensemble:
         """Ceilings for the levels; where it is cold, from ground energies actually computed."""
         if self._settled:
             return
-        cold = self.beta * self.model.mode > 0.5
-        for plan in self.kept():
-            if cold and plan.model is not None:
-                floor, lowest = Floors(plan.model).ground, _ground_energy(plan.model, plan.cutoff)
-                plan.log_partition -= self.beta * max(0.0, lowest - floor)
-        self._total = float(logsumexp([plan.log_weight for plan in self.kept()]))
+        waiting = self.kept() if self.beta * self.model.mode > 0.5 else []
+        corrected: set[int] = set()
+        while waiting:
+            for plan in waiting:
+                corrected.add(plan.sector)
+                if plan.model is not None:
+                    floor, lowest = Floors(plan.model).ground, _ground_energy(plan.model, plan.cutoff)
+                    plan.log_partition -= self.beta * max(0.0, lowest - floor)
+            self._total = float(
+                logsumexp([plan.log_weight for plan in self.sectors if plan.sector in corrected])
+            )
+            # a lower total lets further sectors matter
+            waiting = [plan for plan in self.kept() if plan.sector not in corrected]
         room = -math.log(self.small) + 10.0
         for plan in self.sectors:
             plan.ceiling = (plan.log_copies - self._total + room) / self.beta
@@ -184,12 +197,14 @@ class Ensemble:
     def _trace(self, plan: SectorPlan, cutoff: int, raised: float) -> SectorTrace:
         if plan.model is None:
             return bare_mode_trace(self.model.mode, self.beta, cutoff)
-        size = (cutoff + 1) * (plan.sector + 1) // (2 if plan.model.conserves_parity else 1)
-        if size > LARGEST_BLOCK and self.beta * self.model.mode < 1.0:
+        blocks = 2 if plan.model.conserves_parity else 1
+        size = (cutoff + 1) * (plan.sector + 1) // blocks
+        hot = self.beta * self.model.mode < 1.0
+        if (hot and size > LARGEST_BLOCK) or size * (plan.sector + 1) // blocks > LARGEST_BAND:
             raise QuestionError(
-                "temperature",
-                1.0 / self.beta,
-                f"one that needs at most {LARGEST_BLOCK} states per symmetry block (this one: {size})",
+                "temperature" if hot else "spins",
+                1.0 / self.beta if hot else self.model.spins,
+                f"fewer states per symmetry block than these {size}: fewer spins, less coupling or colder",
             )
         return sector_trace(plan.model, self.beta, cutoff, plan.ceiling + raised)
 
@@ -289,33 +304,15 @@ class Ensemble:
     def seconds(self, cutoff_factor: float = 1.0) -> float:
         """Predicted time of one pass over all sectors, cutoffs times cutoff_factor."""
         total = 0.0
-        small = self.small
         for plan in self.kept():
             own = plan.model
             if own is None:
                 continue
             blocks = 2 if own.conserves_parity else 1
+            room = (-math.log(self.small) + 10.0 - (self._total - plan.log_weight)) / self.beta
             cutoff = max(2.0, cutoff_factor * plan.cutoff)
-            dimension = (cutoff + 1.0) * (plan.sector + 1.0) / blocks
-            width = (plan.sector + 1.0) / blocks + 1.0
-            reach = (abs(own.rotating) + abs(own.counter)) * math.sqrt(cutoff * own.spins)
-            span = own.mode * cutoff + (abs(own.splitting) + abs(own.bias)) * own.spins + 1.5 * reach
-            cold = self.beta * own.mode > 8.0
-            degree = 0 if cold else series_degree(span, self.beta)
-            room = (-math.log(small) + 10.0 - (self._total - plan.log_weight)) / self.beta
-            count = _levels_within(own, room) / blocks
-            total += blocks * (block_seconds(int(dimension), int(width), degree, 5.0, count) + 8e-4)
+            total += blocks * (block_seconds(own, cutoff, self.beta, room) + 6e-4)
         return total
-
-
-def _levels_within(model: CollectiveModel, room: float) -> float:
-    """About how many levels lie within `room` of the ground state: one oscillator and the spin."""
-    room = max(room, 0.0)
-    field = max(
-        math.hypot(model.splitting, model.bias), model.total_coupling**2 / model.mode, 1e-6 * model.mode
-    )
-    ladders = min(model.spins + 1.0, 1.0 + room / field)
-    return 1.0 + ladders * (1.0 + 0.5 * room / model.mode)
 
 
 def _spin_gibbs(model: CollectiveModel, beta: float) -> tuple[Array, Array, Array]:
@@ -346,9 +343,9 @@ def _reach(squares: Array, chances: Array, quantum: float, small: float) -> int:
     room = 1.0 - thermal * grown
     usable = room > 0.0
     rates, grown, room = rates[usable], grown[usable], room[usable]
-    busy = chances > small
+    busy = chances >= min(small, float(chances.max()))
     logs = squares[busy, None] * grown / room - np.log(room) + np.log(chances[busy, None] / small)
-    return max(2, math.ceil(float(np.min(logs / rates, axis=1).max())) - 1)
+    return max(2, math.ceil(max(0.0, float(np.min(logs / rates, axis=1).max()))) - 1)
 
 
 def _ground_energy(model: CollectiveModel, cutoff: int) -> float:

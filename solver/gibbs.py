@@ -17,7 +17,8 @@ from typing import Literal
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.sparse import csr_array, dia_array
+from scipy.linalg.blas import daxpy
+from scipy.sparse import csr_array, dia_array, eye_array
 from scipy.special import ive, logsumexp
 
 from solver.eigen import count_below_zero, dense_from_band, lowest_of_band
@@ -32,11 +33,11 @@ Route = Literal["dense", "lowest", "series"]
 _COLDEST_SERIES = 8.0
 _SMALL = 120
 _SERIES_END = 1e-17
-_COLUMNS = 384
+_COLUMNS = 192
 # seconds per elementary operation, as measured on the development machine
-_DENSE_COST = 1.1e-9
-_SERIES_COST = 1.3e-9
-_LOWEST_COST = 1.0e-9
+_DENSE_COST = 6e-10
+_SERIES_COST = 2e-10
+_LOWEST_COST = 1.1e-9
 
 
 @dataclass(frozen=True, slots=True)
@@ -144,14 +145,28 @@ def _block_diagonals(block: FockBlock, beta: float, ceiling: float) -> tuple[flo
     if block.dimension <= _SMALL:
         return _from_all(block, beta)
     dense = _DENSE_COST * block.dimension**3
-    series = math.inf if cold else _SERIES_COST * _series_operations(block, beta)
-    count = count_below_zero(_lowered(block.band, ceiling - block.shift), width)
-    lowest = lowest_seconds(block.dimension, width, count)
-    if lowest < min(dense, series) and count + 3 < block.dimension // 3:
-        found = _from_lowest(block, beta, ceiling, count)
-        if found is not None:
-            return found
+    series = math.inf if cold else _SERIES_COST * series_operations(block.model, block.cutoff, beta)
+    blocks = 2 if block.parity else 1
+    likely = int(levels_within(block.model, ceiling - block.shift) / blocks)
+    # counting costs too: only where the levels may be few
+    if lowest_seconds(block.dimension, width, likely // 2) < min(dense, series):
+        count = count_below_zero(_lowered(block.band, ceiling - block.shift), width)
+        few = count + 3 < block.dimension // 3
+        if few and lowest_seconds(block.dimension, width, count) < min(dense, series):
+            found = _from_lowest(block, beta, ceiling, count)
+            if found is not None:
+                return found
     return _from_all(block, beta) if dense < series else _from_series(block, beta)
+
+
+def levels_within(model: CollectiveModel, room: float) -> float:
+    """About how many levels lie within `room` of the ground state: one oscillator and the spin."""
+    room = max(room, 0.0)
+    field = max(
+        math.hypot(model.splitting, model.bias), model.total_coupling**2 / model.mode, 1e-6 * model.mode
+    )
+    ladders = min(model.spins + 1.0, 1.0 + room / field)
+    return 1.0 + ladders * (1.0 + 0.5 * room / model.mode)
 
 
 def lowest_seconds(dimension: int, width: int, count: int) -> float:
@@ -160,17 +175,18 @@ def lowest_seconds(dimension: int, width: int, count: int) -> float:
     return _LOWEST_COST * dimension * steps * (6.0 * width + 2.0 * steps) + 2e-4
 
 
-def block_seconds(dimension: int, width: int, degree: float, nonzeros: float, count: float) -> float:
-    """Predicted time of the cheapest route for one block. degree <= 0: the series is of no use."""
-    if dimension <= 0:
-        return 0.0
-    times = [_DENSE_COST * float(dimension) ** 3 + 3e-4]
+def block_seconds(model: CollectiveModel, cutoff: float, beta: float, room: float) -> float:
+    """Predicted time for one symmetry block; room: what lies between ground state and ceiling."""
+    blocks = 2 if model.conserves_parity else 1
+    dimension = (cutoff + 1.0) * (model.spins + 1.0) / blocks
+    width = (model.spins + 1.0) / blocks + 1.0
+    times = [_DENSE_COST * dimension**3 + 3e-4]
     if dimension > _SMALL:
-        if degree > 0.0:
-            reach = min(1.0, 2.0 * degree * width / dimension)
-            times.append(_SERIES_COST * degree * (nonzeros + 4.0) * float(dimension) ** 2 * reach)
+        if beta * model.mode <= _COLDEST_SERIES:
+            times.append(_SERIES_COST * series_operations(model, cutoff, beta) + 2e-3)
+        count = 2.0 * levels_within(model, room) / blocks
         if count < dimension / 3.0:
-            times.append(lowest_seconds(dimension, width, int(count)))
+            times.append(lowest_seconds(int(dimension), int(width), int(count)))
     return min(times)
 
 
@@ -191,13 +207,15 @@ def series_degree(width: float, beta: float) -> int:
     return int(math.sqrt(2.0 * strength * 40.0) + 14.0 + 12.0 / (1.0 + strength))
 
 
-def _series_operations(block: FockBlock, beta: float) -> float:
-    model = block.model
-    reach = (abs(model.rotating) + abs(model.counter)) * math.sqrt(block.cutoff * model.spins)
-    span = model.mode * block.cutoff + (abs(model.splitting) + abs(model.bias)) * model.spins + 1.5 * reach
+def series_operations(model: CollectiveModel, cutoff: float, beta: float) -> float:
+    """Elementary operations of the series for one symmetry block."""
+    blocks = 2 if model.conserves_parity else 1
+    dimension = (cutoff + 1.0) * (model.spins + 1.0) / blocks
+    reach = (abs(model.rotating) + abs(model.counter)) * math.sqrt(cutoff * model.spins)
+    span = model.mode * cutoff + (abs(model.splitting) + abs(model.bias)) * model.spins + 1.5 * reach
     degree = series_degree(span, beta)
-    rows = min(block.dimension, 2 * degree * block.half_width)
-    return degree * 9.0 * block.dimension * rows
+    rows = min(dimension, 2.0 * degree * (model.spins + 1.0) / blocks)
+    return degree * 9.0 * dimension * rows
 
 
 def _weighted(block: FockBlock, weights: Array, vectors: Array) -> tuple[Array, Array]:
@@ -261,32 +279,32 @@ def _from_series(block: FockBlock, beta: float) -> tuple[float, Array, Array, bo
     terms = terms[: int(np.flatnonzero(np.abs(terms) > _SERIES_END)[-1]) + 1]
     size, stride, quanta = block.dimension, _stride(block), block.quanta
     diagonal, beside = np.zeros(size), np.zeros(size)
-    scaled = csr_array(matrix * (2.0 / upper))
+    # twice the variable of the polynomials, -1 taken in: one product per term of the recurrence
+    doubled = csr_array(matrix * (4.0 / upper) - 2.0 * eye_array(size, format="csr"))
     first = 0
     while first < size:
         last = min(size, first + _COLUMNS)
         low = int(np.searchsorted(quanta, quanta[first] - terms.size))
         high = int(np.searchsorted(quanta, quanta[last - 1] + terms.size, side="right"))
-        columns = _series_columns(scaled[low:high, low:high], terms, first - low, last - first)
+        columns = _series_columns(doubled[low:high, low:high], terms, first - low, last - first)
         diagonal[low:high] += np.einsum("ik,ik->i", columns, columns)
         beside[low : high - stride] += np.einsum("ik,ik->i", columns[:-stride], columns[stride:])
         first = last
     return -beta * block.shift, diagonal, beside, True
 
 
-def _series_columns(scaled: csr_array, terms: Array, first: int, count: int) -> Array:
-    """Sum of terms_k T_k(x) on unit columns first.. , with x = scaled - 1."""
-    previous = np.zeros((scaled.shape[0], count))
+def _series_columns(doubled: csr_array, terms: Array, first: int, count: int) -> Array:
+    """Sum of terms_k T_k(x) on the unit columns first, first + 1, ...; doubled: the matrix 2 x."""
+    previous = np.zeros((doubled.shape[0], count))
     previous[first + np.arange(count), np.arange(count)] = 1.0
-    current = scaled @ previous - previous
+    current = 0.5 * (doubled @ previous)
     total: Array = terms[0] * previous
+    flat = total.reshape(-1)
     if terms.size > 1:
-        total += terms[1] * current
+        flat = daxpy(current.reshape(-1), flat, a=terms[1])
     for term in terms[2:]:
-        following = scaled @ current
-        following -= current
-        following *= 2.0
+        following = doubled @ current
         following -= previous
         previous, current = current, following
-        total += term * current
-    return total
+        flat = daxpy(current.reshape(-1), flat, a=term)
+    return flat.reshape(total.shape)

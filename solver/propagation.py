@@ -12,7 +12,7 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.sparse import csr_array
+from scipy.sparse import csr_array, eye_array
 
 from solver.floor import Floors
 from solver.fock_basis import FockBlock
@@ -28,9 +28,9 @@ _FLUSH_ABOVE = 1e150
 # weights below this need double precision
 SINGLE_DOWN_TO = 1e-7
 # seconds per elementary operation, as measured on the development machine
-_STEP_COST = 2.2e-9
-_SUM_COST = 1.1e-10
-_CALL_COST = 3e-5
+_STEP_COST = 1e-9
+_SUM_COST = 4e-11
+_CALL_COST = 2e-5
 
 
 @dataclass(frozen=True, slots=True)
@@ -67,6 +67,8 @@ def bessel_table(arguments: Array, orders: int) -> Array:
     out /= total[:, None]
     out[flat] = 0.0
     out[flat, 0] = 1.0
+    if orders > 1:
+        out[flat, 1] = 0.5 * arguments[flat]
     return out
 
 
@@ -93,19 +95,22 @@ def evolve(
     shift = Floors(model).ground
     layers = np.zeros((times.size, cutoff + 1))
     escaped = np.zeros((starts.shape[0], times.size))
-    for parity in (1, -1) if model.conserves_parity else (0,):
-        block = FockBlock(model, parity, cutoff, shift)
+    parities = (1, -1) if model.conserves_parity else (0,)
+    blocks = [FockBlock(model, parity, cutoff, shift) for parity in parities]
+    matrices = [sparse_block(block) for block in blocks]
+    upper = max(float(abs(matrix).sum(axis=1).max()) for matrix in matrices) or 1.0
+    table = _terms(0.5 * upper * times, single=single)
+    for block, matrix in zip(blocks, matrices, strict=True):
         columns = block.flatten(starts)
         busy = np.flatnonzero(np.any(columns != 0.0, axis=1))
         if not busy.size:
             continue
-        matrix = sparse_block(block)
+        doubled = matrix * (4.0 / upper) - 2.0 * eye_array(block.dimension, format="csr")
+        doubled = csr_array(doubled.astype(table.dtype))
         at_once = max(1, _LARGEST_WORK // (2 * times.size * block.dimension))
         for first in range(0, busy.size, at_once):
             part = busy[first : first + at_once]
-            weights, lost = _evolve_block(
-                block, matrix, columns[part].T.copy(), chances[part], times, single=single
-            )
+            weights, lost = _evolve_block(block, doubled, columns[part].T.copy(), chances[part], table)
             layers += weights
             # both parities of one start leave through different states
             escaped[part] = np.hypot(escaped[part], lost)
@@ -114,17 +119,16 @@ def evolve(
 
 
 def _evolve_block(
-    block: FockBlock, matrix: csr_array, columns: Array, chances: Array, times: Array, *, single: bool
+    block: FockBlock, doubled: csr_array, columns: Array, chances: Array, table: Array
 ) -> tuple[Array, Array]:
     """Layer weights (times, cutoff+1), and the norm leaving per column and time."""
-    upper = float(abs(matrix).sum(axis=1).max()) or 1.0
     size = max(1, _LARGEST_WORK // (2 * columns.size))
     layers, lost = [], []
-    for first in range(0, times.size, size):
-        part = times[first : first + size]
-        real, imaginary = _amplitudes(matrix, upper, columns, 0.5 * upper * part, single=single)
-        weights = np.zeros((part.size, block.cutoff + 1))
-        leaving = np.zeros((columns.shape[1], part.size))
+    for first in range(0, table.shape[0], size):
+        part = table[first : first + size]
+        real, imaginary = _amplitudes(doubled, columns, part)
+        weights = np.zeros((part.shape[0], block.cutoff + 1))
+        leaving = np.zeros((columns.shape[1], part.shape[0]))
         starts = np.searchsorted(block.quanta, np.arange(block.cutoff + 1))
         edge = block.quanta == block.cutoff
         for component in (real, imaginary):
@@ -146,36 +150,44 @@ def _leaving(block: FockBlock, edge: Array) -> Array:
     return out
 
 
-def _amplitudes(
-    matrix: csr_array, upper: float, columns: Array, arguments: Array, *, single: bool
-) -> tuple[Array, Array]:
-    """Real and imaginary part of the columns at each time, up to a common phase: (times, states, columns)."""
-    kind = np.float32 if single else np.float64
+def _terms(arguments: Array, *, single: bool) -> Array:
+    """Coefficients of the polynomials per time; even ones real, odd ones times -i."""
     count = terms_needed(float(arguments.max()), single=single)
     table = bessel_table(arguments, count)
     table[:, 1:] *= 2.0
     # (-i)^k: 1, -i, -1, i
     table *= np.where(np.arange(count) % 4 < 2, 1.0, -1.0)
-    table = table.astype(kind)
-    scaled = csr_array((matrix * (4.0 / upper)).astype(kind))
-    flat = (arguments.size, columns.size)
+    return np.asarray(table.astype(np.float32 if single else np.float64))
+
+
+def _amplitudes(doubled: csr_array, columns: Array, table: Array) -> tuple[Array, Array]:
+    """Real and imaginary part of the columns at each time, up to a phase: (times, states, columns).
+
+    doubled: twice the variable of the polynomials; table: coefficients (times, terms).
+    """
+    kind = table.dtype
+    negligible = 1e-10 if kind == np.float32 else 1e-17
+    count = int(np.flatnonzero(np.abs(table).max(axis=0) > negligible)[-1]) + 1
+    flat = (table.shape[0], columns.size)
     parts = (np.zeros(flat, dtype=kind), np.zeros(flat, dtype=kind))
     previous: Array = columns.astype(kind)
-    current: Array = 0.5 * (scaled @ previous) - previous
+    current: Array = 0.5 * (doubled @ previous)
     stack = np.empty((_TERMS_AT_ONCE, columns.size), dtype=kind)
     for first in range(0, count, _TERMS_AT_ONCE):
         used = min(_TERMS_AT_ONCE, count - first)
         for row in range(used):
             stack[row] = previous.reshape(-1)
-            # T_(k+1) = 2 x T_k - T_(k-1) with 2 x = scaled - 2
-            following = scaled @ current
-            following -= current
-            following -= current
+            following = doubled @ current
             following -= previous
             previous, current = current, following
         for odd in (0, 1):
-            parts[odd][...] += table[:, first + odd : first + used : 2] @ stack[odd:used:2]
-    shape = (arguments.size, *columns.shape)
+            weights = table[:, first + odd : first + used : 2]
+            # times are ascending: the early ones need no high terms
+            busy = np.abs(weights).max(axis=1, initial=0.0) > negligible
+            begin = int(np.argmax(busy)) if busy.any() else table.shape[0]
+            if begin < table.shape[0]:
+                parts[odd][begin:] += weights[begin:] @ stack[odd:used:2]
+    shape = (table.shape[0], *columns.shape)
     return parts[0].reshape(shape), parts[1].reshape(shape)
 
 

@@ -12,7 +12,7 @@ from solver.converged import DOUBLET, Converged
 from solver.floor import Floors
 from solver.levels import lowest_levels, sector_builder
 from solver.shifted_basis import ShiftedBlock
-from solver.truncated import TruncatedValues
+from solver.truncated import TruncatedValues, error_of
 
 Array = NDArray[np.float64]
 _ACCURACY = 1e-9
@@ -23,7 +23,8 @@ class ShiftedTruncations:
 
     def __init__(self, converged: Converged, tolerance: float, angle: float) -> None:
         model, levels = converged.model, converged.levels
-        self.model, self.levels = model, levels
+        self.converged, self.model = converged, model
+        self._found: dict[int, TruncatedValues] = {}
         spectrum = converged.spectrum
         if spectrum is None or spectrum.basis != "shifted":
             spectrum = lowest_levels(model, levels, tolerance, "shifted", state_accuracy=angle)
@@ -48,6 +49,10 @@ class ShiftedTruncations:
         """Smallest cutoff that leaves no more than `tail` above it."""
         return next(m for m in range(len(self._weights) + 1) if self.tail_above(m) <= tail)
 
+    def errors(self, name: str) -> dict[int, float]:
+        """Signed errors of one quantity at the cutoffs solved so far."""
+        return {cutoff: error_of(self.converged, values, name) for cutoff, values in self._found.items()}
+
     def at(self, cutoff: int, *, gap: bool, levels: bool = False) -> TruncatedValues:
         """What the calculation with displaced n <= cutoff finds (unit of the inputs)."""
         build = sector_builder(self.model, "shifted", cutoff, self.shift)
@@ -71,13 +76,14 @@ class ShiftedTruncations:
         block, vector = ground
         own = energies[block.parity]
         quanta, order = _observables(block, vector)
-        return TruncatedValues(
+        self._found[cutoff] = TruncatedValues(
             energy=float(own[0]),
             gap=float(own[1] - own[0]) if own.size > 1 else None,
             boson_number=quanta,
             order_parameter=order,
             levels=self._error(energies) if levels else None,
         )
+        return self._found[cutoff]
 
     def _clearly_lower(self, energy: float, than: float) -> bool:
         return bool(than - energy > DOUBLET * self.model.mode)

@@ -29,10 +29,12 @@ SMALLEST_TAIL = 1e-12
 LARGEST_STATED = 100_000
 LARGEST_PROPAGATION = 2_000_000
 _MOST_TIMES = 20_000
-_POINTS = 16
+_POINTS = 10
 # squared distance allowed between cut and full evolution, and what may be counted as above, of `tail`
 _ESCAPED = 1e-3
 _DROPPED = 0.02
+# relative error of a peak read from the grid
+_BETWEEN_TIMES = 1e-3
 _GROUP = 16
 _MOST_GROWTH = 25
 
@@ -73,7 +75,8 @@ class StartQuestion:
 class StartAnswer:
     """Cutoffs at the start ("proven") and over the whole evolution ("checked").
 
-    mean_bosons_most: largest <n> met; weight_error: bound on what the propagation's own cutoff adds.
+    mean_bosons_most: largest <n> met; weight_error: error of the weight above `needed`, a bound on what
+    the propagation's own cutoff changes and an estimate for peaks between the times.
     """
 
     at_start: int
@@ -145,27 +148,43 @@ def lowest_spin_state(model: CollectiveModel) -> Array:
 
 @dataclass(frozen=True, slots=True)
 class _Group:
-    """Starts of the mode that are propagated together: amplitudes (starts, n), probabilities, cutoff."""
+    """Starts of the mode that are propagated together: amplitudes (starts, n), probabilities, cutoff.
+
+    allowed: squared distance between cut and full evolution, times probability, that is of no matter.
+    """
 
     amplitudes: Array
     chances: Array
     cutoff: int
+    allowed: float
 
 
-def _drive(model: CollectiveModel) -> float:
-    """Largest rate at which the spins push the amplitude of the mode."""
-    return 0.5 * (abs(model.rotating) + abs(model.counter)) * math.sqrt(model.spins)
+def _turning_point(model: CollectiveModel, quanta: float) -> float:
+    """Largest quanta the energy of the start allows classically, spins against the field.
+
+    w n - (N/2) sqrt(F^2 + 4 g^2 n / N) = w n0 - N F / 2, F the field of the spins, g = |lr| + |lc|.
+    """
+    field = math.hypot(model.splitting, model.bias)
+    push = 4.0 * (abs(model.rotating) + abs(model.counter)) ** 2 / model.spins
+    # with s the square root this is quadratic: w (s^2 - F^2)/push - N s/2 = w n0 - N F/2
+    stiffness = model.mode / push
+    constant = model.mode * quanta - 0.5 * model.spins * field + stiffness * field * field
+    half = 0.25 * model.spins
+    root = (half + math.sqrt(half * half + stiffness * max(constant, 0.0))) / stiffness
+    return max(quanta, (root * root - field * field) / push)
 
 
-def _reach(question: StartQuestion, quanta: int) -> int:
-    """First cutoff for a start with at most `quanta`."""
+def _reach(question: StartQuestion, quanta: int, chance: float, allowed: float) -> int:
+    """First cutoff for starts with at most `quanta` and together the probability `chance`."""
     model = question.model
     if question.periods == 0.0 or model.is_uncoupled:
         return quanta
-    push = _drive(model) / model.mode
-    moved = push * min(2.0 * math.pi * question.periods, 1.6)
-    spread = 0.6 * math.sqrt(-math.log(question.tail)) * min(1.0, 2.0 * math.pi * question.periods * push)
-    reach = math.ceil((math.sqrt(quanta + 0.5) + moved + spread) ** 2) + 2
+    drive = 0.5 * (abs(model.rotating) + abs(model.counter)) * math.sqrt(model.spins) / model.mode
+    pushed = 2.0 * math.pi * question.periods * drive
+    furthest = min(math.sqrt(_turning_point(model, quanta + 0.5)), math.sqrt(quanta + 0.5) + pushed)
+    # the width is as observed on random models; where it is too small the cutoff grows
+    spread = 0.44 * math.sqrt(max(1.0, math.log(100.0 * chance / allowed))) + 0.1
+    reach = math.ceil((furthest + spread * min(1.0, pushed)) ** 2) + 2
     if model.conserves_excitations:
         return min(reach, quanta + model.spins)
     return reach
@@ -174,33 +193,42 @@ def _reach(question: StartQuestion, quanta: int) -> int:
 def _groups(question: StartQuestion) -> tuple[list[_Group], float, float]:
     """Starts in groups of similar n, the probability left out, and the quanta it holds."""
     kind, quanta = question.kind, question.quanta
+    escaped = _ESCAPED * question.tail
     if kind == "fock" or quanta == 0.0:
         amplitudes = np.zeros((1, int(quanta) + 1))
         amplitudes[0, -1] = 1.0
-        return [_Group(amplitudes, np.ones(1), _reach(question, int(quanta)))], 0.0, 0.0
+        return (
+            [_Group(amplitudes, np.ones(1), _reach(question, int(quanta), 1.0, escaped), escaped)],
+            0.0,
+            0.0,
+        )
     if kind == "coherent":
         # cut where the missing weight is a part of what the evolution itself may lose
-        last = start_cutoff(kind, quanta, 0.1 * _ESCAPED * question.tail)
+        last = start_cutoff(kind, quanta, 0.1 * escaped)
         n = np.arange(last + 1.0)
         row = np.exp(0.5 * (n * math.log(quanta) - quanta - gammaln(n + 1.0)))
         typical = start_cutoff(kind, quanta, question.tail)
-        cutoff = max(last, _reach(question, typical))
-        return [_Group(row[None], np.ones(1), cutoff)], 0.0, 0.0
+        cutoff = max(last, _reach(question, typical, question.tail, escaped))
+        return [_Group(row[None], np.ones(1), cutoff, escaped)], 0.0, 0.0
     last = start_cutoff(kind, quanta, _DROPPED * question.tail)
     n = np.arange(last + 1)
     chances = np.exp(-n * math.log1p(1.0 / quanta)) / (1.0 + quanta)
     groups = []
+    count = last // _GROUP + 1
     for first in range(0, last + 1, _GROUP):
         part = n[first : first + _GROUP]
         amplitudes = np.zeros((part.size, int(part[-1]) + 1))
         amplitudes[np.arange(part.size), part] = 1.0
-        groups.append(_Group(amplitudes, chances[part], _reach(question, int(part[-1]))))
+        # the first group holds most of the probability
+        allowed = escaped if count == 1 else 0.5 * escaped / (1.0 if first == 0 else count - 1.0)
+        likely = _reach(question, int(part[-1]), float(chances[part].sum()), allowed)
+        groups.append(_Group(amplitudes, chances[part], likely, allowed))
     dropped = weight_above_start(kind, quanta, last)
     return groups, dropped, dropped * (quanta + last + 1.0)
 
 
 def _times(question: StartQuestion, cutoff: int) -> Array:
-    """Grid with 16 points in a period of the fastest motion of the layer weights."""
+    """Grid with ten points in a period of the fastest motion of the layer weights."""
     model = question.model
     last = 2.0 * math.pi * question.periods / model.mode
     flip = 2.0 * (abs(model.rotating) + abs(model.counter)) * math.sqrt((cutoff + 1.0) / model.spins)
@@ -211,8 +239,8 @@ def _times(question: StartQuestion, cutoff: int) -> Array:
     return np.linspace(0.0, last, max(count, 3)) if last > 0.0 else np.zeros(1)
 
 
-def _propagated(question: StartQuestion, group: _Group, times: Array, allowed: float) -> Evolution:
-    """Evolution of one group with its cutoff grown until less than `allowed` escapes."""
+def _propagated(question: StartQuestion, group: _Group, times: Array) -> Evolution:
+    """Evolution of one group with its cutoff grown until no more escapes than it may."""
     model, spin = question.model, lowest_spin_state(question.model)
     cutoff = max(group.cutoff, group.amplitudes.shape[1] - 1)
     for _ in range(_MOST_GROWTH):
@@ -221,9 +249,9 @@ def _propagated(question: StartQuestion, group: _Group, times: Array, allowed: f
         starts = np.zeros((group.amplitudes.shape[0], cutoff + 1, model.spins + 1))
         starts[:, : group.amplitudes.shape[1]] = group.amplitudes[:, :, None] * spin
         found = evolve(model, starts, group.chances, times, single=question.tail >= SINGLE_DOWN_TO)
-        if found.escaped <= allowed:
+        if found.escaped <= group.allowed:
             return found
-        cutoff += max(4, cutoff // 5)
+        cutoff += max(4, cutoff // 10)
     raise QuestionError("quanta", question.quanta, "fewer quanta, fewer spins or less coupling")
 
 
@@ -235,18 +263,20 @@ def answer_start(question: StartQuestion) -> StartAnswer:
     at_start = start_cutoff(question.kind, question.quanta, question.tail)
     groups, dropped, dropped_quanta = _groups(question)
     times = _times(question, max(group.cutoff for group in groups))
-    allowed = _ESCAPED * question.tail / len(groups)
-    parts = [_propagated(question, group, times, allowed) for group in groups]
+    parts = [_propagated(question, group, times) for group in groups]
     layers = np.zeros((times.size, max(part.layers.shape[1] for part in parts)))
     for part in parts:
         layers[:, : part.layers.shape[1]] += part.layers
     above = np.cumsum(layers[:, ::-1], axis=1)[:, ::-1]
     above = np.append(above[:, 1:], np.zeros((times.size, 1)), axis=1) + dropped
     most = _highest(above)
-    fine = most <= question.tail
-    moved = int(np.argmax(fine)) if fine.any() else most.size - 1
-    quanta = layers @ np.arange(layers.shape[1]) + dropped_quanta
     escaped = sum(part.escaped for part in parts)
+    weight_error = 2.0 * math.sqrt(question.tail * escaped) + escaped + _BETWEEN_TIMES * question.tail
+    fine = most + weight_error <= question.tail
+    moved = int(np.argmax(fine)) if fine.any() else most.size - 1
+    if question.periods == 0.0 or question.model.is_uncoupled:
+        moved, weight_error = at_start, 0.0
+    quanta = layers @ np.arange(layers.shape[1]) + dropped_quanta
     stated = None
     if question.stated is not None:
         weight = float(most[min(question.stated, most.size - 1)])
@@ -262,7 +292,7 @@ def answer_start(question: StartQuestion) -> StartAnswer:
         needed=max(at_start, moved),
         mean_bosons_most=float(_highest(quanta[:, None])[0]),
         stated=stated,
-        weight_error=2.0 * math.sqrt(question.tail * escaped) + escaped,
+        weight_error=weight_error,
         note=_note(question),
     )
 

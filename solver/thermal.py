@@ -210,14 +210,17 @@ class _Search:
 
     def error(self, key: str, cutoff: int) -> float:
         """Error of one quantity in the calculation cut at `cutoff`."""
-        if cutoff >= self.largest:
-            return 0.0 if key != "tail" else float(self.above[-1])
+        return abs(self._signed(key, cutoff))
+
+    def _signed(self, key: str, cutoff: int) -> float:
         if key == "tail":
-            return float(self.above[cutoff])
+            return float(self.above[min(cutoff, self.largest)])
+        if cutoff >= self.largest:
+            return 0.0
         cut = self._truncated(cutoff)
         if key == "boson_number":
-            return abs(cut.quanta - self.exact.quanta)
-        return abs(_order(self.question.model, cut)[0] - _order(self.question.model, self.exact)[0])
+            return cut.quanta - self.exact.quanta
+        return _order(self.question.model, cut)[0] - _order(self.question.model, self.exact)[0]
 
     def needed(self, key: str) -> int:
         """Smallest cutoff from which on the quantity is within what is wanted."""
@@ -231,8 +234,10 @@ class _Search:
         scale = self.largest + 1.0 if key == "boson_number" else 1.0
         if allowed < _ROUNDING * scale:
             self.limited.append(key)
-        curve = self.pressure * (np.arange(self.pressure.size) + 1.0 if key == "boson_number" else 1.0)
-        return last_crossing(lambda cutoff: self.error(key, cutoff), curve, allowed)
+        # the factors are what the errors typically come to
+        quanta = key == "boson_number"
+        curve = self.pressure * (0.4 * (np.arange(self.pressure.size) + 1.0) if quanta else 0.2)
+        return last_crossing(lambda cutoff: self._signed(key, cutoff), curve, allowed, list(self.cut))
 
     def stated(self) -> dict[str, Any] | None:
         """Errors at the cutoff somebody stated, and whether they are within what is wanted."""
@@ -258,31 +263,53 @@ class _Search:
         return "; ".join(notes) or None
 
 
-def last_crossing(error: Callable[[int], float], curve: Array, allowed: float) -> int:
-    """Smallest M with error(M') <= allowed for M' = M and above, as far as probed.
+def last_crossing(error: Callable[[int], float], curve: Array, allowed: float, known: list[int]) -> int:
+    """Smallest M with |error(M')| <= allowed for M' = M and above, as far as probed.
 
-    curve: foreseen errors for M = 0..K, their shape guides the search; error(K) counts as good. The
-    next cutoffs above the one found are probed too, so that a change of sign is not taken for accuracy.
+    error: signed. curve: foreseen errors for M = 0..K, whose shape guides the search; K counts as good.
+    known: cutoffs whose errors cost nothing. Where error and curve do not fall alike from M - 1 to M,
+    the next cutoffs are probed too, so that a change of sign is not taken for accuracy.
     """
     low, high = -1, curve.size - 1
     scale, turn = 1.0, 0
-    while high - low > 1:
-        inside = np.arange(low + 1, high)
-        turn += 1
-        if turn % 4 == 0:
-            guess = (low + high) // 2
-        else:
-            guess = int(inside[min(int(np.searchsorted(-scale * curve[inside], -allowed)), inside.size - 1)])
-        found = error(guess)
+
+    def narrow(guess: int) -> None:
+        nonlocal low, high, scale
+        found = abs(error(guess))
         if found <= allowed:
             high = guess
         else:
             low = guess
         if curve[guess] > 0.0 and found > 0.0:
             scale = found / float(curve[guess])
+
+    for guess in sorted(known, reverse=True):
+        if low < guess < high:
+            narrow(guess)
+    while high - low > 1:
+        turn += 1
+        if turn % 4 == 0:
+            narrow((low + high) // 2)
+            continue
+        inside = np.arange(low + 1, high)
+        guess = int(inside[min(int(np.searchsorted(-scale * curve[inside], -allowed)), inside.size - 1)])
+        narrow(guess)
+    if _falls_evenly(error, curve, high):
+        return high
     probe = high + 1
     while probe <= min(high + _AHEAD, curve.size - 2):
-        if error(probe) > allowed:
+        if abs(error(probe)) > allowed:
             high = probe + 1
         probe += 1
     return high
+
+
+def _falls_evenly(error: Callable[[int], float], curve: Array, cutoff: int) -> bool:
+    """Whether the error keeps its sign from cutoff - 1 to cutoff and shrinks about as foreseen."""
+    if cutoff < 1 or cutoff >= curve.size - 1 or curve[cutoff] <= 0.0:
+        return cutoff >= curve.size - 1
+    before, here = error(cutoff - 1), error(cutoff)
+    if before * here <= 0.0:
+        return False
+    compared = (here / before) / float(curve[cutoff] / curve[cutoff - 1])
+    return 1.0 / 3.0 <= compared <= 3.0

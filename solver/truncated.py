@@ -21,6 +21,7 @@ from solver.converged import DOUBLET, Converged
 from solver.eigen import dense_from_band
 from solver.errors import ConvergenceError
 from solver.fock_basis import FockBlock
+from solver.layers import fock_layers
 from solver.model import CollectiveModel
 from solver.parity_chain import number_block
 from solver.spin import lowered, raised
@@ -31,7 +32,10 @@ Array = NDArray[np.float64]
 LARGEST_BAND = 40_000_000
 _SHIFT = 1e-3
 _DENSE_BELOW = 60
+_DENSE_SHOWN = 160
 _MOST_STEPS = 24
+# relative residual of levels that are shown as numbers: its square is their error
+_SHOWN = 1e-6
 _WIDEST = 48
 
 
@@ -58,11 +62,31 @@ class TruncatedValues:
     levels: float | None = None
 
 
+def error_of(exact: Converged, values: TruncatedValues, name: str) -> float:
+    """Signed error of one quantity of a truncated calculation; levels and gap in units of the mode.
+
+    Infinite where the calculation does not hold enough levels.
+    """
+    if name == "energies":
+        return math.inf if values.levels is None else values.levels / exact.model.mode
+    if name == "gap":
+        if values.gap is None or exact.gap is None:
+            return math.inf
+        return (values.gap - exact.gap) / exact.model.mode
+    if name == "boson_number":
+        return values.boson_number - exact.boson_number
+    return values.order_parameter - exact.order_parameter
+
+
 class Truncations(Protocol):
     """Truncated calculations of one model at any cutoff."""
 
     def at(self, cutoff: int, *, gap: bool, levels: bool = False) -> TruncatedValues:
         """What the calculation with n <= cutoff finds."""
+        ...
+
+    def errors(self, name: str) -> dict[int, float]:
+        """Signed errors of one quantity at the cutoffs solved so far."""
         ...
 
 
@@ -99,14 +123,14 @@ class _Sector:
         size = int(self.layer_start[cutoff + 1])
         guards = 1 if count > 1 else 0
         width = min(max(count + guards, 1), len(self.states), size)
-        if size <= max(_DENSE_BELOW, 3 * (count + 1)):
+        if size <= max(_DENSE_BELOW, 12 * count, _DENSE_SHOWN if noisy else 0):
             values, columns = np.linalg.eigh(dense_from_band(self.band[:, :size]))
             some = min(count, size)
             return values[:some] + self.block.shift, np.ascontiguousarray(columns[:, :some].T)
         start = self.states[:width, :size]
         if noisy or width < count:
             start = _with_noise(start, max(width, count))
-        goal = np.full(count, accuracy.others)
+        goal = np.full(count, min(accuracy.others, _SHOWN) if noisy else accuracy.others)
         goal[0] = accuracy.ground
         values, vectors = _inverse_krylov(self.factor[:, :size], start, goal)
         return values + self.block.shift, vectors
@@ -163,30 +187,74 @@ def _inverse_krylov(factor: Array, start: Array, goal: Array) -> tuple[Array, Ar
 
 
 class FockTruncations:
-    """Truncated calculations of a model solved by parity sectors."""
+    """Truncated calculations of a model solved by parity sectors.
+
+    top: largest cutoff expected; negligible: difference of no consequence between the parities
+    of a closed doublet.
+    """
 
     def __init__(self, converged: Converged, top: int, accuracy: Accuracy, negligible: float) -> None:
         self.converged, self.accuracy, self.top = converged, accuracy, top
-        self.end = max(sector.end for sector in converged.sectors.values())
         self.negligible = negligible
         self._made: dict[int, _Sector] = {}
-        self._known: dict[tuple[int, bool, bool], TruncatedValues] = {}
+        self._known: dict[int, tuple[bool, bool, TruncatedValues]] = {}
 
     def _sector(self, parity: int, cutoff: int) -> _Sector:
         known = self._made.get(parity)
         if known is None or known.top < cutoff:
-            top = max(self.top, cutoff if known is None else cutoff + 4)
-            self._made[parity] = _Sector(self.converged, parity, top)
+            self.top = max(self.top, cutoff if known is None else cutoff + 4)
+            self._made[parity] = _Sector(self.converged, parity, self.top)
         return self._made[parity]
 
     def at(self, cutoff: int, *, gap: bool, levels: bool = False) -> TruncatedValues:
         """What the calculation with n <= cutoff finds."""
-        for key in ((cutoff, gap, levels), (cutoff, True, levels), (cutoff, True, True)):
-            if key in self._known:
-                return self._known[key]
-        found = self._solve(cutoff, gap=gap, levels=levels)
-        self._known[cutoff, gap, levels] = found
+        has_gap, has_levels, found = self._known.get(cutoff, (False, False, None))
+        if found is None or (gap and not has_gap) or (levels and not has_levels):
+            found = self._solve(cutoff, gap=gap, levels=levels)
+            self._known[cutoff] = (gap, levels, found)
         return found
+
+    def errors(self, name: str) -> dict[int, float]:
+        """Signed errors of one quantity at the cutoffs solved so far."""
+        return {
+            cutoff: error_of(self.converged, values, name)
+            for cutoff, (has_gap, _, values) in self._known.items()
+            if has_gap or name != "gap"
+        }
+
+    def estimates(self, top: int) -> dict[str, Array]:
+        """Errors of quanta and order parameter at every cutoff 0..top-1, without a truncated solve.
+
+        By Hellmann and Feynman the error of <O> is the derivative of the error of the ground
+        level with respect to a field on O, and the latter is known for every cutoff from the
+        converged state: its response to such a field is all that has to be solved for.
+        """
+        exact = self.converged
+        sector = self._sector(exact.ground, top)
+        block, psi = sector.block, sector.states[0]
+        grid = block.padded(psi[None])[0]
+        along = _jx(grid, block.steps)
+        fields = {
+            "boson_number": block.quanta * psi,
+            "order_parameter": block.flatten(_jx(along, block.steps)[None])[0],
+        }
+        scale = {
+            "boson_number": 1.0,
+            "order_parameter": 2.0 / (exact.model.spins**2 * max(exact.order_parameter, 1e-300)),
+        }
+        out = {}
+        for name, pulled in fields.items():
+            pushed = pulled - (pulled @ psi) * psi
+            response, _ = dpbtrs(sector.factor, pushed, lower=1)
+            response -= (response @ psi) * psi
+            profile = fock_layers(block, np.array([psi, response]))
+            kept = np.cumsum(profile.overlaps, axis=0)[:top]
+            link = profile.links[:top]
+            least = np.maximum(kept[:, 0, 0], 1e-13)
+            lifted = -link[:, 0, 0] / least
+            moved = (link[:, 0, 1] + link[:, 1, 0] + 2.0 * lifted * kept[:, 0, 1]) / least
+            out[name] = scale[name] * moved
+        return out
 
     def _solve(self, cutoff: int, *, gap: bool, levels: bool) -> TruncatedValues:
         exact = self.converged
@@ -261,5 +329,10 @@ class FockTruncations:
         quanta = float((vector * vector) @ block.quanta[:size])
         grid = np.zeros((cutoff + 1, block.model.spins + 1))
         grid[block.quanta[:size], block.raised[:size]] = vector
-        along = raised(grid, block.steps) + lowered(grid, block.steps)
-        return quanta, math.sqrt(float(np.sum(along * along))) / block.model.spins
+        along = _jx(grid, block.steps)
+        return quanta, 2.0 * math.sqrt(float(np.sum(along * along))) / block.model.spins
+
+
+def _jx(grid: Array, steps: Array) -> Array:
+    """Jx on amplitudes (..., N+1)."""
+    return 0.5 * (raised(grid, steps) + lowered(grid, steps))

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import heapq
 import math
+from collections.abc import Iterable
 
 import numpy as np
 from numpy.typing import NDArray
@@ -17,7 +18,7 @@ from scipy.linalg.lapack import dstebz
 from solver.converged import Converged, order_parameter_of
 from solver.excitation import BlockSearch, ExcitationLevel, ExcitationSpectrum
 from solver.moments import excitation_moments
-from solver.truncated import TruncatedValues
+from solver.truncated import TruncatedValues, error_of
 
 Array = NDArray[np.float64]
 _EPS = float(np.finfo(np.float64).eps)
@@ -34,6 +35,15 @@ class BlockTruncations:
         self.search = BlockSearch(self.spectrum.model, 2)
         self._below: tuple[float, list[int]] = (-math.inf, [])
         self._known: dict[tuple[int, int], Array] = {}
+        self._found: dict[int, tuple[bool, TruncatedValues]] = {}
+
+    def errors(self, name: str) -> dict[int, float]:
+        """Signed errors of one quantity at the cutoffs solved so far."""
+        return {
+            cutoff: error_of(self.converged, values, name)
+            for cutoff, (has_gap, values) in self._found.items()
+            if has_gap or name != "gap"
+        }
 
     def _parity(self, block: int) -> int:
         return self.spectrum.parity(ExcitationLevel(block, 0, 0.0, 0.0, np.ones(1)))
@@ -135,22 +145,46 @@ class BlockTruncations:
         amplitudes = np.zeros(min(self.spectrum.model.spins, ground) + 1)
         amplitudes[max(0, ground - cutoff) :] = vector
         moments = excitation_moments(self.spectrum, ExcitationLevel(ground, 0, energy, 0.0, amplitudes))
-        return TruncatedValues(
+        values_found = TruncatedValues(
             energy=energy,
             gap=self._gap(ground, cutoff) if gap else None,
             boson_number=moments.quanta,
             order_parameter=order_parameter_of(moments),
             levels=self._levels(cutoff) if levels else None,
         )
+        self._found[cutoff] = (gap, values_found)
+        return values_found
 
     def _levels(self, cutoff: int) -> float:
-        """Largest error of a shown level, each compared within its block."""
-        worst = 0.0
+        """Largest error of a shown level, each compared at its place among those of its parity."""
+        exact: dict[int, list[float]] = {}
         for block, sector in self.converged.sectors.items():
-            if not sector.shown:
-                continue
-            if block > cutoff + self.spectrum.model.spins or self._size(block, cutoff) < sector.shown:
+            if sector.shown:
+                levels = sector.energies[: sector.shown].tolist()
+                exact.setdefault(self._parity(block), []).extend(levels)
+        worst = 0.0
+        for parity, energies in exact.items():
+            found = self._lowest_of_parity(parity, cutoff, len(energies))
+            if len(found) < len(energies):
                 return math.inf
-            values = self._lowest(block, cutoff, sector.shown)
-            worst = max(worst, float(np.max(values - sector.energies[: sector.shown])))
+            errors = (high - low for high, low in zip(found, sorted(energies), strict=True))
+            worst = max([worst, *errors])
         return worst
+
+    def _lowest_of_parity(self, parity: int, cutoff: int, count: int) -> list[float]:
+        """The `count` lowest levels of one parity over all truncated blocks."""
+        most = cutoff + self.spectrum.model.spins
+        seeds = {block for block in self.converged.sectors if block <= most}
+        # an odd stride visits both parities
+        seeds.update(range(0, most + 1, max(1, most // 16 | 1)))
+        reached = self._merged(seeds, parity, cutoff, count)
+        if len(reached) < count:
+            return self._merged(range(most + 1), parity, cutoff, count)
+        return self._merged(self._competing(reached[-1], cutoff), parity, cutoff, count)
+
+    def _merged(self, blocks: Iterable[int], parity: int, cutoff: int, count: int) -> list[float]:
+        levels: list[float] = []
+        for block in blocks:
+            if self._parity(block) == parity:
+                levels.extend(self._lowest(block, cutoff, count).tolist())
+        return sorted(levels)[:count]

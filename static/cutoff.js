@@ -15,7 +15,7 @@ const POLL = 1000;
 
 const part = (id) => document.getElementById(id);
 const boot = JSON.parse(part("boot").textContent);
-const state = { query: boot.query, id: null, computation: null, title: part("title").textContent, margins: null };
+const state = { query: boot.query, id: null, title: part("title").textContent, margins: null };
 // an address with a short name keeps it
 if (location.search.startsWith("?stored=")) state.query = location.search.slice(1);
 
@@ -218,13 +218,11 @@ async function commit() {
     part("invented").hidden = true;
   }
   boot.error = null;
-  const view = answer.id === state.computation && watch.run?.id !== undefined && watch.run.facts?.state !== "cancelled";
   state.query = answer.query;
-  state.computation = answer.id;
   showLink();
   try {
-    const asked = view ? (same ? null : watch.redraw(answer.query)) : compute();
-    await Promise.all([asked, showFace(answer.query, before)]);
+    // what is computed already is there at once, only its picture is new
+    await Promise.all([same ? null : compute(), showFace(answer.query, before)]);
   } catch (problem) {
     failed(problem);
   }
@@ -234,7 +232,6 @@ async function commit() {
 window.addEventListener("popstate", async () => {
   ticket += 1;
   state.query = location.search.slice(1);
-  state.computation = null;
   part("invented").hidden = !(part("invented").textContent && !state.query);
   form.clearProblems();
   showLink();
@@ -265,7 +262,6 @@ function zoomed(range) {
     try {
       const answer = await post("api/cutoff/link", form.fields());
       state.query = answer.query;
-      state.computation = answer.id;
       if (watch.run) watch.run.query = watch.query = answer.query;
       form.committed = form.snapshot();
       history.replaceState(null, "", address(answer.query));

@@ -85,6 +85,12 @@ export class DeskTables {
     });
     fill(part("quantities"), ["quantity", "error allowed", "largest n", "levels", "needed most at", "claim"], rows);
     this.valuesThere();
+    part("more-words").textContent = this.words.more.join(" ");
+    const { deciding_point: address, rows: mapped } = this.data;
+    part("open-point").hidden = !address;
+    if (address) part("open-point").href = address;
+    part("map-rows").hidden = !mapped;
+    if (mapped) fill(part("rows-table"), ["needed most at", "largest n", "levels"], mapped.map((row) => [row.place, plain(row.cutoff), plain(row.cutoff + 1)]));
   }
 
   // What the state is like at the point that decides.
@@ -101,8 +107,10 @@ export class DeskTables {
   reverse() {
     if (this.words.stated === null) return;
     const rows = this.words.stated.quantities.map((line) => {
-      const short = line.worst !== null && line.worst > line.allowed;
-      return [line.name, { words: line.good, mark: short ? "short" : "" }, line.worst === null ? "–" : error(line.worst), { words: line.at }, error(line.allowed)];
+      const short = line.good !== "everywhere" && line.good !== "not judged";
+      // without an error there is a place only where the cutoff does not hold the levels asked for
+      const worst = line.worst === null && line.at ? "too few levels" : error(line.worst);
+      return [line.name, { words: line.good, mark: short ? "short" : "" }, worst, { words: line.at }, error(line.allowed)];
     });
     fill(part("reverse-table"), ["quantity", "good enough", "largest error", "at", "allowed"], rows);
   }

@@ -22,8 +22,9 @@ from app.errors import SheetError
 from app.figure_cutoff import picture
 from tests.app.test_exports import comparable, compute
 from tests.app.test_links import sheets
-from tests.running import RunningServer
+from tests.running import RunningServer, ServerFactory
 
+OLD_LINKS = json.loads(Path(__file__).with_name("old_cutoff_links.json").read_text())
 QUERIES = [
     "spins=5&points=9&stated=9",
     "spins=3&points=5&each=ratio:0,0.5,1&stated=4&title=Three",
@@ -97,6 +98,15 @@ def test_one_spelling(typed: str, canonical: str) -> None:
             question(typed)
         return
     assert links.cutoff_query(question(typed)) == canonical
+
+
+@pytest.mark.parametrize("link", OLD_LINKS)
+def test_old_links_open(link: str) -> None:
+    """Links that were once passed around: they open for ever, as the same question."""
+    asked = links.parse_link(link)
+    assert isinstance(asked, CutoffSheet)
+    assert links.cutoff_link(asked) == link
+    assert {key: asked.data()[key] for key in OLD_LINKS[link]} == OLD_LINKS[link]
 
 
 def test_what_is_only_shown_is_not_computed_again() -> None:
@@ -331,6 +341,18 @@ def test_many_askers_one_computation(server: RunningServer) -> None:
     assert after["points_computed"] - before["points_computed"] == 31
 
 
+def test_a_restart_finds_what_was_computed(start_server: ServerFactory) -> None:
+    first = start_server("--workers", "1")
+    before = first.client.get("/api/cutoff?spins=3&points=9&stated=4").json()
+    first.stop()
+    second = start_server("--workers", "1")
+    after = second.client.get("/api/cutoff?spins=3&points=9&stated=4&title=again").json()
+    assert second.counts()["chunks_computed"] == 0
+    assert second.counts()["chunks_found"] > 0
+    assert after["summary"] == before["summary"]
+    assert after["provenance"] == before["provenance"]
+
+
 def test_opening_the_page_computes_nothing(server: RunningServer) -> None:
     before = server.counts()
     for address in ("/cutoff?spins=9&points=17&to=0.9", "/api/cutoff/face?spins=9&points=17&to=0.9"):
@@ -450,6 +472,17 @@ def test_the_summary_follows_from_the_points(server: RunningServer) -> None:
     assert inside == good
     for quantity, worst in summary["stated"]["worst"].items():
         assert worst["error"] == max(stated["error"][quantity])
+
+
+def test_a_cutoff_that_does_not_hold_the_levels(server: RunningServer) -> None:
+    """One spin and n = 0 make two states; six levels cannot be had from them."""
+    result = server.client.get("/api/cutoff?spins=1&points=3&stated=0").json()
+    assert result["stated"]["error"]["energies"] == [None] * 3
+    assert result["stated"]["good"]["energies"] == [False] * 3
+    assert result["summary"]["stated"]["worst"]["energies"]["error"] is None
+    assert result["summary"]["stated"]["good_points"] == 0
+    words = picture(question("spins=1&points=3&stated=0"), result)["words"]["stated"]
+    assert words["verdict"] == "Your 1 boson level (n = 0 alone) is enough nowhere on the whole sweep."
 
 
 def test_maps_lie_row_after_row(server: RunningServer) -> None:
