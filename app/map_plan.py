@@ -6,7 +6,7 @@ from typing import Any
 import numpy as np
 
 from app import plan
-from app.map_refine import Flags, Numbers, Survey, coarse_lines, coarse_survey, survey
+from app.map_refine import ALLOWED, Flags, Numbers, Survey, coarse_lines, coarse_survey, survey
 from app.map_sheets import MapSheet
 from app.plan import CHUNK_SECONDS, MOST_POINTS_IN_CHUNK, Chunk, Curve, Growth, Plan
 from solver import CollectiveModel, PointQuestion, predicted_bytes, predicted_seconds
@@ -89,8 +89,8 @@ def computed_cells(rows: Sequence[Row | None], shape: tuple[int, int]) -> Flags:
 def _judged(
     questions: Sequence[PointQuestion], rows: Sequence[Row | None], shape: tuple[int, int]
 ) -> tuple[Numbers, ...]:
-    """Return what decides where cells are computed: bosons per spin, order parameter, decades of the gap."""
-    judged = np.full((3, len(rows)), np.nan)
+    """Return what decides where cells are computed: bosons per spin, order parameter, gap and its decades."""
+    judged = np.full((len(ALLOWED), len(rows)), np.nan)
     for point, (question, row) in enumerate(zip(questions, rows, strict=True)):
         answer = None if row is None else row["answer"]
         if answer is None or answer["boson_number"] is None:
@@ -102,6 +102,7 @@ def _judged(
         judged[:, point] = (
             answer["boson_number"] / model.spins,
             answer["order_parameter"],
+            open_gap,
             np.log10(open_gap + CLOSED_GAP),
         )
     return tuple(values.reshape(shape) for values in judged)

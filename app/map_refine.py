@@ -13,9 +13,9 @@ from numpy.typing import NDArray
 
 STEP = 8
 # predicted error that is left alone, as a share of the range of each judged quantity
-ALLOWED = (0.008, 0.008, 0.03)
-# ranges below these are flat: mean bosons per spin, order parameter, decades of the gap
-FLAT = (0.01, 0.01, 0.05)
+ALLOWED = (0.01, 0.01, 0.015, 0.03)
+# ranges below these are flat: mean bosons per spin, order parameter, gap over mode, decades of the gap
+FLAT = (0.01, 0.01, 0.01, 0.05)
 # halving a block quarters the error where a quantity is smooth and halves it at an edge: judged as an edge
 SHRINKS = 0.5
 
