@@ -12,7 +12,7 @@ import pytest
 from app.security import HEADERS
 from tests.running import RunningServer
 
-PATIENCE = 1.0
+PATIENCE = 2.0
 HEAD = b"POST /api/jobs HTTP/1.1\r\nHost: localhost\r\nContent-Type: application/json\r\n"
 
 
@@ -128,9 +128,7 @@ def test_what_is_not_http_is_answered_in_the_one_shape(impatient: RunningServer,
         answer = rest(one)
     # a huge head may be cut off while it is still being sent
     if answer:
-        check(
-            answer, 400 if sent[:3] != b"\x16\x03\x01" else 408, json.loads(read(answer)[2])["error"]["code"]
-        )
+        check(answer, 400, json.loads(read(answer)[2])["error"]["code"])
     assert impatient.client.get("/health").status_code == 200
 
 
@@ -138,7 +136,7 @@ def test_a_stream_outlives_patience(impatient: RunningServer) -> None:
     job = impatient.client.post("/api/jobs", json={"spins": 60, "points": 1001, "to": 1.5}).json()
     with connected(impatient) as one:
         one.sendall(f"GET /api/jobs/{job['id']}/events HTTP/1.1\r\nHost: localhost\r\n\r\n".encode())
-        time.sleep(2.5 * PATIENCE)
+        time.sleep(1.5 * PATIENCE)
         impatient.client.delete(f"/api/jobs/{job['id']}?for=everyone")
         answer = b""
         while b"event: end" not in answer:

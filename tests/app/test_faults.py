@@ -81,37 +81,28 @@ def mount() -> Iterator[Mount]:
 
 
 @pytest.mark.slow
+@pytest.mark.timeout(900)
 def test_twenty_kills_while_writing_lose_nothing_that_was_stored(start_server: ServerFactory) -> None:
-    sheet = {"spins": 24, "points": 2001, "to": 1.5, "levels": 3}
-    points = 0
-    stored = 0
+    sheet = {"spins": 3, "points": 2001, "levels": 2}
+    stored = points = 0
     for turn in range(20):
-        server = start_server("--workers", "2")
+        server = start_server("--workers", "1")
         job = start(server, sheet)
-        counts = server.counts()
+        found = server.counts()["chunks_found"]
+        facts = server.client.get(f"/api/jobs/{job['id']}").json()
         # everything that was reported as stored before the kill is found again
-        assert counts["chunks_found"] >= stored, turn
-        found = counts["chunks_found"]
-        done = server.client.get(f"/api/jobs/{job['id']}").json()
-        assert done["done"] >= points
-        if done["state"] == "done":
-            break
-        with contextlib.suppress(AssertionError):
-            server.wait_until(lambda: server.counts()["chunks_stored"] >= 2, 10.0)  # noqa: B023
-        time.sleep(0.02 * (turn % 5))
-        counts = server.counts()
-        stored = found + counts["chunks_stored"]
-        points = done["done"]
+        assert found >= stored, turn
+        assert facts["done"] >= points, turn
+        if facts["state"] != "done":
+            server.wait_until(lambda: server.counts()["chunks_stored"] >= 1)  # noqa: B023 - called at once
+        time.sleep(0.01 * (turn % 5))
+        stored = found + server.counts()["chunks_stored"]
+        points = facts["done"]
         server.process.send_signal(signal.SIGKILL)
         server.process.wait(10)
-    else:
-        assert stored >= 20
-    last = start_server("--workers", "2")
-    assert start(last, sheet)["id"] == job["id"]
-    assert last.counts()["chunks_found"] >= stored
-    last.stop()
-    with contextlib.closing(sqlite3.connect(last.data / DATABASE)) as connection:
-        assert connection.execute("PRAGMA integrity_check").fetchone() == ("ok",)
+        with contextlib.closing(sqlite3.connect(server.data / DATABASE)) as connection:
+            assert connection.execute("PRAGMA integrity_check").fetchone() == ("ok",), turn
+    assert stored >= 20
 
 
 def test_a_full_disk_at_work(start_server: ServerFactory, tmp_path: Path, mount: Mount) -> None:
