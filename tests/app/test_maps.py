@@ -417,12 +417,12 @@ def test_arrays_from_the_command_line(server: RunningServer, tmp_path: Path) -> 
 
 
 def test_a_restart_in_the_middle_changes_nothing(start_server: ServerFactory, server: RunningServer) -> None:
-    query = "spins=30&points=41&rows=41"
+    query = "spins=20&points=25&rows=25"
     whole = answer_of(server, query)
     first = start_server("--workers", "2")
     job = first.client.post("/api/jobs", json={"link": f"/map?{query}"}).json()["id"]
     # past the coarse grid: a grown part of the plan is found again in the store
-    first.wait_until(lambda: first.counts()["points_computed"] > 60)
+    first.wait_until(lambda: first.counts()["points_computed"] > 20)
     first.stop(signal.SIGKILL)
     second = start_server("--workers", "2")
     again = answer_of(second, query)
@@ -437,7 +437,7 @@ def test_a_restart_in_the_middle_changes_nothing(start_server: ServerFactory, se
 
 
 def test_cancelled_and_taken_up_again(server: RunningServer) -> None:
-    link = "/map?spins=24&points=41&rows=41"
+    link = "/map?spins=12&points=25&rows=25"
     facts = server.client.post("/api/jobs", json={"link": link}).json()
     for _ in range(4):
         server.client.delete(f"/api/jobs/{facts['id']}?for=everyone")
@@ -445,7 +445,7 @@ def test_cancelled_and_taken_up_again(server: RunningServer) -> None:
     result = answer_of(server, link.partition("?")[2])
     assert result["complete"]
     ended = server.client.get(f"/api/jobs/{facts['id']}").json()
-    assert (ended["state"], ended["done"]) == ("done", 41 * 41)
+    assert (ended["state"], ended["done"]) == ("done", 25 * 25)
 
 
 # -- the picture ---------------------------------------------------------------------------------------
