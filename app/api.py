@@ -33,7 +33,7 @@ from app.figures import picture
 from app.jobs import Job
 from app.map_sheets import MapSheet
 from app.metrics import Metrics, Observed
-from app.openapi import FIRST, PARTIAL
+from app.operations import FIRST, PARTIAL
 from app.points import PointDesk
 from app.questions import Question
 from app.replies import accepted as _accepted

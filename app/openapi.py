@@ -1,280 +1,14 @@
-"""The JSON routes described in the OpenAPI form, from the same table of keys that reads the links."""
+"""The JSON routes described in the OpenAPI form."""
 
 import functools
 from collections.abc import Iterable, Mapping
-from dataclasses import dataclass, field
-from typing import Any
 
 from app import __version__
-from app.cutoff_plan import CUTOFF, POINT
-from app.cutoff_sheets import CUTOFF_KEYS
 from app.keys import GRAMMAR_VERSION, KEYS, MOST_CURVES, SWEPT, Key
-from app.links import STORED_KEY, STORED_NAME, WAIT
-from app.map_pages import COLUMN, ROW
-from app.map_sheets import MAP_OWN_KEYS
-from app.pages import COUPLING_AS
-from app.places import MEMBER, STATE
-
-JSON = "application/json"
-CSV = "text/csv; charset=utf-8"
-TEXT = "text/plain; charset=utf-8"
-ARRAYS = "application/octet-stream"
-EVENTS = "text/event-stream; charset=utf-8"
-
-PARTIAL = Key("partial", "choice", "0", "whether an unfinished result will do", choices=("0", "1"))
-FIRST = Key("first", "real", 0.0, "seconds to wait for the first picture", low=0.0, high=5.0)
-SHEET = tuple(KEYS.values())
-DESK = (*SHEET, *CUTOFF_KEYS.values())
-MAP = (*SHEET, *MAP_OWN_KEYS.values())
-
-Schema = dict[str, Any]
+from app.links import STORED_KEY, STORED_NAME
+from app.operations import ANY, JSON, OPERATIONS, WORDS, Operation, Schema, named
 
 _DIGITS = r"[+-]?([0-9]+(\.[0-9]*)?|\.[0-9]+)([eE][+-]?[0-9]{1,4})?"
-
-
-@dataclass(frozen=True)
-class Operation:
-    """One method of one address.
-
-    `keys` are those of the query; `sheet` says that the grammar's version and short links are taken too;
-    `answers` gives the schema of each good status by media type.
-    """
-
-    method: str
-    path: str
-    words: str
-    answers: Mapping[int, tuple[str, Schema]]
-    keys: tuple[Key, ...] = ()
-    sheet: bool = False
-    needed: frozenset[str] = frozenset()
-    body: Schema | None = None
-    more: tuple[Schema, ...] = field(default=())
-
-
-def _named(name: str) -> Schema:
-    return {"$ref": f"#/components/schemas/{name}"}
-
-
-_ANY: Schema = {"type": "object"}
-_WORDS: Schema = {"type": "string"}
-_JOB = (JSON, _named("Job"))
-_RESULT = (JSON, _named("Result"))
-_LEASE: Schema = {"name": "lease", "in": "query", "schema": _WORDS, "description": "the lease given up"}
-_EVERYONE: Schema = {
-    "name": "for",
-    "in": "query",
-    "schema": {"enum": ["everyone"]},
-    "description": "stop the job for everybody, in place of a lease",
-}
-
-OPERATIONS = (
-    Operation(
-        "get",
-        "/api/sweep",
-        "The result of a sweep, or its job when it takes longer than 'wait'",
-        {200: _RESULT, 202: _JOB},
-        (*SHEET, WAIT),
-        sheet=True,
-    ),
-    Operation(
-        "get",
-        "/api/sweep.csv",
-        "The result of a sweep as a table",
-        {200: (CSV, _WORDS), 202: _JOB},
-        (*SHEET, WAIT),
-        sheet=True,
-    ),
-    Operation(
-        "get",
-        "/api/sweep.py",
-        "A script that fetches the sweep or computes it",
-        {200: (TEXT, _WORDS)},
-        SHEET,
-        sheet=True,
-    ),
-    Operation(
-        "get",
-        "/api/face",
-        "What a page shows of a sheet beside its figure",
-        {200: (JSON, _ANY)},
-        (*SHEET, COUPLING_AS),
-        sheet=True,
-    ),
-    Operation(
-        "get",
-        "/api/point",
-        "The result of one point, with its phase-space pictures",
-        {200: (JSON, _ANY), 202: (JSON, _named("Running"))},
-        (*SHEET, MEMBER, STATE, WAIT),
-        sheet=True,
-    ),
-    Operation(
-        "get",
-        "/api/point/picture",
-        "The figures of one point",
-        {200: (JSON, _ANY), 202: (JSON, _named("Running"))},
-        (*SHEET, MEMBER, STATE, WAIT),
-        sheet=True,
-    ),
-    Operation(
-        "get",
-        "/api/point/convergence",
-        "The errors of truncated calculations of one point against the cutoff",
-        {200: (JSON, _ANY), 202: (JSON, _named("Running"))},
-        (*SHEET, MEMBER, STATE, WAIT),
-        sheet=True,
-    ),
-    Operation(
-        "get",
-        "/api/map",
-        "The result of a map, or its job when it takes longer than 'wait'",
-        {200: (JSON, _ANY), 202: _JOB},
-        (*MAP, WAIT),
-        sheet=True,
-    ),
-    Operation(
-        "get",
-        "/api/map.csv",
-        "The result of a map as a table",
-        {200: (CSV, _WORDS), 202: _JOB},
-        (*MAP, WAIT),
-        sheet=True,
-    ),
-    Operation(
-        "get",
-        "/api/map.npz",
-        "The result of a map as arrays of numpy",
-        {200: (ARRAYS, _WORDS), 202: _JOB},
-        (*MAP, WAIT),
-        sheet=True,
-    ),
-    Operation(
-        "get",
-        "/api/map/cell",
-        "The addresses of a cell's point, and of its row and column as sweeps",
-        {200: (JSON, _ANY)},
-        (*MAP, ROW, COLUMN),
-        sheet=True,
-    ),
-    Operation(
-        "get",
-        "/api/map/face",
-        "What the page of a map shows of it",
-        {200: (JSON, _ANY)},
-        (*MAP, COUPLING_AS),
-        sheet=True,
-    ),
-    Operation(
-        "get",
-        "/api/cutoff",
-        "The cutoffs that a question of the cutoff desk needs",
-        {200: (JSON, _ANY), 202: _JOB},
-        (*DESK, WAIT),
-        sheet=True,
-    ),
-    Operation(
-        "get",
-        "/api/cutoff.csv",
-        "The needed cutoffs as a table",
-        {200: (CSV, _WORDS), 202: _JOB},
-        (*DESK, WAIT),
-        sheet=True,
-    ),
-    Operation(
-        "get",
-        "/api/cutoff/sizes.csv",
-        "The sizes of the calculation as a table",
-        {200: (CSV, _WORDS), 202: _JOB},
-        (*DESK, WAIT),
-        sheet=True,
-    ),
-    Operation(
-        "get",
-        "/api/cutoff/margins",
-        "The errors at some cutoffs around one, at one point",
-        {200: (JSON, _ANY), 202: (JSON, _named("Running"))},
-        (*DESK, POINT, CUTOFF, WAIT),
-        sheet=True,
-        needed=frozenset({CUTOFF.name}),
-    ),
-    Operation(
-        "get",
-        "/api/cutoff/face",
-        "What the page of the cutoff desk shows of a question",
-        {200: (JSON, _ANY)},
-        (*DESK, COUPLING_AS),
-        sheet=True,
-    ),
-    Operation(
-        "post",
-        "/api/link",
-        "The link for what was typed into the form of a sweep",
-        {200: (JSON, _named("Address"))},
-        body=_named("Form"),
-    ),
-    Operation(
-        "post",
-        "/api/cutoff/link",
-        "The link for what was typed into the form of the cutoff desk",
-        {200: (JSON, _named("Address"))},
-        body=_named("Form"),
-    ),
-    Operation(
-        "post",
-        "/api/map/link",
-        "The link for what was typed into the form of a map",
-        {200: (JSON, _named("Address"))},
-        body=_named("Form"),
-    ),
-    Operation(
-        "post",
-        "/api/jobs",
-        "Start the job of a sheet, or join it; hands out a lease",
-        {200: _JOB, 202: _JOB},
-        (FIRST,),
-        body={"anyOf": [_named("Sheet"), _named("Link"), _named("FormOfJob")]},
-    ),
-    Operation("get", "/api/jobs/{name}", "Where a job stands", {200: _JOB}),
-    Operation(
-        "delete",
-        "/api/jobs/{name}",
-        "Give up a lease, or stop the job",
-        {200: _JOB},
-        more=(_LEASE, _EVERYONE),
-    ),
-    Operation(
-        "post",
-        "/api/jobs/{name}/leases/{lease}",
-        "Say that somebody still waits for this job",
-        {200: _JOB},
-    ),
-    Operation(
-        "get",
-        "/api/jobs/{name}/events",
-        "The progress of a job as server-sent events: snapshot, progress, heartbeat, end",
-        {200: (EVENTS, _WORDS)},
-    ),
-    Operation(
-        "get",
-        "/api/jobs/{name}/result",
-        "The result of a job; its keys, when given, must ask the same numbers",
-        {200: (JSON, _ANY), 202: _JOB},
-        (*SHEET, PARTIAL),
-        sheet=True,
-    ),
-    Operation(
-        "get",
-        "/api/jobs/{name}/picture",
-        "The figure of a job as far as it is computed",
-        {200: (JSON, _ANY)},
-        SHEET,
-        sheet=True,
-    ),
-    Operation("get", "/api/limits", "What this server takes, and the grammar of links", {200: (JSON, _ANY)}),
-    Operation("get", "/api/openapi.json", "This description", {200: (JSON, _ANY)}),
-    Operation("get", "/health", "Version, state of the store, counters", {200: (JSON, _named("Health"))}),
-    Operation("get", "/metrics", "The numbers of the server for a monitoring system", {200: (TEXT, _WORDS)}),
-)
 
 
 def _numbers(key: Key) -> Schema:
@@ -357,7 +91,7 @@ def _described(operation: Operation) -> Schema:
     }
     answers["default"] = {
         "description": "what is wrong, and what to change",
-        "content": {JSON: {"schema": _named("Error")}},
+        "content": {JSON: {"schema": named("Error")}},
     }
     described: Schema = {
         "summary": operation.words,
@@ -380,43 +114,43 @@ def _schemas() -> dict[str, Schema]:
     whole: Schema = {"type": "integer", "minimum": 0}
     maybe_words: Schema = {"type": ["string", "null"]}
     error = _object(
-        {"code": _WORDS, "message": _WORDS, "field": maybe_words, "value": {}, "allowed": {}},
+        {"code": WORDS, "message": WORDS, "field": maybe_words, "value": {}, "allowed": {}},
         ("code", "message", "field", "value", "allowed"),
         closed=True,
     )
-    form: Schema = {"type": "object", "additionalProperties": _WORDS}
+    form: Schema = {"type": "object", "additionalProperties": WORDS}
     return {
         "Error": _object({"error": error}, ("error",), closed=True),
         "Sheet": _object({name: _body_schema(key) for name, key in KEYS.items()}, closed=True),
-        "Link": _object({"link": _WORDS}, ("link",), closed=True),
+        "Link": _object({"link": WORDS}, ("link",), closed=True),
         "Form": form,
         "FormOfJob": _object(
-            {"form": form, "instead": _object({"id": _WORDS, "lease": _WORDS})}, ("form",), closed=True
+            {"form": form, "instead": _object({"id": WORDS, "lease": WORDS})}, ("form",), closed=True
         ),
         "Address": _object(
-            {"link": _WORDS, "query": _WORDS, "sheet": _ANY, "id": _WORDS}, ("link", "query", "sheet", "id")
+            {"link": WORDS, "query": WORDS, "sheet": ANY, "id": WORDS}, ("link", "query", "sheet", "id")
         ),
         "Running": _object({"state": {"enum": ["running"]}}, ("state",)),
         "Job": _object(
             {
-                "id": _WORDS,
+                "id": WORDS,
                 "state": {"enum": ["queued", "running", "done", "failed", "cancelled", "restarting"]},
                 "done": whole,
                 "total": whole,
                 "seconds_left": {"type": ["number", "null"]},
                 "revision": whole,
-                "lease": _WORDS,
+                "lease": WORDS,
             },
             ("id", "state", "done", "total", "seconds_left", "revision"),
         ),
         "Result": _object(
             {
-                "sheet": _ANY,
-                "link": _WORDS,
-                "id": _WORDS,
+                "sheet": ANY,
+                "link": WORDS,
+                "id": WORDS,
                 "complete": {"type": "boolean"},
-                "provenance": _ANY,
-                "axis": _object({"name": _WORDS, "values": {"type": "array", "items": {"type": "number"}}}),
+                "provenance": ANY,
+                "axis": _object({"name": WORDS, "values": {"type": "array", "items": {"type": "number"}}}),
             },
             ("sheet", "link", "id", "complete", "provenance", "axis"),
         ),

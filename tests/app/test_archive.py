@@ -119,7 +119,7 @@ def test_what_cannot_be_exported_is_said(filled: Any, tmp_path: Path) -> None:
     assert "not stored" in refused(server.data, "export", "/sweep?spins=3", "--out", out)
     assert "not stored" in refused(server.data, "export", "0" * 20, "--out", out)
     assert "did you mean" in refused(server.data, "export", "/sweep?spin=3", "--out", out)
-    assert ".csv or .json" in refused(server.data, "export", sweep["id"], "--out", str(tmp_path / "x.txt"))
+    assert ".csv, .json" in refused(server.data, "export", sweep["id"], "--out", str(tmp_path / "x.txt"))
     assert "no stored results" in refused(tmp_path / "nowhere", "list")
     assert not (tmp_path / "nowhere").exists()
     assert not (tmp_path / "x.json").exists()

@@ -25,7 +25,7 @@ def softmode(*arguments: str) -> subprocess.CompletedProcess[str]:
     [
         ("/sweep?spin=3", ["spins", "did you mean"]),
         ("/sweep?spins=0", ["spins", "1 to 5000"]),
-        ("/map?spins=3", ["not a link to a sweep"]),
+        ("/chart?spins=3", ["not a link to"]),
         ("/sweep?stored=" + "0" * 32, ["short link"]),
         ("spins=5&spins=6", ["twice"]),
     ],
@@ -41,7 +41,7 @@ def test_bad_links_are_explained(link: str, words: list[str], tmp_path: Path) ->
 def test_other_endings_are_refused(tmp_path: Path) -> None:
     ended = softmode("compute", "/sweep", "--out", str(tmp_path / "x.xlsx"))
     assert ended.returncode == 2
-    assert ".csv or .json" in ended.stderr
+    assert ".csv, .json" in ended.stderr
 
 
 def test_progress_and_summary(tmp_path: Path) -> None:

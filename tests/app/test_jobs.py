@@ -379,12 +379,16 @@ def test_expensive_sheets_are_refused_before_they_run(start_server: ServerFactor
 def test_a_wrong_forecast_cannot_hold_the_workers(start_server: ServerFactory) -> None:
     server = start_server("--ceiling", "1", "--workers", "1")
     job = start(server, {"spins": 10, "points": 60})
-    for pid in server.worker_pids():
+    stopped = server.worker_pids()
+    for pid in stopped:
         os.kill(pid, signal.SIGSTOP)  # a point that takes for ever
     server.wait_until(lambda: facts_of(server, job["id"])["state"] in {"failed", "done"}, 30.0)
     facts = facts_of(server, job["id"])
     assert facts["state"] == "failed"
     assert facts["error"]["code"] == "took-too-long"
+    # a new process takes the place of the one that was ended
+    server.wait_until(lambda: server.counts()["workers_lost"] > 0 or server.worker_pids() != stopped, 30.0)
+    server.wait_until(lambda: server.counts()["workers_ready"] == 1, 60.0)
     assert server.client.get("/api/sweep?spins=3&points=5").status_code == 200
 
 

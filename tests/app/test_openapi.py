@@ -17,23 +17,23 @@ from schemathesis.specs.openapi.checks import (
 )
 from starlette.routing import Route
 
-from app import api, cutoff_pages, keys, openapi, operating, pages, point_pages
+from app import api, cutoff_pages, keys, map_pages, openapi, operating, operations, pages, point_pages
 from tests.running import RunningServer
 
 CASES = 2000
 WAITING = {
-    operation.path for operation in openapi.OPERATIONS if any(key.name == "wait" for key in operation.keys)
+    operation.path for operation in operations.OPERATIONS if any(key.name == "wait" for key in operation.keys)
 }
 # a busy server says so, and does not fail
 FINE_ABOVE_500 = {503}
 
 
 def described() -> set[tuple[str, str]]:
-    return {(operation.method.upper(), operation.path) for operation in openapi.OPERATIONS}
+    return {(operation.method.upper(), operation.path) for operation in operations.OPERATIONS}
 
 
 def test_every_json_route_is_described() -> None:
-    routers = (api, pages, point_pages, cutoff_pages, operating)
+    routers = (api, pages, point_pages, cutoff_pages, map_pages, operating)
     served = set()
     for module in routers:
         for route in module.router.routes:
