@@ -86,7 +86,8 @@ def _parameters(operation: Operation) -> list[Schema]:
 
 def _described(operation: Operation) -> Schema:
     answers: Schema = {
-        str(status): {"description": "", "content": {kind: {"schema": schema}}}
+        # the form has no words for a stream of events
+        str(status): {"description": "", "content": {kind: {} if kind == EVENTS else {"schema": schema}}}
         for status, (kind, schema) in operation.answers.items()
     }
     answers["default"] = {
