@@ -6,7 +6,7 @@ from collections.abc import Iterable, Mapping
 from app import __version__
 from app.keys import GRAMMAR_VERSION, KEYS, MOST_CURVES, SWEPT, Key
 from app.links import STORED_KEY, STORED_NAME
-from app.operations import ANY, JSON, OPERATIONS, WORDS, Operation, Schema, named
+from app.operations import ANY, EVENTS, JSON, OPERATIONS, WORDS, Operation, Schema, named
 
 _DIGITS = r"[+-]?([0-9]+(\.[0-9]*)?|\.[0-9]+)([eE][+-]?[0-9]{1,4})?"
 

@@ -8,7 +8,6 @@ from hypothesis import HealthCheck, settings
 
 from tests.running import RunningServer, ServerFactory
 
-
 # how fast a machine draws examples says nothing about the code
 settings.register_profile("any machine", deadline=None, suppress_health_check=[HealthCheck.too_slow])
 settings.load_profile("any machine")
