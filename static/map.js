@@ -1,6 +1,6 @@
 // The map page: one state, written as the address, shown by the map, its cross-sections, strip and form.
 
-import { bound, duration, plain, supported } from "./format.js";
+import { bound, plain, supported } from "./format.js";
 import { Watch } from "./jobs.js";
 import { looks, paper } from "./looks.js";
 import { MapCursor } from "./map_cursor.js";
@@ -9,6 +9,7 @@ import { MapForm } from "./map_form.js";
 import { MapPlot } from "./map_plot.js";
 import { askJson, post, withQuery } from "./net.js";
 import { Share } from "./share.js";
+import { part, Progress, showFace as applyFace, showLink as applyLink, showProvenance, stopWaiting, wait } from "./sheet_page.js";
 import { cellOf, unitOf } from "./values.js";
 
 const WAYS_PAUSE = 150;
@@ -16,7 +17,6 @@ const SPEAK_PAUSE = 300;
 const WAYS = [["open-point", "point"], ["row-sweep", "row_sweep"], ["column-sweep", "column_sweep"]];
 const STATES = ["not settled yet: estimated from cells around it", "interpolated between computed cells, no bound", "computed"];
 
-const part = (id) => document.getElementById(id);
 const boot = JSON.parse(part("boot").textContent);
 const state = { query: boot.query, id: null, computation: null, title: part("title").textContent };
 // an address with a short name keeps it
@@ -28,7 +28,8 @@ const plot = new MapPlot(part("plot"), part("stage"));
 const cuts = new Cuts(part("cuts"));
 const cursor = new MapCursor(part("map-cursor"), part("stage"), plot, { moved, opened: open, zoomed });
 const form = new MapForm(part("form"), { commit: () => commit(), drag: () => {}, reword: () => reword() });
-const watch = new Watch(boot, { picture: draw, progress: showProgress, ended, failed });
+const watch = new Watch(boot, { picture: draw, progress: (facts) => progress.show(facts), ended: (facts) => progress.ended(facts), failed });
+const progress = new Progress({ cancel: () => watch.cancel(), goOn: () => compute() }, { counted: "cells settled", halted: "cells are settled" });
 
 const address = (query) => withQuery("map", query);
 const absolute = (query) => new URL(address(query), location.href).href;
@@ -47,20 +48,15 @@ plot.onBox = (x, y) => boxed(x, y);
 async function draw(picture) {
   data = picture.readout;
   state.id = data.id;
-  part("stage").querySelector(".waiting")?.remove();
+  stopWaiting();
   const drawn = plot.show(picture.figure);
   part("stage").setAttribute("aria-busy", String(!picture.complete));
-  showProvenance(data.provenance);
+  showProvenance(data.provenance, state.id);
   const { cells, computed } = data.counts;
   const words = picture.complete && computed < cells ? `${computed} of ${cells} cells computed, the others (dots) interpolated.` : `${computed} of ${cells} cells computed.`;
   for (const id of ["counted", "counted-touch"]) part(id).textContent = words;
   await drawn;
   cursor.feed(data.axis.values, data.across.values, history.state?.cell ?? null);
-}
-
-function showProvenance(made) {
-  const when = made.computed_at ? `computed ${made.computed_at.replace("T", " ")}, ${made.seconds} s of processor time` : "still computing";
-  part("provenance").textContent = `Softmode ${made.softmode}, solver ${made.solver.slice(0, 12)}, numpy ${made.numpy}, scipy ${made.scipy}; ${when}; result ${state.id.slice(0, 16)}`;
 }
 
 // -- cursor -----------------------------------------------------------------------------------------
@@ -197,53 +193,9 @@ function zoomed(factor) {
   commit();
 }
 
-// -- progress ---------------------------------------------------------------------------------------
-
-let showBar = null;
-
-function showProgress(facts) {
-  const active = facts.state === "queued" || facts.state === "running";
-  part("bar").max = facts.total;
-  part("bar").value = facts.done;
-  const words = facts.state === "queued" ? "waiting for a free processor" : duration(facts.seconds_left);
-  part("progress-words").textContent = `${facts.done} of ${facts.total} cells settled${words ? `, ${words}` : ""}`;
-  part("cancel").hidden = !active;
-  part("go-on").hidden = true;
-  if (active) showBar ??= setTimeout(() => { part("progress").hidden = false; }, 150);
-}
-
-function hideBar() {
-  clearTimeout(showBar);
-  showBar = null;
-  part("progress").hidden = true;
-  part("stage").querySelector(".waiting")?.remove();
-}
-
-function ended(facts) {
-  hideBar();
-  if (facts.state === "done") return; // the last picture is on its way
-  part("stage").setAttribute("aria-busy", "false");
-  part("progress").hidden = false;
-  part("cancel").hidden = true;
-  const words = { cancelled: "Cancelled", restarting: "The server is restarting", failed: "Failed" }[facts.state] ?? facts.state;
-  part("progress-words").textContent = `${words}: ${facts.done} of ${facts.total} cells are settled.`;
-  part("go-on").hidden = facts.state !== "cancelled";
-}
-
 function failed(problem) {
-  const facts = problem.facts ?? { message: String(problem.message), field: null, allowed: null };
-  hideBar();
-  part("stage").setAttribute("aria-busy", "false");
-  const atField = facts.field && form.problem(facts);
-  const lines = [facts.message];
-  if (!atField && facts.allowed !== null && facts.allowed !== undefined) lines.push(`Allowed: ${facts.allowed}`);
-  part("message").replaceChildren(...lines.map((text) => Object.assign(document.createElement("p"), { textContent: text })));
-  part("message").hidden = false;
+  progress.failed(problem, form);
 }
-
-part("cancel").addEventListener("click", () => watch.cancel());
-part("go-on").addEventListener("click", () => compute());
-part("reload-now").addEventListener("click", () => location.reload());
 
 // -- state ------------------------------------------------------------------------------------------
 
@@ -251,30 +203,19 @@ function compute() {
   part("message").hidden = true;
   for (const id of ["toolbar", "stage", "stage-hint", "model"]) part(id).hidden = false;
   part("stage").setAttribute("aria-busy", "true");
-  if (!plot.figure && !part("stage").querySelector(".waiting")) {
-    part("stage").append(Object.assign(document.createElement("p"), { className: "waiting", textContent: "Computing the first cells…" }));
-  }
+  wait(plot, "Computing the first cells…");
   return watch.begin(address(state.query), state.query);
 }
 
 function showLink() {
-  part("link").value = absolute(state.query);
-  part("print-link").textContent = absolute(state.query);
-  const twin = part("twin");
-  if (twin) twin.href = withQuery("api/map", state.query);
+  applyLink(absolute(state.query), withQuery("api/map", state.query));
 }
 
 async function showFace(query, before) {
   const face = await askJson(withQuery("api/map/face", query, `coupling_as=${form.couplingAs.value}`));
   if (query !== state.query) return;
   state.title = face.title;
-  document.title = `${face.title} – Softmode`;
-  part("title").textContent = face.title;
-  part("note").textContent = face.note;
-  part("note").hidden = !face.note;
-  part("member").textContent = face.member;
-  part("hamiltonian").innerHTML = face.hamiltonian;
-  part("values").replaceChildren(...face.values.map((value) => Object.assign(document.createElement("li"), { innerHTML: value })));
+  applyFace(face, face.title);
   part("to-sweep").href = withQuery("sweep", face.sweep);
   form.show(face, before);
 }

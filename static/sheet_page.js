@@ -14,9 +14,9 @@ function lines(texts, tag = "p") {
 }
 
 // A word where there is no picture yet.
-export function wait(plot) {
+export function wait(plot, text = "Computing the first points…") {
   if (plot.figure || part("stage").querySelector(".waiting")) return;
-  part("stage").append(Object.assign(document.createElement("p"), { className: "waiting", textContent: "Computing the first points…" }));
+  part("stage").append(Object.assign(document.createElement("p"), { className: "waiting", textContent: text }));
 }
 
 export function stopWaiting() {
@@ -24,8 +24,10 @@ export function stopWaiting() {
 }
 
 export class Progress {
-  constructor(calls) {
+  // calls: cancel(), goOn(); words: what is counted, and how much of it is there at a halt
+  constructor(calls, words = { counted: "points", halted: "points are there" }) {
     this.timer = null;
+    this.words = words;
     part("cancel").addEventListener("click", () => calls.cancel());
     part("go-on").addEventListener("click", () => calls.goOn());
     part("reload-now").addEventListener("click", () => location.reload());
@@ -36,7 +38,7 @@ export class Progress {
     part("bar").max = facts.total;
     part("bar").value = facts.done;
     const words = facts.notice ?? (facts.state === "queued" ? "waiting for a free processor" : duration(facts.seconds_left));
-    part("progress-words").textContent = `${facts.done} of ${facts.total} points${words ? `, ${words}` : ""}`;
+    part("progress-words").textContent = `${facts.done} of ${facts.total} ${this.words.counted}${words ? `, ${words}` : ""}`;
     part("cancel").hidden = !active;
     part("go-on").hidden = true;
     if (active) this.timer ??= setTimeout(() => { part("progress").hidden = false; }, PATIENCE);
@@ -55,7 +57,7 @@ export class Progress {
     part("stage").setAttribute("aria-busy", "false");
     stopWaiting();
     part("progress").hidden = false;
-    part("progress-words").textContent = `${WORDS[facts.state] ?? facts.state}: ${facts.done} of ${facts.total} points are there.`;
+    part("progress-words").textContent = `${WORDS[facts.state] ?? facts.state}: ${facts.done} of ${facts.total} ${this.words.halted}.`;
     part("go-on").hidden = facts.state !== "cancelled";
   }
 
