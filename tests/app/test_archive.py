@@ -204,6 +204,7 @@ def test_a_step_that_fails_changes_nothing(tmp_path: Path) -> None:
     assert query(tmp_path, "SELECT count(*) FROM sqlite_master WHERE name = 'results_used'") == [(1,)]
 
 
+@pytest.mark.soak
 def test_a_result_of_an_older_solver_is_never_shown_as_new(tmp_path: Path) -> None:
     """Two programs that differ in one comment of the solver, one after the other on the same data."""
     older = tmp_path / "older"

@@ -84,6 +84,7 @@ def test_limits_are_told_in_seconds_of_this_machine() -> None:
         assert other["seconds"] == pytest.approx(3.0 * one["seconds"], abs=2e-5)
 
 
+@pytest.mark.soak
 def test_a_server_measures_once(start_server: ServerFactory) -> None:
     server = start_server("--workers", "1")
 

@@ -150,6 +150,7 @@ def test_a_lost_worker_loses_nothing(start_server: ServerFactory, cluster: Clust
     assert server.counts()["workers_lost"] == 1
 
 
+@pytest.mark.soak
 @pytest.mark.slow
 @needs_dask
 def test_what_ends_two_workers_is_given_up(start_server: ServerFactory, tmp_path: Path) -> None:
@@ -171,6 +172,7 @@ def test_what_ends_two_workers_is_given_up(start_server: ServerFactory, tmp_path
         cluster.stop()
 
 
+@pytest.mark.soak
 @pytest.mark.slow
 @needs_dask
 def test_a_link_and_a_point_are_computed_on_the_cluster(
@@ -190,6 +192,7 @@ def test_a_link_and_a_point_are_computed_on_the_cluster(
     assert numbers(here.client.get("/api/point?spins=9&points=33&at=0.5").json()) == numbers(there)
 
 
+@pytest.mark.soak
 @pytest.mark.slow
 @needs_dask
 def test_cancelling_frees_the_workers_soon(start_server: ServerFactory, cluster: Cluster) -> None:
@@ -209,6 +212,7 @@ def test_cancelling_frees_the_workers_soon(start_server: ServerFactory, cluster:
     assert again["state"] in {"queued", "running"}
 
 
+@pytest.mark.soak
 @pytest.mark.slow
 @needs_dask
 @pytest.mark.skipif(shutil.which("openssl") is None, reason="no openssl to make a certificate with")
@@ -251,6 +255,7 @@ scipy.__version__ = "0.0.1"
 """
 
 
+@pytest.mark.soak
 @pytest.mark.slow
 @needs_dask
 def test_a_worker_with_other_versions_is_refused(
@@ -281,6 +286,7 @@ def test_a_worker_with_other_versions_is_refused(
     finish(server, start(server, {"spins": 4, "points": 7})["id"])
 
 
+@pytest.mark.soak
 @pytest.mark.slow
 @needs_dask
 def test_a_lost_scheduler_is_told_and_waited_for(start_server: ServerFactory, cluster: Cluster) -> None:
@@ -311,6 +317,7 @@ def test_a_lost_scheduler_is_told_and_waited_for(start_server: ServerFactory, cl
     assert server.counts()["points_computed"] == SHEET["points"]
 
 
+@pytest.mark.soak
 @pytest.mark.slow
 @needs_dask
 def test_a_scheduler_that_stays_away_ends_the_job(start_server: ServerFactory, cluster: Cluster) -> None:

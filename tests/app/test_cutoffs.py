@@ -207,6 +207,7 @@ def test_what_the_solver_refuses_names_the_key(server: RunningServer, query: str
 
 
 def test_too_expensive_is_refused_before_anything_runs(server: RunningServer) -> None:
+    server.wait_until(lambda: server.counts()["workers_busy"] == 0)
     before = server.counts()["chunks_computed"]
     answer = server.client.get("/api/cutoff?spins=5000&points=2001&from=1&to=3&levels=40")
     assert answer.status_code == 422

@@ -80,6 +80,7 @@ def mount() -> Iterator[Mount]:
         subprocess.run(["umount", "-l", str(place)], check=True)
 
 
+@pytest.mark.soak
 @pytest.mark.slow
 @pytest.mark.timeout(900)
 def test_twenty_kills_while_writing_lose_nothing_that_was_stored(start_server: ServerFactory) -> None:
@@ -135,6 +136,7 @@ def test_a_full_disk_at_work(start_server: ServerFactory, tmp_path: Path, mount:
     server.stop()
 
 
+@pytest.mark.soak
 @pytest.mark.slow
 def test_files_that_may_not_grow(start_server: ServerFactory) -> None:
     """The same for those who cannot mount: a limit on the size of files, set while the server runs."""
@@ -175,6 +177,7 @@ def test_a_read_only_data_directory(start_server: ServerFactory, tmp_path: Path,
     check_passing(start_server("--workers", "1"), "nothing can be written to")
 
 
+@pytest.mark.soak
 @pytest.mark.slow
 def test_a_disk_that_is_full_from_the_start(
     start_server: ServerFactory, tmp_path: Path, mount: Mount
@@ -203,6 +206,7 @@ def test_a_store_that_is_no_database(start_server: ServerFactory, tmp_path: Path
     assert (tmp_path / "data" / DATABASE).read_bytes() == spoilt
 
 
+@pytest.mark.soak
 @pytest.mark.slow
 def test_a_store_damaged_inside(start_server: ServerFactory) -> None:
     sheets = [f"/api/sweep?spins={spins}&points=41" for spins in (1, 2, 3)]
@@ -228,6 +232,7 @@ def test_a_store_damaged_inside(start_server: ServerFactory) -> None:
     assert second.client.get("/health").status_code == 200
 
 
+@pytest.mark.soak
 def test_damaged_chunks_are_computed_and_kept_anew(start_server: ServerFactory) -> None:
     sheet = "/api/sweep?spins=2&points=21"
     first = start_server("--workers", "1")
@@ -248,6 +253,7 @@ def test_damaged_chunks_are_computed_and_kept_anew(start_server: ServerFactory) 
     assert third.counts()["chunks_found"] == total
 
 
+@pytest.mark.soak
 def test_a_stop_in_the_middle_keeps_what_is_finished(start_server: ServerFactory) -> None:
     sheet = {"spins": 40, "points": 1001, "to": 1.5}
     server = start_server("--workers", "2")
@@ -297,6 +303,7 @@ def test_leases_do_not_follow_the_clock_on_the_wall(monkeypatch: pytest.MonkeyPa
     assert not job.renew(lease, 60.0)
 
 
+@pytest.mark.soak
 def test_the_lock_of_a_killed_server_is_free(start_server: ServerFactory) -> None:
     server = start_server("--workers", "1")
     refused = ended("--data", str(server.data))

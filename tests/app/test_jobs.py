@@ -325,6 +325,7 @@ def test_small_sheets_do_not_wait_for_large_ones(start_server: ServerFactory) ->
     assert facts_of(server, large["id"])["state"] == "running"
 
 
+@pytest.mark.soak
 def test_a_long_sheet_goes_on_while_small_ones_keep_coming(start_server: ServerFactory) -> None:
     server = start_server("--workers", "1")
     large = start(server, LONG | {"spins": 200})
@@ -337,6 +338,7 @@ def test_a_long_sheet_goes_on_while_small_ones_keep_coming(start_server: ServerF
     assert facts_of(server, large["id"])["done"] > before
 
 
+@pytest.mark.soak
 def test_clients_share_the_processors(start_server: ServerFactory) -> None:
     """Two clients by address: one with a single long sheet, one with three."""
     server = start_server("--workers", "1")

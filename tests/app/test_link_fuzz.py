@@ -180,6 +180,7 @@ def test_questions(read: Reader, known: list[str]) -> None:
     assert taken > EXAMPLES // 100, known
 
 
+@pytest.mark.soak
 @pytest.mark.slow
 @BY_READER
 def test_many_questions(read: Reader, known: list[str]) -> None:

@@ -10,6 +10,7 @@ REQUESTS = 150
 MOST_GROWTH = 120e6
 
 
+@pytest.mark.soak
 @pytest.mark.slow
 def test_a_crowd_meets_no_errors(start_server: ServerFactory) -> None:
     server = start_server("--workers", "2")

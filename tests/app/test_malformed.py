@@ -139,7 +139,7 @@ BODIES: list[tuple[str, str | None, str]] = [
     ('{"v": true}', "v", "unknown-version"),
     ('{"link": 5}', "link", "wrong-type"),
     ('{"link": "/sweep?spin=5"}', "spin", "unknown-key"),
-    ('{"link": "/map?spins=5"}', "link", "unknown-page"),
+    ('{"link": "/chart?spins=5"}', "link", "unknown-page"),
     ('{"link": "/sweep?stored=' + "0" * 32 + '"}', "stored", "unknown-link"),
     ('{"link": "/sweep", "spins": 3}', "link", "unknown-key"),
     ("[]", "body", "bad-json"),

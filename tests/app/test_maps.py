@@ -212,6 +212,7 @@ def test_opening_a_map_computes_nothing(server: RunningServer) -> None:
 
 
 def test_too_expensive_is_refused_before_anything_runs(server: RunningServer) -> None:
+    server.wait_until(lambda: server.counts()["workers_busy"] == 0)
     before = server.counts()["chunks_computed"]
     answer = server.client.get("/api/map?spins=5000&to=3&points=200&rows=200&every=all")
     assert answer.status_code == 422
@@ -294,6 +295,7 @@ def test_adaptive_and_all_agree(server: RunningServer) -> None:
         )
 
 
+@pytest.mark.soak
 @pytest.mark.slow
 def test_superradiant_phase_diagram_with_a_third_of_the_cells(server: RunningServer) -> None:
     found, full = (answer_of(server, query) for query in ("spins=20", "spins=20&every=all"))
@@ -416,6 +418,7 @@ def test_arrays_from_the_command_line(server: RunningServer, tmp_path: Path) -> 
     assert compute("/sweep?spins=2&points=3", tmp_path / "y.npz").returncode == 2
 
 
+@pytest.mark.soak
 def test_a_restart_in_the_middle_changes_nothing(start_server: ServerFactory, server: RunningServer) -> None:
     query = "spins=20&points=25&rows=25"
     whole = answer_of(server, query)

@@ -96,6 +96,7 @@ def poor(tmp_path_factory: pytest.TempPathFactory) -> Iterator[RunningServer]:
     running.stop()
 
 
+@pytest.mark.soak
 @pytest.mark.slow
 def test_no_request_brings_the_server_down(poor: RunningServer) -> None:
     schema = schemathesis.openapi.from_url(f"{poor.address}/api/openapi.json")

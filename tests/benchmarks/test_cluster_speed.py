@@ -19,6 +19,7 @@ from app.workers import Outcome, ProcessPool, Task
 from tests.cluster import Cluster
 
 pytestmark = [
+    pytest.mark.soak,
     pytest.mark.timeout(900),
     pytest.mark.slow,
     pytest.mark.skipif(

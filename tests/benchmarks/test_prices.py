@@ -4,7 +4,7 @@ import pytest
 
 from tests.benchmarks.price_requests import affordable_sheets, machine, share_within, spent_on
 
-pytestmark = pytest.mark.slow
+pytestmark = [pytest.mark.slow, pytest.mark.soak]
 
 ENOUGH = 0.9
 

@@ -162,6 +162,7 @@ def test_a_box_opens_the_zoomed_map_in_one_step_of_history(visit: VisitFactory) 
     assert one.loads == 1
 
 
+@pytest.mark.soak
 def test_other_quantities_are_drawn_without_computing(visit: VisitFactory, server: RunningServer) -> None:
     one = visit()
     page = opened(one)
