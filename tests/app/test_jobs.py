@@ -201,7 +201,7 @@ def test_a_point_that_takes_long_is_cut_off(start_server: ServerFactory) -> None
 
 def test_cancelled_work_goes_on_where_it_was(start_server: ServerFactory) -> None:
     server = start_server()
-    sheet = {"spins": 30, "points": 300, "to": 1.5}
+    sheet = {"spins": 20, "points": 150, "to": 1.2}
     job = start(server, sheet)
     server.wait_until(lambda: facts_of(server, job["id"])["done"] >= 8)
     server.client.delete(f"/api/jobs/{job['id']}?for=everyone")
@@ -227,7 +227,7 @@ def test_jobs_nobody_holds_are_dropped(start_server: ServerFactory) -> None:
 
 
 def test_killed_workers_lose_nothing(start_server: ServerFactory) -> None:
-    sheet = {"spins": 30, "points": 150, "to": 1.5}
+    sheet = {"spins": 20, "points": 120, "to": 1.2}
     calm = start_server(data="calm")
     expected = finish(calm, start(calm, sheet)["id"])
     server = start_server(data="stormy")
@@ -270,7 +270,7 @@ def test_what_kills_workers_twice_is_refused(start_server: ServerFactory) -> Non
 
 @pytest.mark.parametrize("sign", [signal.SIGKILL, signal.SIGTERM])
 def test_a_restart_resumes_from_finished_chunks(start_server: ServerFactory, sign: int) -> None:
-    sheet = {"spins": 30, "points": 300, "to": 1.5}
+    sheet = {"spins": 20, "points": 150, "to": 1.2}
     first = start_server("--workers", "1")
     job = start(first, sheet)
     first.wait_until(lambda: first.counts()["chunks_computed"] >= 3)
@@ -293,7 +293,7 @@ def test_a_restart_resumes_from_finished_chunks(start_server: ServerFactory, sig
     result = finish(second, job["id"])
     counts = second.counts()
     assert counts["chunks_found"] >= 2
-    assert 0 < counts["points_computed"] < 300
+    assert 0 < counts["points_computed"] < 150
     calm = start_server("--workers", "2", data="calm")
     assert numbers(result) == numbers(finish(calm, start(calm, sheet)["id"]))
     # a third time everything is there
