@@ -131,6 +131,7 @@ def test_differences_are_named() -> None:
     assert "numpy none instead of 2.0" in (difference(wanted, {}) or "")
 
 
+@pytest.mark.soak
 @pytest.mark.slow
 @needs_dask
 def test_a_lost_worker_loses_nothing(start_server: ServerFactory, cluster: Cluster) -> None:

@@ -76,6 +76,20 @@ def _knob_moves(server: RunningServer, moves: int = 20) -> list[float]:
     return taken
 
 
+def _maps_and_cutoffs(server: RunningServer) -> None:
+    """Print how long maps of 61 x 61 cells and a cutoff question for N = 100 take."""
+    for spins in (20, 100):
+        for every in ("adaptive", "all"):
+            link = f"/map?spins={spins}&every={every}"
+            began = time.perf_counter()
+            job = server.client.post("/api/jobs?first=5", json={"link": link}).json()
+            first = time.perf_counter() - began
+            rest = _complete(server, link)[0]
+            print(f"{link}: first cells {first:.2f} s, complete {first + rest:.1f} s, {job['total']} cells")
+    for link in ("/cutoff?spins=100", "/cutoff?spins=100&stated=40"):
+        print(f"{link}: {_complete(server, link)[0]:.2f} s")
+
+
 def main() -> None:
     """Print what a user would wait for, on this machine."""
     with tempfile.TemporaryDirectory() as place:
@@ -101,6 +115,7 @@ def main() -> None:
             print(
                 f"N = 1000, 201 points to three times critical: {seconds:.1f} s, {reports} progress reports"
             )
+            _maps_and_cutoffs(server)
             print(json.dumps({"processors": os.cpu_count()}))
         finally:
             server.stop()

@@ -44,7 +44,7 @@ def opened(one: Visit) -> Page:
 def sweep(one: Visit) -> None:
     page = one.open("/sweep?spins=4&points=21&at=0.3&title=A+title&note=A+note")
     page.locator("#strip").wait_for(state="visible")
-    for summary in page.locator("details > summary").all():
+    for summary in page.locator("details > summary:visible").all():
         summary.click()
 
 
@@ -62,7 +62,7 @@ def point(one: Visit) -> None:
 
 def cutoff(one: Visit) -> None:
     page = one.open("/cutoff?spins=2&points=5&stated=12")
-    for summary in page.locator("details > summary").all():
+    for summary in page.locator("details > summary:visible").all():
         summary.click()
 
 
