@@ -193,7 +193,7 @@ def test_a_point_that_takes_long_is_cut_off(start_server: ServerFactory) -> None
     server.client.delete(f"/api/jobs/{job['id']}?for=everyone")
     asked = time.monotonic()
     server.wait_until(lambda: server.counts()["workers_busy"] == 0, 5.0)
-    assert time.monotonic() - asked < 2.0  # half a second of patience, and a machine that does other things
+    assert time.monotonic() - asked < 1.0
     server.wait_until(lambda: len(server.worker_pids()) == 2 and not set(before) & set(server.worker_pids()))
     assert server.counts()["workers_lost"] == 0
     assert server.client.get("/api/sweep?spins=3&points=5").status_code == 200
